@@ -1,0 +1,1 @@
+"""Reduced stochastic models, and the evidence for or against them."""

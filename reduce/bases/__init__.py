@@ -1,0 +1,1 @@
+"""Bases: ways to choose the resolved subspace."""

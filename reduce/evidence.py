@@ -1,0 +1,127 @@
+"""What a report is written from: the files of a study, read once."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from eddyshed.solver.oceans.barotropic import Barotropic
+from eddyshed.solver.record import TruthRecord
+from eddyshed.solver.truth import build_ocean
+
+from .benchmark import Summary
+from .estimate import Estimate
+from .noise import NoiseFit
+from .simulated import load
+from .split import Split
+from .stages import read_noise, read_split, simulation_stamp
+from .store import read_json
+from .study import Study
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Evidence:
+    """The results of a study.
+
+    Attributes
+    ----------
+    study : Study
+        The study.
+    ocean : Barotropic
+        The model that made the truth.
+    record : TruthRecord
+        The truth.
+    split : Split
+        The truth divided.
+    noise : NoiseFit
+        The fitted noise.
+    findings : list of dict
+        Those of the audit, as `eddyshed.reduce.audit.Finding`.
+    truth : Summary
+        Statistics of the resolved modes of the truth.
+    truth_cost : float
+        Its processor time over model time.
+    closures : list of dict
+        As the benchmark wrote them.
+    lags : ndarray, shape (lag,)
+        Lags of the correlation functions [s].
+    correlations : dict of str to ndarray, shape (lag, mode)
+        Of the truth, and of each closure that has scores.
+    """
+
+    study: Study
+    ocean: Barotropic
+    record: TruthRecord
+    split: Split
+    noise: NoiseFit
+    findings: list[dict[str, Any]]
+    truth: Summary
+    truth_cost: float
+    closures: list[dict[str, Any]]
+    lags: np.ndarray
+    correlations: dict[str, np.ndarray]
+
+    @property
+    def length(self) -> float:
+        """Length of the truth [s]."""
+        return len(self.record.times) * self.record.step
+
+    @property
+    def scored(self) -> list[tuple[int, dict[str, Any]]]:
+        """Closures that have scores, each with its place among all."""
+        return [
+            (place, entry)
+            for place, entry in enumerate(self.closures)
+            if entry["summary"] is not None
+        ]
+
+    @property
+    def failed(self) -> list[dict[str, Any]]:
+        """Closures that have none."""
+        return [entry for entry in self.closures if entry["summary"] is None]
+
+    def simulated(self, name: str) -> np.ndarray | None:
+        """Series of a closure, shape (member, time, mode); None if not on disk."""
+        path = self.study.path(f"simulated/{name}.h5")
+        found = load(path, simulation_stamp(self.study, name))
+        return None if found is None else found[0]
+
+
+def gather(study: Study) -> Evidence:
+    """Read the results of a study.
+
+    Raises
+    ------
+    DataError
+        If a file is missing or damaged.
+    """
+    benchmark = read_json(study.path("benchmark.json"))
+    found = dict(benchmark["correlation"])
+    lags = np.array(found.pop("lags"))
+    return Evidence(
+        study=study,
+        ocean=build_ocean(study.config),
+        record=study.record(),
+        split=read_split(study),
+        noise=read_noise(study),
+        findings=read_json(study.path("audit.json"))["findings"],
+        truth=summary_of(benchmark["truth"]["summary"]),
+        truth_cost=benchmark["truth"]["cost"],
+        closures=benchmark["closures"],
+        lags=lags,
+        correlations={name: np.array(values) for name, values in found.items()},
+    )
+
+
+def estimate_of(table: dict[str, list]) -> Estimate:
+    """Estimate from JSON, where an infinite error became null."""
+    value = [np.nan if x is None else x for x in table["value"]]
+    error = [np.inf if x is None else x for x in table["error"]]
+    return Estimate(value, error)
+
+
+def summary_of(table: dict[str, dict[str, list]]) -> Summary:
+    """Summary from JSON."""
+    return Summary(**{name: estimate_of(part) for name, part in table.items()})

@@ -1,0 +1,259 @@
+"""Figures of the noise and of the reduced models; needs matplotlib.
+
+Each function returns a data URI for the page; see `eddyshed.reduce.canvas`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from .canvas import (
+    BAND,
+    DAY,
+    HUES,
+    TRUTH,
+    closure_style,
+    drawn,
+    in_math,
+    legend,
+    letter,
+    panels,
+)
+from .estimate import Estimate
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Correlation:
+    """Correlation functions that one panel shows.
+
+    Attributes
+    ----------
+    label : str
+        Name of the mode.
+    lags, truth : ndarray, shape (lag,)
+        Lags [s] and the correlation of the truth there.
+    error : float
+        Standard error of the truth's; infinite if unknown.
+    curves : mapping of int to (lags, values)
+        Those of models, by their place among the closures.
+    longest : float
+        End of the axis [s].
+    """
+
+    label: str
+    lags: np.ndarray
+    truth: np.ndarray
+    error: float
+    curves: Mapping[int, tuple[np.ndarray, np.ndarray]]
+    longest: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Distribution:
+    """Densities that one panel shows.
+
+    Attributes
+    ----------
+    label : str
+        Name of the mode.
+    edges : ndarray, shape (bin + 1,)
+        Bins [state unit].
+    truth : Estimate, shape (bin,)
+        Density of the truth.
+    curves : mapping of int to ndarray, shape (bin,)
+        Those of closures, by their place.
+    """
+
+    label: str
+    edges: np.ndarray
+    truth: Estimate
+    curves: Mapping[int, np.ndarray]
+
+
+def noise(
+    *,
+    shares: np.ndarray,
+    decay: Estimate,
+    frequency: Estimate,
+    marked: np.ndarray,
+    with_errors: int,
+) -> str:
+    """Decay time and frequency of the noise against share of variance.
+
+    Parameters
+    ----------
+    shares : ndarray, shape (unit,)
+        Share of the variance of the truth, largest first.
+    decay, frequency : Estimate, shape (unit,)
+        [s-1]
+    marked : ndarray of bool, shape (unit,)
+        Units whose rate stands uncorrected.
+    with_errors : int
+        The largest so many get error bars.
+    """
+    time = Estimate(1 / decay.value / DAY, decay.error / decay.value**2 / DAY)
+    turning = Estimate(frequency.value * DAY, frequency.error * DAY)
+
+    def draw(figure):
+        left, right = figure.subplots(1, 2)
+        for axes, shown, name in (
+            (left, time, "decay time [d]"),
+            (right, turning, f"frequency [rad {in_math('d-1')}]"),
+        ):
+            for chosen, marker, face in ((~marked, "o", "white"), (marked, "x", TRUTH)):
+                if chosen.any():
+                    axes.plot(
+                        100 * shares[chosen],
+                        shown.value[chosen],
+                        marker,
+                        color=TRUTH,
+                        markerfacecolor=face,
+                        markeredgewidth=0.7,
+                    )
+            top = slice(None, with_errors)
+            known = np.where(np.isfinite(shown.error[top]), shown.error[top], 0.0)
+            axes.errorbar(
+                100 * shares[top],
+                shown.value[top],
+                yerr=2 * known,
+                fmt="none",
+                ecolor=HUES[1],
+                elinewidth=1.0,
+                zorder=0,
+            )
+            axes.set(xscale="log", xlabel="share of the variance [%]", ylabel=name)
+        left.set(yscale="log", title="(a)")
+        right.set_title("(b)")
+        right.axhline(0, color=BAND, linewidth=0.6, zorder=0)
+
+    return drawn(2.9, draw)
+
+
+def noise_correlations(shown: Sequence[Correlation]) -> str:
+    """Correlation functions of unresolved modes, truth and fitted noise.
+
+    Parameters
+    ----------
+    shown : sequence of Correlation
+        The fit under the index 0.
+    """
+
+    def draw(figure):
+        axes = figure.subplots(1, len(shown), sharey=True, squeeze=False)[0]
+        for k, (ax, one) in enumerate(zip(axes, shown, strict=True)):
+            _band(ax, one)
+            ax.plot(
+                one.lags / DAY,
+                one.truth,
+                "o",
+                color=TRUTH,
+                markersize=2.8,
+                label="truth",
+            )
+            lags, values = one.curves[0]
+            ax.plot(lags / DAY, values, color=HUES[1], label="fitted noise")
+            ax.axhline(0, color=BAND, linewidth=0.6, zorder=0)
+            ax.set(title=f"{letter(k)} {one.label}", xlabel="lag [d]")
+            ax.set_xlim(0, one.longest / DAY)
+        axes[0].set_ylabel("correlation")
+        legend(figure, axes[0], 2)
+
+    return drawn(2.6, draw)
+
+
+def correlations(shown: Sequence[Correlation], names: Sequence[str]) -> str:
+    """Correlation functions of resolved modes, truth and closures.
+
+    Parameters
+    ----------
+    shown : sequence of Correlation
+        One for each panel.
+    names : sequence of str
+        All closures; curves refer to them by place.
+    """
+
+    def draw(figure):
+        axes = panels(figure, len(shown), 2)
+        for k, (ax, one) in enumerate(zip(axes, shown, strict=True)):
+            _band(ax, one)
+            ax.plot(one.lags / DAY, one.truth, color=TRUTH, label="truth", linewidth=1.5)
+            for index, (lags, values) in one.curves.items():
+                inside = lags <= one.longest
+                ax.plot(
+                    lags[inside] / DAY,
+                    values[inside],
+                    label=names[index],
+                    **closure_style(index, int(inside.sum())),
+                )
+            ax.axhline(0, color=BAND, linewidth=0.6, zorder=0)
+            ax.set(title=f"{letter(k)} {one.label}", xlabel="lag [d]")
+            ax.set_xlim(0, one.longest / DAY)
+            if k % 2 == 0:
+                ax.set_ylabel("correlation")
+        legend(figure, axes[0], 4)
+
+    rows = -(-len(shown) // 2)
+    return drawn(0.5 + 1.85 * rows, draw)
+
+
+def distributions(
+    shown: Sequence[Distribution], names: Sequence[str], unit: str
+) -> str:
+    """Marginal densities of resolved modes, truth and closures.
+
+    Parameters
+    ----------
+    shown : sequence of Distribution
+        One for each panel.
+    names : sequence of str
+        All closures; curves refer to them by place.
+    unit : str
+        Of the state.
+    """
+
+    def draw(figure):
+        axes = panels(figure, len(shown), 2)
+        for k, (ax, one) in enumerate(zip(axes, shown, strict=True)):
+            middle = (one.edges[1:] + one.edges[:-1]) / 2
+            if np.isfinite(one.truth.error).all():
+                ax.fill_between(
+                    middle,
+                    np.maximum(one.truth.value - 2 * one.truth.error, 0),
+                    one.truth.value + 2 * one.truth.error,
+                    color=BAND,
+                    linewidth=0,
+                )
+            ax.plot(middle, one.truth.value, color=TRUTH, label="truth", linewidth=1.5)
+            for index, values in one.curves.items():
+                ax.plot(
+                    middle,
+                    values,
+                    label=names[index],
+                    **closure_style(index, len(values)),
+                )
+            ax.set_ylim(bottom=0)
+            ax.set(
+                title=f"{letter(k)} {one.label}",
+                xlabel=f"amplitude [{in_math(unit)}]",
+            )
+            if k % 2 == 0:
+                ax.set_ylabel(f"density [({in_math(unit)})$^{{-1}}$]")
+        legend(figure, axes[0], 4)
+
+    rows = -(-len(shown) // 2)
+    return drawn(0.5 + 1.85 * rows, draw)
+
+
+def _band(axes, one):
+    """Two standard errors of the truth's correlation to either side."""
+    if np.isfinite(one.error):
+        axes.fill_between(
+            one.lags / DAY,
+            one.truth - 2 * one.error,
+            one.truth + 2 * one.error,
+            color=BAND,
+            linewidth=0,
+        )

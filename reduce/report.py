@@ -1,0 +1,299 @@
+"""The report of a study: a short note in one HTML file that needs nothing else.
+
+It says first what the study comes to, then shows what that rests on. The
+same files give the same bytes.
+"""
+
+from __future__ import annotations
+
+from importlib.metadata import version
+from pathlib import Path
+from types import ModuleType
+
+from eddyshed.solver.config import as_table, differing_keys, parse_config
+from eddyshed.solver.errors import ConfigError
+from eddyshed.solver.files import replacing
+from eddyshed.solver.quantities import format_quantity
+
+from .benchmark import SAMPLING
+from .evidence import Evidence, gather
+from .markup import Note, listed, number, page, paragraphs, section, text
+from .report_flow import flow, split
+from .report_models import models, noise
+from .settings import StudyConfig
+from .stages import STAGES
+from .study import Study, stamp
+
+OCEANS = {"barotropic": "one layer of quasi-geostrophic flow on a beta plane"}
+CAUTION = (
+    "This is a toy ocean in an invented setting, not a forecast of any place. Before "
+    "results like these inform a decision they need the judgement of a qualified "
+    "professional."
+)
+# A report without pictures is stale as soon as they can be drawn: its fingerprint
+# is never the one that is asked for.
+UNDRAWN = "-without-pictures"
+
+
+def write_report(study: Study, stamp: str) -> None:
+    """Write ``report.html`` into the run folder.
+
+    Parameters
+    ----------
+    study : Study
+        A study whose audit and benchmark are there.
+    stamp : str
+        Fingerprint that the report carries. A report without pictures, because
+        matplotlib is not installed, carries another.
+
+    Raises
+    ------
+    DataError
+        If a file of the study is missing or damaged.
+    RunFolderError
+        If the report cannot be written.
+    """
+    drawing = figures_module()
+    html = render(gather(study), stamp, drawing)
+    with replacing(study.path("report.html")) as temporary:
+        temporary.write_text(html, encoding="utf-8")
+
+
+def figures_module() -> ModuleType | None:
+    """Module that draws; None if matplotlib, which is an extra, is not installed."""
+    try:
+        import matplotlib  # noqa: F401 (only whether it can be)
+    except ImportError:
+        return None
+    from . import figures
+
+    return figures
+
+
+def render(evidence: Evidence, stamp: str, drawing: ModuleType | None) -> str:
+    """The report as HTML.
+
+    Parameters
+    ----------
+    evidence : Evidence
+        The results.
+    stamp : str
+        Its fingerprint.
+    drawing : module or None
+        What `figures_module` returned.
+
+    Returns
+    -------
+    str
+    """
+    config = evidence.study.config
+    title = config.title or config.name
+    note = Note(drawing=drawing)
+    body = [
+        f"<header>\n<h1>{text(title)}</h1>",
+        opening(evidence),
+        f'<p class="caution">{CAUTION}</p>\n</header>',
+        verdict(note, evidence),
+        audit(note, evidence),
+        flow(note, evidence),
+        split(note, evidence),
+        noise(note, evidence),
+        models(note, evidence),
+        reproduce(note, evidence),
+    ]
+    return page(
+        title=title,
+        stamp=stamp if drawing is not None else stamp + UNDRAWN,
+        generator=f"eddyshed {version('eddyshed')}",
+        body="\n".join(body),
+    )
+
+
+def opening(evidence: Evidence) -> str:
+    """What was done, in a paragraph."""
+    config, resolved = evidence.study.config, evidence.split.resolved
+    kind = as_table(config)["ocean"]["kind"]
+    times = evidence.truth.integral_time
+    slowest = int(times.value.argmax())
+    ratio = evidence.length / float(times.value[slowest])
+    known = number(
+        ratio, ratio * float(times.error[slowest]) / float(times.value[slowest])
+    )
+    sides = " by ".join(format_quantity(side, "m") for side in config.grid.lengths)
+    points = " × ".join(str(count) for count in config.grid.points)
+    return paragraphs(
+        f"A {text(kind)} ocean ({text(OCEANS.get(kind, kind))}), in a box of {sides} "
+        f"that repeats in both directions, on {points} grid points, was run for "
+        f"{format_quantity(evidence.length, 's')} after a spin-up of "
+        f"{format_quantity(config.time.spin_up, 's')}: {known} correlation times of "
+        f"its slowest resolved mode, {text(resolved.labels[slowest])}. Of its "
+        f"{evidence.record.size} coordinates {resolved.n_modes} were kept, and "
+        f"{len(evidence.closures)} reduced models, which stand in for the rest in "
+        "one way or another (closures), were scored against that run, here called "
+        "the truth."
+    )
+
+
+def verdict(note: Note, evidence: Evidence) -> str:
+    """What the closures come to."""
+    settings = evidence.study.config.benchmark
+    groups = []
+    for entry in evidence.closures:
+        found = entry["verdict"]
+        count = found["count"]
+        groups.append(
+            [
+                [
+                    f"<code>{text(entry['name'])}</code>",
+                    f"<strong>{text(found['word'])}</strong>",
+                    f"{found['within_sampling']} of {count}" if count else "–",
+                    f"{found['within_tolerance']} of {count}" if count else "–",
+                    f"{evidence.truth_cost / entry['cost']:.2g} ×",
+                ],
+                f"<p>{text(_sentence(entry['what']))}</p>"
+                f"<p>{text(_sentence(found['reason']))}</p>",
+            ]
+        )
+    return section(
+        "What the reduced models are worth",
+        note.table(
+            ["closure", "verdict", "within sampling error", "within tolerance", "speed"],
+            groups,
+            words=(0, 1),
+            caption="Closures against the truth. Scores that pass each of two "
+            "statements, which are explained below. Speed: processor time of the "
+            "truth over that of one member of the model, for equal model time, as "
+            "timed once on the machine that ran both.",
+        ),
+        paragraphs(
+            "Each model is compared with the truth in the mean, the variance, the "
+            "integral time and the distribution of every resolved mode. Two "
+            "statements are made of each comparison, and neither implies the other."
+        ),
+        "<dl>\n<dt>Within sampling error</dt>\n<dd>The difference is no larger than "
+        "two finite records leave open: below "
+        f"{SAMPLING:g} standard errors, or for a distribution a "
+        "Kolmogorov–Smirnov probability above 0.05. It says whether a difference was "
+        "seen, not whether it matters. With a truth long enough every approximation "
+        "fails here; with a short one anything passes.</dd>\n"
+        "<dt>Within tolerance</dt>\n<dd>The difference is small enough for use, by "
+        "bounds that were set in the config before the models were run: "
+        f"{settings.mean_tolerance:g} standard deviations for the mean, "
+        f"{settings.variance_tolerance:g} in the logarithm of the variance, "
+        f"{settings.time_tolerance:g} in that of the integral time, and "
+        f"{settings.distribution_tolerance:g} standard deviations of Wasserstein "
+        "distance for the distribution. It does not say how well the difference is "
+        "known.</dd>\n</dl>",
+        paragraphs(
+            "<em>Indistinguishable</em> is a closure with nine scores in ten within "
+            "sampling error and none far outside it (Holm 1979, Scand. J. Statist. "
+            "6:65); <em>close</em> one whose means, variances and distributions all "
+            "lie within tolerance, whatever its integral times; <em>off</em> any "
+            "other; <em>failed</em> one that blew up or came to rest."
+        ),
+    )
+
+
+def audit(note: Note, evidence: Evidence) -> str:
+    """What the assumptions come to."""
+    groups = []
+    for finding in evidence.findings:
+        words = [
+            f"{finding['assumption']} Measured: {finding['statistic']}. Leaning on "
+            f"it: {listed(finding['closures'])}."
+        ]
+        if finding["verdict"] == "fails":
+            words.append(_sentence(f"It fails, so {finding['meaning']}"))
+        elif finding["verdict"] == "undecided":
+            words.append(
+                f"The error bar crosses the threshold; {finding['settle']} would "
+                f"settle it. If it fails: {finding['meaning']}."
+            )
+        groups.append(
+            [
+                [
+                    text(finding["name"]),
+                    f"<strong>{text(finding['verdict'])}</strong>",
+                    number(finding["value"], finding["error"]),
+                    f"{text(finding['sense'])} {finding['threshold']:g}",
+                    text(finding["where"]),
+                ],
+                "".join(f"<p>{text(part)}</p>" for part in words),
+            ]
+        )
+    return section(
+        "What they assume, tested",
+        note.table(
+            ["assumption", "verdict", "value", "threshold", "worst mode"],
+            groups,
+            words=(0, 1, 4),
+            caption="Assumptions of the closures, measured on the truth, in the mode "
+            "that is placed worst. A verdict needs the whole 95 % interval, 1.96 "
+            "standard errors to either side, on one side of the threshold. The "
+            "thresholds are those of the config: experience, not theorems.",
+        ),
+    )
+
+
+def reproduce(note: Note, evidence: Evidence) -> str:
+    """How to get the same again, and where the numbers are."""
+    study = evidence.study
+    config, document = study.config, study.document
+    files = (
+        ("truth/member-000.h5", "truth", "the truth, every recorded state"),
+        ("split.h5", "reduce", "resolved and unresolved modes, resolved series"),
+        ("closures.h5", "reduce", "projected equation, noise, reduced models"),
+        ("audit.json", "audit", "assumptions, mode by mode"),
+        ("benchmark.json", "benchmark", "scores, mode by mode; correlations"),
+        ("simulated/", "", "series of the reduced models"),
+    )
+    rows = [
+        [
+            f"<code>{name}</code>",
+            what,
+            f"<code>{stamp(study, STAGES, stage)}</code>" if stage else "in each file",
+        ]
+        for name, stage, what in files
+    ]
+    return section(
+        "How to get the same again",
+        paragraphs(
+            f"Made by eddyshed {text(version('eddyshed'))} from the config below, "
+            f"which lies beside this report as <code>config.toml</code>, with "
+            f"<code>eddyshed study {text(Path(document.source).name)}</code>. Every "
+            f"random stream is drawn from seed {config.seed}, each under a name and "
+            "a member of its own."
+        ),
+        _overrides(evidence),
+        note.table(
+            ["file", "holds", "fingerprint"],
+            [rows],
+            words=(0, 1),
+            caption="Where the numbers are, in the folder of this report. A "
+            "fingerprint tells the settings and inputs that a file was made from.",
+        ),
+        f"<pre><code>{text(document.text.rstrip())}</code></pre>",
+    )
+
+
+def _overrides(evidence: Evidence) -> str:
+    """Keys in which the config differs from its text, if there are any."""
+    document = evidence.study.document
+    try:
+        written = parse_config(document.text, StudyConfig, document.source).config
+    except ConfigError:
+        lines = ["the text alone is not a whole config"]
+    else:
+        lines = differing_keys(as_table(written), as_table(document.config))
+    if not lines:
+        return ""
+    items = "".join(f"<li><code>{text(line)}</code></li>" for line in lines)
+    return (
+        "<p>Keys that the command line overrode with <code>--set</code>, in SI "
+        f"units:</p>\n<ul>{items}</ul>"
+    )
+
+
+def _sentence(words: str) -> str:
+    """Begin with a capital and end with a full stop."""
+    return f"{words[:1].upper()}{words[1:].rstrip('.')}."

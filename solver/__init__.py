@@ -1,0 +1,1 @@
+"""Truth runs of simplified oceans."""

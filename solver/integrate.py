@@ -1,0 +1,85 @@
+"""The loop: a generator that advances a state and stops when it goes wrong."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+
+import numpy as np
+
+from .errors import Blowup
+from .stepping import IntegratingFactorRK4
+
+CHECK_EVERY = 50  # steps; costs under a percent of a step and loses little work
+
+
+def integrate(
+    stepper: IntegratingFactorRK4,
+    modes: np.ndarray,
+    *,
+    first_step: int,
+    last_step: int,
+    energy_bound: float,
+    stir: Callable[[np.ndarray], None] | None = None,
+) -> Iterator[int]:
+    """Advance a state step by step.
+
+    Parameters
+    ----------
+    stepper : IntegratingFactorRK4
+        The scheme, its step included.
+    modes : ndarray of complex, shape (n_modes,)
+        The state at `first_step`; changed in place.
+    first_step, last_step : int
+        Steps counted from the start of the run, whose time is zero.
+    energy_bound : float
+        Energy [m2 s-2] beyond which the run counts as blown up.
+    stir : callable, optional
+        Called with the state after each step to add a random increment.
+
+    Yields
+    ------
+    int
+        The number of the step that was just completed.
+
+    Raises
+    ------
+    Blowup
+        If the state is not finite or its energy exceeds the bound; looked at
+        every 50 steps.
+    """
+    for step in range(first_step + 1, last_step + 1):
+        # Time is a product, not a running sum: a resumed run sees the same bits.
+        stepper.advance((step - 1) * stepper.step, modes)
+        if stir is not None:
+            stir(modes)
+        if step % CHECK_EVERY == 0 or step == last_step:
+            guard(modes, step, stepper.step, energy_bound)
+        yield step
+
+
+def guard(modes: np.ndarray, step: int, interval: float, energy_bound: float) -> None:
+    """Stop a run whose state has left the finite numbers or its energy bound.
+
+    Parameters
+    ----------
+    modes : ndarray of complex, shape (n_modes,)
+        The state.
+    step : int
+        Its step.
+    interval : float
+        Time step [s].
+    energy_bound : float
+        Largest energy allowed [m2 s-2].
+
+    Raises
+    ------
+    Blowup
+        If that is so.
+    """
+    energy = np.vdot(modes, modes).real / 2
+    if energy <= energy_bound:  # false for NaN as well
+        return
+    what = f"truth run blew up: energy {energy:.4g} m2 s-2"
+    if np.isfinite(energy):
+        what += f", above the bound {energy_bound:.4g} m2 s-2,"
+    raise Blowup(what, step, step * interval, "")

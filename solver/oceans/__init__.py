@@ -1,0 +1,1 @@
+"""Oceans: each gives F, A and B of one flow."""

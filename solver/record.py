@@ -1,0 +1,133 @@
+"""Reading a truth run back, a stretch at a time."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+
+from .errors import DataError
+from .files import open_file
+
+CHUNK_BYTES = 64_000_000
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TruthRecord:
+    """The record of one truth run.
+
+    Attributes
+    ----------
+    path : Path
+        The index file.
+    times : ndarray, shape (n_time,)
+        Model time of each full state [s].
+    step : float
+        Interval between full states [s].
+    size : int
+        Number of coordinates.
+    complete : bool
+        Whether the run has reached its end.
+    steps_done, steps_total : int
+        How far it got.
+    config : dict
+        The truth part of the config that made it, in SI.
+    resolved_times : ndarray, shape (n_fine,)
+        Times of the fine stream [s]; empty if there is none.
+    resolved_coordinates : ndarray of int, shape (n_low,)
+        Which coordinates the fine stream holds.
+    """
+
+    path: Path
+    times: np.ndarray
+    step: float
+    size: int
+    complete: bool
+    steps_done: int
+    steps_total: int
+    config: dict
+    resolved_times: np.ndarray
+    resolved_coordinates: np.ndarray
+
+    def read(self, start: int, stop: int) -> np.ndarray:
+        """Full states of records start to stop, shape (stop - start, size)."""
+        with open_file(self.path, kind="truth") as file:
+            return file["state"][start:stop]
+
+    def chunks(self) -> Iterator[tuple[slice, np.ndarray]]:
+        """Walk through all full states in stretches of at most 64 MB.
+
+        Yields
+        ------
+        slice
+            Which records.
+        ndarray, shape (n, size)
+            Their states.
+        """
+        rows = max(1, CHUNK_BYTES // (8 * self.size))
+        with open_file(self.path, kind="truth") as file:
+            for start in range(0, len(self.times), rows):
+                where = slice(start, min(start + rows, len(self.times)))
+                yield where, file["state"][where]
+
+    def read_resolved(self) -> np.ndarray:
+        """Return the fine stream, shape (n_fine, n_low)."""
+        with open_file(self.path, kind="truth") as file:
+            return file["resolved"][:]
+
+    def read_budget(self) -> dict[str, np.ndarray]:
+        """Energy, enstrophy and the terms of the energy budget, each (n_time,)."""
+        names = ("energy", "enstrophy", "work", "dissipation")
+        with open_file(self.path, kind="truth") as file:
+            return {name: file[name][:] for name in names}
+
+
+def open_record(path: Path) -> TruthRecord:
+    """Open the record of a truth run.
+
+    Parameters
+    ----------
+    path : Path
+        The index file, ``truth/member-000.h5`` of a run folder.
+
+    Raises
+    ------
+    DataError
+        If it is missing, damaged, not a truth run, or holds under two states.
+    """
+    with open_file(path, kind="truth") as file:
+        times = file["time"][:]
+        if len(times) < 2:
+            message = f"{path}: holds {len(times)} states; at least two are needed"
+            raise DataError(message)
+        sources = file["state"].virtual_sources()
+        missing = [
+            source.file_name
+            for source in sources
+            if not (path.parent / source.file_name).is_file()
+        ]
+        if missing:
+            # HDF5 would fill the gap with NaN and say nothing.
+            message = (
+                f"{path}: lacks its part {missing[0]} ({len(missing)} missing); "
+                "keep the folder beside the file, or run the truth again"
+            )
+            raise DataError(message)
+        fine = "resolved_time" in file
+        return TruthRecord(
+            path=path,
+            times=times,
+            step=float(times[1] - times[0]),
+            size=file["state"].shape[1],
+            complete=bool(file.attrs["complete"]),
+            steps_done=int(file.attrs["steps_done"]),
+            steps_total=int(file.attrs["steps_total"]),
+            config=json.loads(file.attrs["config_json"]),
+            resolved_times=file["resolved_time"][:] if fine else np.empty(0),
+            resolved_coordinates=(
+                file["resolved_coordinate"][:] if fine else np.empty(0, dtype=int)
+            ),
+        )

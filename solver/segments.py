@@ -1,0 +1,240 @@
+"""The files of a truth run: segments with their checkpoints, and the index.
+
+A segment is one file that holds the records of a stretch of the run *and* the
+checkpoint at its end, and it appears in the folder in one atomic move:
+whatever kills the run, records and checkpoint agree, nothing is doubled and
+nothing acknowledged is lost. The index beside the folder is a small file of
+virtual datasets that shows all segments as one series; it is what readers
+open, also while the run goes on.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+
+import h5py
+import numpy as np
+
+from .config import differing_keys
+from .errors import RunFolderError
+from .files import add_time, add_variable, new_file, open_file
+from .oceans.barotropic import Barotropic
+from .settings import OutputSettings
+from .streams import Recorder, Stream, add_axes
+
+
+def member_paths(folder: Path, member: int) -> tuple[Path, Path]:
+    """Index file and segment folder of a member."""
+    name = f"member-{member:03d}"
+    return folder / f"{name}.h5", folder / name
+
+
+def reached_step(folder: Path, member: int) -> int:
+    """Step of a member's last checkpoint; zero if there is none."""
+    paths = _segments(member_paths(folder, member)[1])
+    return _step_of(paths[-1]) if paths else 0
+
+
+class MemberFiles:
+    """The files of one member: reads its checkpoint, adds segments.
+
+    Parameters
+    ----------
+    folder : Path
+        The study's truth folder.
+    member : int
+        Which member.
+    streams : sequence of Stream
+        What is recorded.
+    output : OutputSettings
+        The axes of the streams.
+    ocean : Barotropic
+        Names the coordinates.
+    table : mapping
+        The config of the run, in SI.
+    title : str
+        Name of the study.
+    total : int
+        Steps in all.
+    """
+
+    def __init__(
+        self,
+        folder: Path,
+        member: int,
+        *,
+        streams: Sequence[Stream],
+        output: OutputSettings,
+        ocean: Barotropic,
+        table: Mapping[str, object],
+        title: str,
+        total: int,
+    ):
+        self.index, self.folder = member_paths(folder, member)
+        self._streams, self._output, self._ocean = streams, output, ocean
+        self._table, self._title, self._total = table, title, total
+        self._attributes = {
+            "config_json": json.dumps(table),
+            "member": member,
+            "steps_total": total,
+        }
+        # Times of the segments seen so far: each is opened for them once, so a
+        # long run does not slow down.
+        self._times: dict[Path, dict[str, np.ndarray]] = {}
+
+    @property
+    def last(self) -> Path | None:
+        """The newest segment, which holds the last checkpoint."""
+        paths = _segments(self.folder)
+        return paths[-1] if paths else None
+
+    def restore(self, modes: np.ndarray, rng: np.random.Generator) -> int:
+        """Load the last checkpoint, if there is one, in place.
+
+        Parameters
+        ----------
+        modes : ndarray of complex, shape (n_modes,)
+            Gets the state.
+        rng : numpy.random.Generator
+            Gets the state of the stirring's stream.
+
+        Returns
+        -------
+        int
+            The step of the checkpoint; zero if there is none, and the
+            arguments are as they were.
+
+        Raises
+        ------
+        RunFolderError
+            If another config made the folder; names the keys that differ.
+        DataError
+            If the newest segment is damaged.
+        """
+        if self.last is None:
+            return 0
+        with open_file(self.last, kind="truth segment") as file:
+            self._check_config(json.loads(file.attrs["config_json"]))
+            group = file["checkpoint"]
+            modes.view(float)[:] = group["modes"][:]
+            rng.bit_generator.state = json.loads(group.attrs["stirring_stream"])
+            return int(group.attrs["step"])
+
+    def _check_config(self, made: dict) -> None:
+        """Refuse a folder that another config made, unless only the end moved."""
+        now = dict(self._table)
+        now["time"] = {**now["time"], "duration": made["time"]["duration"]}
+        keys = differing_keys(made, now)
+        if keys:
+            message = (
+                f"{self.folder}: made by another config ({'; '.join(keys)}). Give "
+                "this study another name, point --runs elsewhere, or remove the folder"
+            )
+            raise RunFolderError(message)
+
+    def add(
+        self,
+        step: int,
+        recorder: Recorder,
+        modes: np.ndarray,
+        rng: np.random.Generator,
+    ) -> None:
+        """Write a segment: the records so far, and a checkpoint.
+
+        Parameters
+        ----------
+        step : int
+            The step that was just completed.
+        recorder : Recorder
+            Holds the records; emptied.
+        modes : ndarray of complex, shape (n_modes,)
+            The state.
+        rng : numpy.random.Generator
+            The stirring's stream.
+
+        Raises
+        ------
+        RunFolderError
+            If it cannot be written. What was there before is untouched.
+        """
+        path = self.folder / f"segment-{step:012d}.h5"
+        with new_file(
+            path,
+            kind="truth segment",
+            title=f"{self._title}: truth, part",
+            attributes=self._attributes,
+        ) as file:
+            add_axes(file, self._output, self._ocean)
+            recorder.write(file)
+            group = file.create_group("checkpoint", track_order=True)
+            group.create_dataset("modes", data=modes.view(float))
+            group.attrs["step"] = step
+            # Its integers have 128 bits, more than an HDF5 integer holds.
+            group.attrs["stirring_stream"] = json.dumps(rng.bit_generator.state)
+        recorder.clear()
+        self.write_index()
+
+    def write_index(self) -> None:
+        """Present all segments as one series of virtual datasets."""
+        for path in _segments(self.folder):
+            if path not in self._times:
+                with open_file(path, kind="truth segment") as file:
+                    self._times[path] = {s.time: file[s.time][:] for s in self._streams}
+        parts = sorted(self._times.items())
+        if not any(len(times["time"]) for _, times in parts):
+            return  # still in the spin-up: nothing to show
+        step = _step_of(parts[-1][0])
+        with new_file(
+            self.index,
+            kind="truth",
+            title=f"{self._title}: truth",
+            attributes={
+                **self._attributes,
+                "steps_done": step,
+                "complete": int(step == self._total),
+            },
+        ) as file:
+            add_axes(file, self._output, self._ocean)
+            for stream in self._streams:
+                _add_series(file, stream, self.folder.name, parts)
+
+
+def _segments(folder):
+    """Segments of a folder in the order of their steps."""
+    return sorted(folder.glob("segment-*.h5"))
+
+
+def _step_of(segment):
+    """Step at the end of a segment, from its name."""
+    return int(segment.stem.removeprefix("segment-"))
+
+
+def _add_series(file, stream, folder, parts):
+    """Add one stream of all segments to the index."""
+    times = [known[stream.time] for _, known in parts]
+    lengths = [len(part) for part in times]
+    add_time(file, stream.time, np.concatenate(times))
+    for name, variable in stream.variables.items():
+        layout = h5py.VirtualLayout(
+            shape=(sum(lengths), *variable.shape), dtype=variable.dtype
+        )
+        start = 0
+        for (path, _), length in zip(parts, lengths, strict=True):
+            if length:
+                layout[start : start + length] = h5py.VirtualSource(
+                    f"{folder}/{path.name}",
+                    name,
+                    shape=(length, *variable.shape),
+                    dtype=variable.dtype,
+                )
+            start += length
+        add_variable(
+            file,
+            name,
+            (stream.time, *variable.dimensions),
+            layout,
+            units=variable.units,
+            long_name=variable.long_name,
+        )

@@ -1,0 +1,177 @@
+"""The config sections that say what truth to make."""
+
+from __future__ import annotations
+
+import math
+import re
+from dataclasses import dataclass
+
+from .config import setting
+from .forcing import Stirring, Wave
+from .oceans.barotropic import BarotropicSettings
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class GridSettings:
+    """The box and its grid."""
+
+    space: str = setting(
+        default="periodic",
+        choices=("periodic",),
+        doc="the space: periodic in x and y",
+    )
+    points: tuple[int, int] = setting(
+        minimum=8, maximum=8192, doc="grid points in x and y; even numbers"
+    )
+    lengths: tuple[float, float] = setting(
+        unit="m", above=0, doc="size of the box in x and y"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        odd = [n for n in self.points if n % 2]
+        if odd:
+            yield (
+                f"points = {list(self.points)} must be even; "
+                f"try {[n + n % 2 for n in self.points]}"
+            )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class RestSettings:
+    """Start from rest."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class NoiseSettings:
+    """Start from random phases and amplitudes on a band of wavenumbers."""
+
+    energy: float = setting(unit="m2 s-2", above=0, doc="energy of the initial state")
+    band: tuple[float, float] = setting(
+        minimum=0,
+        doc="smallest and largest total wavenumber excited, in waves per box",
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if self.band[0] > self.band[1]:
+            yield f"band = {list(self.band)} runs downwards; give the smaller first"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TimeSettings:
+    """Steps, spin-up and length of a truth run."""
+
+    step: float = setting(unit="s", above=0, doc="time step")
+    spin_up: float = setting(
+        unit="s", minimum=0, doc="time run, and not recorded, before the record"
+    )
+    duration: float = setting(unit="s", above=0, doc="length of the record")
+    energy_bound: float = setting(
+        unit="m2 s-2",
+        default=1000.0,
+        above=0,
+        doc="energy beyond which the run counts as blown up",
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        for name in ("spin_up", "duration"):
+            if not _divides(self.step, getattr(self, name)):
+                yield f"{name} must be a whole number of steps of {self.step:.6g} s"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ResolvedStreamSettings:
+    """A stream of the low wavenumbers alone, finer in time than the full state."""
+
+    every: float = setting(unit="s", above=0, doc="interval of the stream")
+    up_to: float = setting(
+        minimum=1, doc="largest total wavenumber in the stream, in waves per box"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class OutputSettings:
+    """What a truth run writes, and how often."""
+
+    state_every: float = setting(
+        unit="s", above=0, doc="interval of the full state and of the energy budget"
+    )
+    resolved: ResolvedStreamSettings | None = setting(
+        default=None, doc="the low wavenumbers at a finer interval; absent: none"
+    )
+    fields_every: float | None = setting(
+        default=None,
+        unit="s",
+        above=0,
+        doc="interval of streamfunction and vorticity on the grid; absent: none",
+    )
+    checkpoint_every: float | None = setting(
+        default=None,
+        unit="s",
+        above=0,
+        doc="model time between checkpoints; absent: 512 states, or as many as "
+        "make 64 MB",
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TruthConfig:
+    """Everything that a truth run depends on."""
+
+    name: str = setting(doc="name of the study and of its run folder")
+    title: str = setting(default="", doc="one line for the head of the report")
+    seed: int = setting(
+        default=1, minimum=0, doc="entropy of every random stream of the study"
+    )
+    grid: GridSettings = setting(doc="the box and its grid")
+    ocean: BarotropicSettings = setting(
+        kinds={"barotropic": BarotropicSettings}, doc="the flow that is run"
+    )
+    forcing: dict[str, Wave] = setting(
+        default=dict,
+        kinds={"wave": Wave},
+        doc="steady sources of vorticity, each under a name of its own",
+    )
+    stirring: Stirring | None = setting(
+        default=None, doc="random forcing, white in time; absent: none"
+    )
+    initial: NoiseSettings | RestSettings = setting(
+        default=RestSettings,
+        kinds={"rest": RestSettings, "noise": NoiseSettings},
+        doc="the state that the run starts from",
+    )
+    time: TimeSettings = setting(doc="steps, spin-up and length")
+    output: OutputSettings = setting(doc="what is written, and how often")
+
+    def problems(self):
+        """Rules that go across sections."""
+        if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9._-]{0,63}", self.name):
+            yield (
+                f"name = {self.name!r} must be usable as a folder name: letters, "
+                "digits, dot, underscore and hyphen, at most 64"
+            )
+        step = self.time.step
+        intervals = {
+            "[output] state_every": self.output.state_every,
+            "[output] fields_every": self.output.fields_every,
+            "[output] checkpoint_every": self.output.checkpoint_every,
+        }
+        if self.output.resolved is not None:
+            intervals["[output.resolved] every"] = self.output.resolved.every
+        for where, interval in intervals.items():
+            if interval is not None and not _divides(step, interval):
+                nearest = max(1, round(interval / step)) * step
+                yield (
+                    f"{where} = {interval:.6g} s must be a whole number of steps of "
+                    f"{step:.6g} s; try {nearest:.6g} s"
+                )
+
+
+def _divides(step: float, interval: float) -> bool:
+    """Whether an interval is a whole number of steps, up to rounding of decimals."""
+    count = interval / step
+    if not math.isfinite(count):
+        return False
+    return abs(count - round(count)) <= 1e-9 * max(1.0, count)

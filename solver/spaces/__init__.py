@@ -1,0 +1,1 @@
+"""Spaces: grids, coefficients and what lies between them."""

@@ -1,0 +1,240 @@
+"""What a truth run records: its streams, each with a cadence of its own."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+
+import h5py
+import numpy as np
+
+from .files import add_scale, add_time, add_variable
+from .oceans.barotropic import Barotropic
+from .settings import OutputSettings
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Variable:
+    """One recorded variable.
+
+    Attributes
+    ----------
+    dimensions : tuple of str
+        Names of the axes behind time.
+    shape : tuple of int
+        Their lengths.
+    units, long_name : str
+        CF attributes.
+    dtype : str
+        Type in the file.
+    """
+
+    dimensions: tuple[str, ...]
+    shape: tuple[int, ...]
+    units: str
+    long_name: str
+    dtype: str = "float64"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Stream:
+    """Variables that are recorded together.
+
+    Attributes
+    ----------
+    time : str
+        Name of the time axis; every stream has its own.
+    every : int
+        Interval in steps.
+    variables : mapping of str to Variable
+        What is recorded.
+    sample : callable
+        ``sample(t, z)`` returns a value for each variable.
+    """
+
+    time: str
+    every: int
+    variables: Mapping[str, Variable]
+    sample: Callable[[float, np.ndarray], Mapping[str, object]]
+
+
+BUDGET = {
+    "energy": ("m2 s-2", "domain-mean energy"),
+    "enstrophy": ("s-2", "domain-mean potential enstrophy"),
+    "work": ("m2 s-3", "energy fed by the steady forcing"),
+    "dissipation": ("m2 s-3", "energy lost to friction (negative)"),
+}
+
+
+def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[Stream]:
+    """List the streams that a config asks for.
+
+    Parameters
+    ----------
+    output : OutputSettings
+        Intervals [s].
+    ocean : Barotropic
+        The ocean.
+    step : float
+        Time step [s].
+
+    Returns
+    -------
+    list of Stream
+    """
+    state = Stream(
+        time="time",
+        every=round(output.state_every / step),
+        variables={
+            "state": Variable(
+                dimensions=("coordinate",),
+                shape=(ocean.size,),
+                units=ocean.unit,
+                long_name="state in energy-orthonormal coordinates",
+            ),
+            **{
+                name: Variable(
+                    dimensions=(), shape=(), units=units, long_name=long_name
+                )
+                for name, (units, long_name) in BUDGET.items()
+            },
+        },
+        sample=lambda t, z: {"state": z.copy(), **ocean.budget(t, z)},
+    )
+    streams = [state]
+    if output.resolved is not None:
+        chosen = low_coordinates(ocean, output.resolved.up_to)
+        streams.append(
+            Stream(
+                time="resolved_time",
+                every=round(output.resolved.every / step),
+                variables={
+                    "resolved": Variable(
+                        dimensions=("resolved_coordinate",),
+                        shape=(len(chosen),),
+                        units=ocean.unit,
+                        long_name="coordinates of the low wavenumbers",
+                    )
+                },
+                sample=lambda t, z: {"resolved": z[chosen]},
+            )
+        )
+    if output.fields_every is not None:
+        nx, ny = ocean.space.points
+        units = {"streamfunction": "m2 s-1", "vorticity": "s-1"}
+        streams.append(
+            Stream(
+                time="fields_time",
+                every=round(output.fields_every / step),
+                variables={
+                    name: Variable(
+                        dimensions=("y", "x"),
+                        shape=(ny, nx),
+                        units=unit,
+                        long_name=name,
+                        dtype="float32",
+                    )
+                    for name, unit in units.items()
+                },
+                sample=lambda t, z: ocean.fields(z),
+            )
+        )
+    return streams
+
+
+def low_coordinates(ocean: Barotropic, up_to: float) -> np.ndarray:
+    """Indices of the coordinates of total wavenumber at most `up_to`."""
+    return np.flatnonzero(np.hypot(*ocean.waves.T) <= up_to + 1e-9)
+
+
+def add_axes(group: h5py.Group, output: OutputSettings, ocean: Barotropic) -> None:
+    """Add the axes behind time, and what is known of them.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        Where to.
+    output : OutputSettings
+        Which streams there are.
+    ocean : Barotropic
+        Names the coordinates.
+    """
+    axes = {"coordinate": np.arange(ocean.size)}
+    if output.resolved is not None:
+        axes["resolved_coordinate"] = low_coordinates(ocean, output.resolved.up_to)
+    labels = ocean.labels
+    for name, chosen in axes.items():
+        add_scale(group, name, chosen, long_name="index of the coordinate")
+        prefix = name.removesuffix("coordinate")
+        add_variable(
+            group,
+            f"{prefix}label",
+            [name],
+            [labels[i] for i in chosen],
+            long_name="part and wavenumbers in x and y",
+        )
+        for axis, letter in enumerate("xy"):
+            add_variable(
+                group,
+                f"{prefix}waves_{letter}",
+                [name],
+                ocean.waves[chosen, axis],
+                long_name=f"waves per box in {letter}",
+            )
+    if output.fields_every is not None:
+        x, y = ocean.space.grid_axes
+        add_scale(group, "x", x, units="m", long_name="distance eastward", axis="X")
+        add_scale(group, "y", y, units="m", long_name="distance northward", axis="Y")
+
+
+class Recorder:
+    """Holds the records made since the last checkpoint.
+
+    Parameters
+    ----------
+    streams : list of Stream
+        What to record.
+    first_step : int
+        Step of the first record of each stream: the end of the spin-up.
+    """
+
+    def __init__(self, streams: list[Stream], first_step: int):
+        self._streams = streams
+        self._first = first_step
+        self.clear()
+
+    def clear(self) -> None:
+        """Forget the records, after they were written."""
+        self._times = [[] for _ in self._streams]
+        self._rows = [{name: [] for name in s.variables} for s in self._streams]
+
+    def record(self, step: int, t: float, z: np.ndarray) -> None:
+        """Record whatever is due at a step."""
+        since = step - self._first
+        if since < 0:
+            return
+        for stream, times, rows in zip(
+            self._streams, self._times, self._rows, strict=True
+        ):
+            if since % stream.every == 0:
+                times.append(t)
+                for name, value in stream.sample(t, z).items():
+                    rows[name].append(value)
+
+    def write(self, group: h5py.Group) -> None:
+        """Write the records as plain variables; axes behind time must exist."""
+        for stream, times, rows in zip(
+            self._streams, self._times, self._rows, strict=True
+        ):
+            add_time(group, stream.time, np.array(times, dtype=float))
+            for name, variable in stream.variables.items():
+                shape = (len(times), *variable.shape)
+                values = np.array(rows[name], dtype=variable.dtype).reshape(shape)
+                add_variable(
+                    group,
+                    name,
+                    (stream.time, *variable.dimensions),
+                    values,
+                    units=variable.units,
+                    long_name=variable.long_name,
+                )
