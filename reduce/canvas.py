@@ -1,7 +1,7 @@
 """How every figure looks, and how it gets into the page.
 
-With :mod:`eddyshed.reduce.figures` and `figures_models` the only importer of
-matplotlib, which is an extra. No figure touches the global state of it.
+Imports matplotlib, which is an extra, as only this module and those whose
+name begins with ``figures`` do. No figure changes the global state of it.
 """
 
 from __future__ import annotations
@@ -38,7 +38,7 @@ LOOK = {
     "ytick.major.width": 0.6,
     "legend.fontsize": 10,
     "legend.frameon": False,
-    "legend.handlelength": 2.6,
+    "legend.handlelength": 2.4,
     "lines.linewidth": 1.2,
     "lines.markersize": 3.6,
     "figure.facecolor": "none",
@@ -86,33 +86,30 @@ def drawn(height: float, draw: Callable[[Figure], None], layout="constrained") -
     return f"data:image/svg+xml;base64,{encoded}"
 
 
-def closure_style(index: int, points: int) -> dict[str, object]:
+def closure_style(index: int) -> dict[str, object]:
     """How the curve of a closure is drawn.
 
     Parameters
     ----------
     index : int
         Its place among the closures, those that failed included.
-    points : int
-        Length of the curve: a few markers are set along it.
     """
     k = index % len(HUES)
-    every = max(1, points // 6)
     return {
         "color": HUES[k],
         "dashes": DASHES[k],
         "marker": MARKERS[k],
-        "markevery": (every * (k + 1) // (len(HUES) + 1), every),
+        # A few along the curve, and not where another closure has its own.
+        "markevery": (0.04 + 0.04 * k, 0.2),
         "markerfacecolor": "white",
         "markeredgewidth": 0.9,
     }
 
 
 def panels(figure: Figure, count: int, columns: int) -> list[Axes]:
-    """A grid of panels, lettered (a), (b) and so on."""
+    """A grid of panels."""
     rows = -(-count // columns)
-    axes = [figure.add_subplot(rows, columns, k + 1) for k in range(count)]
-    return axes
+    return [figure.add_subplot(rows, columns, k + 1) for k in range(count)]
 
 
 def letter(index: int) -> str:
@@ -120,12 +117,10 @@ def letter(index: int) -> str:
     return f"({chr(ord('a') + index) if index < 26 else index + 1})"
 
 
-def legend(figure: Figure, axes: Axes, columns: int) -> None:
+def legend(figure: Figure, axes: Axes) -> None:
     """One legend for all panels, above them."""
     handles, labels = axes.get_legend_handles_labels()
-    figure.legend(
-        handles, labels, loc="outside upper left", ncols=columns, columnspacing=1.4
-    )
+    figure.legend(handles, labels, loc="outside upper left", ncols=5, columnspacing=1.2)
 
 
 def in_math(unit: str) -> str:
@@ -139,9 +134,14 @@ def in_math(unit: str) -> str:
 
 
 def power_of_ten(values: Sequence[float] | np.ndarray) -> int:
-    """Exponent that brings the largest of some values to between 1 and 10."""
+    """Exponent that brings the largest of some values to between 1 and 10.
+
+    It is zero if they read well as they are, from a tenth to a thousand.
+    """
     largest = float(np.max(np.abs(values), initial=0.0))
-    return int(np.floor(np.log10(largest))) if largest > 0 else 0
+    if largest == 0 or 0.1 <= largest < 1000:
+        return 0
+    return int(np.floor(np.log10(largest)))
 
 
 def scaled_unit(exponent: int, unit: str) -> str:

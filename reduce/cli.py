@@ -156,9 +156,11 @@ def _check(options):
     document = _read(options)
     from eddyshed.solver.forecast import forecast
 
+    from .stages import preflight
     from .study import free_bytes
     from .tables import forecast_json, forecast_table
 
+    preflight(document.config)
     found = forecast(document.config)
     free = free_bytes(options.runs)
     if options.json:
@@ -171,9 +173,11 @@ def _check(options):
 def _stage(options):
     """Carry out a stage, or all of them."""
     document = _read(options)
-    from .stages import STAGES
+    from .stages import STAGES, preflight
     from .study import Interrupted, Study, bring_up_to_date, opened
     from .tables import stage_json, stage_table
+
+    preflight(document.config)
 
     if not options.quiet:
         handler = logging.StreamHandler(sys.stderr)

@@ -5,8 +5,7 @@ Each function returns a data URI for the page; see `eddyshed.reduce.canvas`.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Sequence
 
 import numpy as np
 
@@ -23,54 +22,9 @@ from .canvas import (
     panels,
 )
 from .estimate import Estimate
+from .measures import Correlation, Distribution
 
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Correlation:
-    """Correlation functions that one panel shows.
-
-    Attributes
-    ----------
-    label : str
-        Name of the mode.
-    lags, truth : ndarray, shape (lag,)
-        Lags [s] and the correlation of the truth there.
-    error : float
-        Standard error of the truth's; infinite if unknown.
-    curves : mapping of int to (lags, values)
-        Those of models, by their place among the closures.
-    longest : float
-        End of the axis [s].
-    """
-
-    label: str
-    lags: np.ndarray
-    truth: np.ndarray
-    error: float
-    curves: Mapping[int, tuple[np.ndarray, np.ndarray]]
-    longest: float
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Distribution:
-    """Densities that one panel shows.
-
-    Attributes
-    ----------
-    label : str
-        Name of the mode.
-    edges : ndarray, shape (bin + 1,)
-        Bins [state unit].
-    truth : Estimate, shape (bin,)
-        Density of the truth.
-    curves : mapping of int to ndarray, shape (bin,)
-        Those of closures, by their place.
-    """
-
-    label: str
-    edges: np.ndarray
-    truth: Estimate
-    curves: Mapping[int, np.ndarray]
+HIGHEST = 1.8  # times the peak of the truth: where axes of density end
 
 
 def noise(
@@ -159,7 +113,7 @@ def noise_correlations(shown: Sequence[Correlation]) -> str:
             ax.set(title=f"{letter(k)} {one.label}", xlabel="lag [d]")
             ax.set_xlim(0, one.longest / DAY)
         axes[0].set_ylabel("correlation")
-        legend(figure, axes[0], 2)
+        legend(figure, axes[0])
 
     return drawn(2.6, draw)
 
@@ -174,26 +128,32 @@ def correlations(shown: Sequence[Correlation], names: Sequence[str]) -> str:
     names : sequence of str
         All closures; curves refer to them by place.
     """
+    curves = [values for one in shown for _, values in one.curves.values()]
+    bands = [one.truth - 2 * one.error for one in shown if np.isfinite(one.error)]
+    least = min(float(values.min()) for values in [*curves, *bands, np.zeros(1)])
+    lowest = max(least, -1.0) - 0.08
 
     def draw(figure):
         axes = panels(figure, len(shown), 2)
         for k, (ax, one) in enumerate(zip(axes, shown, strict=True)):
             _band(ax, one)
-            ax.plot(one.lags / DAY, one.truth, color=TRUTH, label="truth", linewidth=1.5)
+            ax.plot(
+                one.lags / DAY, one.truth, color=TRUTH, label="truth", linewidth=1.5
+            )
             for index, (lags, values) in one.curves.items():
-                inside = lags <= one.longest
+                stop = int(np.searchsorted(lags, one.longest)) + 1
                 ax.plot(
-                    lags[inside] / DAY,
-                    values[inside],
+                    lags[:stop] / DAY,
+                    values[:stop],
                     label=names[index],
-                    **closure_style(index, int(inside.sum())),
+                    **closure_style(index),
                 )
             ax.axhline(0, color=BAND, linewidth=0.6, zorder=0)
             ax.set(title=f"{letter(k)} {one.label}", xlabel="lag [d]")
-            ax.set_xlim(0, one.longest / DAY)
+            ax.set(xlim=(0, one.longest / DAY), ylim=(lowest, 1.08))
             if k % 2 == 0:
                 ax.set_ylabel("correlation")
-        legend(figure, axes[0], 4)
+        legend(figure, axes[0])
 
     rows = -(-len(shown) // 2)
     return drawn(0.5 + 1.85 * rows, draw)
@@ -232,16 +192,16 @@ def distributions(
                     middle,
                     values,
                     label=names[index],
-                    **closure_style(index, len(values)),
+                    **closure_style(index),
                 )
-            ax.set_ylim(bottom=0)
+            ax.set_ylim(0, HIGHEST * one.truth.value.max())
             ax.set(
                 title=f"{letter(k)} {one.label}",
                 xlabel=f"amplitude [{in_math(unit)}]",
             )
             if k % 2 == 0:
                 ax.set_ylabel(f"density [({in_math(unit)})$^{{-1}}$]")
-        legend(figure, axes[0], 4)
+        legend(figure, axes[0])
 
     rows = -(-len(shown) // 2)
     return drawn(0.5 + 1.85 * rows, draw)

@@ -11,6 +11,7 @@ import math
 import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from itertools import count
 from types import ModuleType
 
 from .estimate import Estimate
@@ -27,39 +28,40 @@ body {
 }
 h1 { font-size: 1.65rem; line-height: 1.25; font-weight: 600; margin: 0 0 .9rem; }
 h2 { font-size: 1.2rem; font-weight: 600; margin: 2.6rem 0 .6rem; }
-h3 { font-size: 1.06rem; font-weight: 600; font-style: italic; margin: 1.8rem 0 .5rem; }
 p { margin: 0 0 .85rem; }
 ul { margin: 0 0 .85rem; padding-left: 1.2rem; }
 li { margin-bottom: .3rem; }
-a { color: inherit; }
 .caution { border-left: 3px solid #8a8a84; padding-left: .9rem; font-style: italic; }
 dl { margin: 0 0 .85rem; }
 dt { font-weight: 600; }
 dd { margin: 0 0 .45rem 1.2rem; }
 figure { margin: 1.8rem 0; }
 figure img { display: block; width: 100%; height: auto; }
-figcaption, caption { font-size: .88rem; line-height: 1.42; color: #333; }
-figcaption { margin-top: .5rem; }
+figcaption { font-size: .88rem; line-height: 1.42; color: #333; }
+img + figcaption, p + figcaption { margin-top: .5rem; }
+figcaption + .scroll { margin-top: .55rem; }
+sup { font-size: .72em; line-height: 0; }
 .number { font-weight: 600; }
-.scroll { overflow-x: auto; margin: 1.5rem 0; }
+.scroll { overflow-x: auto; }
 table {
   border-collapse: collapse; min-width: 100%; font-size: .88rem; line-height: 1.35;
   border-bottom: 1.5px solid #1b1b1b; font-variant-numeric: lining-nums tabular-nums;
 }
-caption { text-align: left; padding: 0 0 .5rem; min-width: 18rem; }
 thead th { border-top: 1.5px solid #1b1b1b; border-bottom: .75px solid #1b1b1b; }
 th { font-weight: 600; text-align: left; vertical-align: bottom; }
-th, td { padding: .28rem .9rem .28rem 0; }
+th, td { padding: .25rem .8rem .25rem 0; }
 th:last-child, td:last-child { padding-right: 0; }
 td { vertical-align: top; }
 tbody th { font-weight: inherit; vertical-align: top; }
-.figures { text-align: right; white-space: nowrap; }
+.figures { text-align: right; }
+td.figures, tbody th { white-space: nowrap; }
+th[scope=rowgroup] { font-style: italic; padding-top: .5rem; }
 tbody.group + tbody.group > tr:first-child > * { border-top: .75px solid #bdbdb6; }
 td.words { padding-bottom: .6rem; color: #333; min-width: 17rem; }
 .words p { margin: 0 0 .2rem; }
 code, pre { font: .84em/1.45 ui-monospace, "DejaVu Sans Mono", Menlo, monospace; }
 pre { overflow-x: auto; border: .75px solid #bdbdb6; padding: .7rem .8rem; }
-code { overflow-wrap: anywhere; }
+p code, li code { overflow-wrap: anywhere; }
 @media (max-width: 30rem) {
   body { padding-top: 1.4rem; font-size: 1rem; }
   h1 { font-size: 1.4rem; }
@@ -68,7 +70,7 @@ code { overflow-wrap: anywhere; }
   @page { margin: 20mm 22mm; }
   body { max-width: none; padding: 0; background: none; font-size: 10.5pt; }
   figure, tbody.group { break-inside: avoid; }
-  h2, h3, caption { break-after: avoid; }
+  h2, figcaption { break-after: avoid; }
   .scroll { overflow: visible; }
   pre { white-space: pre-wrap; }
 }
@@ -229,7 +231,8 @@ class Note:
             HTML of the column heads.
         groups : sequence of sequence of rows
             Rows that belong together; a rule stands between groups. A row is
-            a sequence of cells (HTML), or one piece of HTML across all columns.
+            a sequence of cells (HTML), or one piece of HTML across all columns:
+            the head of its group if it comes first, else words on the row above.
         caption : str
             HTML.
         words : sequence of int
@@ -246,9 +249,12 @@ class Note:
             style = "" if column in words else ' class="figures"'
             return f"<{tag}{scope}{style}>{content}</{tag}>"
 
-        def row(cells):
+        def row(place, cells):
+            across = f'colspan="{len(heading)}"'
+            if isinstance(cells, str) and place == 0:
+                return f'<tr><th scope="rowgroup" {across}>{cells}</th></tr>'
             if isinstance(cells, str):
-                return f'<tr><td class="words" colspan="{len(heading)}">{cells}</td></tr>'
+                return f'<tr><td class="words" {across}>{cells}</td></tr>'
             first = cell("th", 0, cells[0], ' scope="row"')
             rest = (cell("td", k, c) for k, c in enumerate(cells[1:], start=1))
             return f"<tr>{first}{''.join(rest)}</tr>"
@@ -257,14 +263,16 @@ class Note:
             cell("th", k, content, ' scope="col"') for k, content in enumerate(heading)
         )
         bodies = "\n".join(
-            '<tbody class="group">\n' + "\n".join(map(row, group)) + "\n</tbody>"
+            '<tbody class="group">\n'
+            + "\n".join(map(row, count(), group))
+            + "\n</tbody>"
             for group in groups
         )
         return (
-            f'<div class="scroll" role="region" aria-label="Table {self.tables}" '
-            f'tabindex="0">\n<table>\n<caption><span class="number">Table '
-            f"{self.tables}.</span> {caption}</caption>\n"
-            f"<thead><tr>{head}</tr></thead>\n{bodies}\n</table>\n</div>"
+            f'<figure>\n<figcaption><span class="number">Table {self.tables}.</span> '
+            f'{caption}</figcaption>\n<div class="scroll" role="region" '
+            f'aria-label="Table {self.tables}" tabindex="0">\n<table>\n'
+            f"<thead><tr>{head}</tr></thead>\n{bodies}\n</table>\n</div>\n</figure>"
         )
 
 

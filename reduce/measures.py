@@ -6,6 +6,7 @@ record, by Bartlett's formula where it is a correlation.
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,7 +15,7 @@ from eddyshed.solver.record import TruthRecord
 
 from .estimate import Estimate
 from .ornstein_uhlenbeck import OrnsteinUhlenbeck
-from .statistics import autocovariance, correlation_scales
+from .statistics import autocovariance, effective_size
 
 BATCHES = 20  # batch means: common practice, the error is then known to a sixth
 
@@ -44,6 +45,54 @@ class EnergyBudget:
     dissipation: Estimate
     residual: Estimate
     batches: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Correlation:
+    """Correlation functions that one panel shows.
+
+    Attributes
+    ----------
+    label : str
+        Name of the mode.
+    lags, truth : ndarray, shape (lag,)
+        Lags [s] and the correlation of the truth there.
+    error : float
+        Standard error of the truth's; infinite if unknown.
+    curves : mapping of int to (lags, values)
+        Those of models, by their place among the closures.
+    longest : float
+        End of the axis [s].
+    """
+
+    label: str
+    lags: np.ndarray
+    truth: np.ndarray
+    error: float
+    curves: Mapping[int, tuple[np.ndarray, np.ndarray]]
+    longest: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Distribution:
+    """Densities that one panel shows.
+
+    Attributes
+    ----------
+    label : str
+        Name of the mode.
+    edges : ndarray, shape (bin + 1,)
+        Bins [state unit].
+    truth : Estimate, shape (bin,)
+        Density of the truth.
+    curves : mapping of int to ndarray, shape (bin,)
+        Those of closures, by their place.
+    """
+
+    label: str
+    edges: np.ndarray
+    truth: Estimate
+    curves: Mapping[int, np.ndarray]
 
 
 def batch_edges(count: int) -> np.ndarray:
@@ -186,12 +235,14 @@ def block_ranges(series: np.ndarray, most: int) -> tuple[np.ndarray, ...]:
     )
 
 
-def large_lag_error(series: np.ndarray) -> np.ndarray:
+def large_lag_error(series: np.ndarray, step: float) -> np.ndarray:
     """Standard error of a sample correlation at lags where the true one is gone.
 
     Parameters
     ----------
     series : ndarray, shape (member, time, mode)
+    step : float
+        Time between samples [s].
 
     Returns
     -------
@@ -205,9 +256,8 @@ def large_lag_error(series: np.ndarray) -> np.ndarray:
     samples (M. S. Bartlett 1946, J. R. Stat. Soc. Suppl. 8, 27). At short
     lags, where correlations are known better, it overstates the error.
     """
-    squared = correlation_scales(series).squared
-    error = np.sqrt(squared.value / (series.shape[0] * series.shape[1]))
-    return np.where(np.isfinite(squared.error), error, np.inf)
+    size = effective_size(series, step).variance
+    return np.where(np.isfinite(size.error), 1 / np.sqrt(size.value), np.inf)
 
 
 def rotating_units(partners: np.ndarray) -> list[tuple[int, ...]]:

@@ -33,7 +33,7 @@ WINDOW_TIMES = 8  # integral times in the default window
 FEWEST_BATCHES = 4  # a scatter of fewer is no error
 SHORTEST_WINDOW = 4  # samples; fewer are no integral
 FEWEST_WINDOWS = 20  # in a record: the variance is then known to a third or so
-REMARKABLE = 3.0  # standard errors: one in 130 by chance with 19 degrees of freedom
+REMARKABLE = 3.0  # standard errors: about one in 100 by chance, as measured
 SAMPLES_PER_COORDINATE = 50  # effective samples that a full matrix asks for
 
 
@@ -169,8 +169,9 @@ def fit_ornstein_uhlenbeck(
     step : float
         Time between samples [s].
     window : float
-        Longest lag of the integral [s], at least four steps; see
-        `window_rule`. The record must hold 20 of them, each member two.
+        Longest lag of the integral [s], rounded to whole steps, at least
+        four; see `window_rule`. The record must hold 20 windows, each member
+        two.
     partners : array_like of int, shape (mode,), optional
         Coordinate that is the other part (cosine, sine) of the same wave, or
         -1. A pair is one complex rate, and both parts get equal variances. The
@@ -210,8 +211,17 @@ def fit_ornstein_uhlenbeck(
     marked. The variance that is lost with the mean is put back.
 
     Errors are by the jackknife over batches (B. Efron and R. J. Tibshirani
-    (1993), An Introduction to the Bootstrap, ch. 11), which are batch means
-    (contiguous parts) because neighbours in time are not independent.
+    (1993), An Introduction to the Bootstrap, ch. 11), which are long parts of
+    the record because neighbours in time are not independent. Measured on
+    600 Ornstein-Uhlenbeck series each, of 100 (400, 1000) e-folding times
+    with a window of 4 (8, 8), Student's 95 % intervals hold the true decay in
+    93 to 94 % (93 to 96, 94 to 95), the frequency in 93 to 98 % (95, 94) and
+    the variance in 88 to 94 % (94 to 96, 94 to 95) of cases. The decay of
+    unpaired coordinates is too high by 8 % (4, 1), a third of its error.
+
+    In a full fit the correction brings the error of the rate matrix from 0.28
+    to 0.21 of its norm for 2 coordinates and 100 e-folding times, from 0.31
+    to 0.24 for 6 coordinates and 300; that of its integral hardly changes.
     """
     where = "Ornstein-Uhlenbeck fit"
     step = checked_step(step, where)
@@ -231,7 +241,9 @@ def fit_ornstein_uhlenbeck(
         )
         raise DataError(message)
     first, second = units_of(partners, series.shape[2], where)
-    names = [f"mode {k}" for k in range(series.shape[2])] if labels is None else labels
+    names = [f"mode {k}" for k in range(series.shape[2])]
+    if labels is not None:
+        names = list(labels)
     if structure == "diagonal" or not names:
         fit = match_units(series, step, lags, batches, first, second)
     else:
@@ -286,13 +298,13 @@ def _notes(
         (
             corrected & differ(fit.double_window_decay - fit.decay),
             f"the decay from twice the window differs by over {REMARKABLE:g} standard "
-            "errors (by chance in one of 130), so that the correlation is not that of "
+            "errors (by chance in one of 100), so that the correlation is not that of "
             "an Ornstein-Uhlenbeck process",
         ),
         (
             differ(fit.imbalance),
             f"the two parts of a pair differ in variance by over {REMARKABLE:g} "
-            "standard errors (by chance in one of 130), and are given their mean",
+            "standard errors (by chance in one of 100), and are given their mean",
         ),
         (
             raw_rate * step > 1,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from scipy import sparse
@@ -18,6 +19,8 @@ SPARSE = 0.1
 # shape makes a member's path the same bits in any company, at 1.5 times the
 # cost of a product of a hundred columns.
 COLUMNS = 16
+
+ABSENT: Any = None  # a field that is left out; it is an array once constructed
 
 X, Y = "x", "y"
 _SHAPES = {
@@ -97,15 +100,15 @@ class ReducedModel:
     x_forcing: np.ndarray
     x_from_x: np.ndarray
     x_from_xx: np.ndarray
-    x_from_y: np.ndarray | None = None
-    x_from_xy: np.ndarray | None = None
-    x_from_yy: np.ndarray | None = None
-    y_forcing: np.ndarray | None = None
-    y_from_x: np.ndarray | None = None
-    y_from_xx: np.ndarray | None = None
-    y_from_xy: np.ndarray | None = None
-    rate: np.ndarray | None = None
-    covariance: np.ndarray | None = None
+    x_from_y: np.ndarray = ABSENT
+    x_from_xy: np.ndarray = ABSENT
+    x_from_yy: np.ndarray = ABSENT
+    y_forcing: np.ndarray = ABSENT
+    y_from_x: np.ndarray = ABSENT
+    y_from_xx: np.ndarray = ABSENT
+    y_from_xy: np.ndarray = ABSENT
+    rate: np.ndarray = ABSENT
+    covariance: np.ndarray = ABSENT
     notes: tuple[str, ...] = ()
     facts: dict[str, float] = field(default_factory=dict)
 
@@ -224,7 +227,7 @@ def compiled_drift(
     nx, ny = model.nx, model.ny
     upper = np.triu_indices(nx)
     has_squares = bool(np.any(model.x_from_xx) or np.any(model.y_from_xx))
-    alone = []
+    rows = []
     for constant, linear, quadratic in (
         (model.x_forcing, model.x_from_x, model.x_from_xx),
         (model.y_forcing, model.y_from_x, model.y_from_xx),
@@ -232,8 +235,8 @@ def compiled_drift(
         parts = [constant, linear]
         if has_squares:
             parts.append(_packed(quadratic, upper))
-        alone.append(np.column_stack(parts))
-    alone = as_operator(np.vstack(alone))
+        rows.append(np.column_stack(parts))
+    alone = as_operator(np.vstack(rows))
     modulated = 2 * model.y_from_xy.transpose(1, 0, 2)  # (i, m, n)
     inferred = -(modulated + modulated.transpose(0, 2, 1)) / 2
     is_shared = np.array_equal(model.x_from_yy, inferred)

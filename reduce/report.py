@@ -127,9 +127,9 @@ def opening(evidence: Evidence) -> str:
         f"{format_quantity(evidence.length, 's')} after a spin-up of "
         f"{format_quantity(config.time.spin_up, 's')}: {known} correlation times of "
         f"its slowest resolved mode, {text(resolved.labels[slowest])}. Of its "
-        f"{evidence.record.size} coordinates {resolved.n_modes} were kept, and "
-        f"{len(evidence.closures)} reduced models, which stand in for the rest in "
-        "one way or another (closures), were scored against that run, here called "
+        f"{evidence.record.size} coordinates {resolved.n_modes} were kept. Each way to "
+        "stand in for the rest, a closure, makes a reduced model; "
+        f"{len(evidence.closures)} of them were scored against that run, here called "
         "the truth."
     )
 
@@ -157,7 +157,13 @@ def verdict(note: Note, evidence: Evidence) -> str:
     return section(
         "What the reduced models are worth",
         note.table(
-            ["closure", "verdict", "within sampling error", "within tolerance", "speed"],
+            [
+                "closure",
+                "verdict",
+                "within sampling error",
+                "within tolerance",
+                "speed",
+            ],
             groups,
             words=(0, 1),
             caption="Closures against the truth. Scores that pass each of two "

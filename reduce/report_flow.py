@@ -55,12 +55,8 @@ def _map(note, evidence):
         if interval
         else np.empty(0)
     )
-    parts = np.array([eastward_profile(ocean, z) for z in batch_states(record)])
-    profile = of_batches(parts, eastward_profile(ocean, evidence.split.mean))
-    fine = Estimate(
-        refined(profile.value[:, np.newaxis], MAP_POINTS)[:, 0],
-        np.repeat(profile.error, MAP_POINTS // len(profile.error) or 1),
-    ) if False else profile
+    parts = np.array([_profile(ocean, z) for z in batch_states(record)])
+    profile = of_batches(parts, _profile(ocean, evidence.split.mean))
     strongest = int(np.abs(profile.value).argmax())
     _, ly = evidence.study.config.grid.lengths
     where = format_quantity(round(strongest * ly / len(profile.value), -3), "m")
@@ -71,12 +67,12 @@ def _map(note, evidence):
             streamfunction=psi,
             levels=levels,
             lengths=evidence.study.config.grid.lengths,
-            profile=fine,
-            last_profile=eastward_profile(ocean, last),
+            profile=profile,
+            last_profile=_profile(ocean, last),
         ),
         alt="Left, a map of relative vorticity in kilometres with contours of the "
         "streamfunction; right, eastward velocity averaged along x, by latitude. The "
-        f"strongest time-mean jet, {profile.value[strongest]:+.3g} m/s, lies at "
+        f"strongest time-mean jet, {profile.value[strongest]:+.2g} ± {profile.error[strongest]:.1g} m/s, lies at "
         f"y = {where}.",
         caption=f"(a) Relative vorticity of the last recorded state, {when} into the "
         "record: orange, which prints light, turns anticlockwise (above zero), blue "
@@ -88,6 +84,11 @@ def _map(note, evidence):
     )
 
 
+def _profile(ocean, z):
+    """Eastward velocity by latitude, at as many points as the map has."""
+    return refined(eastward_profile(ocean, z)[:, np.newaxis], MAP_POINTS)[:, 0]
+
+
 def _energy_figure(note, evidence, series):
     """Energy and its budget over time."""
     record = evidence.record
@@ -96,7 +97,7 @@ def _energy_figure(note, evidence, series):
     level = block_ranges(series["energy"], BLOCKS)
     work, *_ = block_ranges(series["work"], BLOCKS)
     loss, *_ = block_ranges(-series["dissipation"], BLOCKS)
-    block = format_quantity(float(f"{len(since) * record.step / len(middle):.2g}"), "s")
+    block = f"{len(since) * record.step / len(middle) / DAY:.2g} d"
     return note.figure(
         lambda figures: figures.energy(times=middle, level=level, work=work, loss=loss),
         alt="Two time series: energy above; below, the work of the forcing and the "
@@ -142,8 +143,9 @@ def _budget_table(note, evidence, budget: EnergyBudget):
 def split(note: Note, evidence: Evidence) -> str:
     """What is kept and what is not."""
     divided, truth = evidence.split, evidence.truth
-    kept, rest, lost = (100 * share for share in divided.shares)
     total, resolved = divided.total_variance, divided.resolved
+    lost = 100 * divided.shares[2]
+    shares = Estimate(truth.variance.value / total, truth.variance.error / total)
     # The noise was fitted to the unresolved series: it knows their errors.
     unresolved = Estimate(
         evidence.noise.variance.value / total, evidence.noise.variance.error / total
@@ -152,8 +154,10 @@ def split(note: Note, evidence: Evidence) -> str:
         [
             text(label),
             number(truth.variance.value[k], truth.variance.error[k]),
-            f"{100 * resolved.variance[k] / total:.3g}",
-            number(truth.integral_time.value[k], truth.integral_time.error[k], scale=DAY),
+            number(100 * shares.value[k], 100 * shares.error[k]),
+            number(
+                truth.integral_time.value[k], truth.integral_time.error[k], scale=DAY
+            ),
         ]
         for k, label in enumerate(resolved.labels)
     ]
@@ -161,19 +165,14 @@ def split(note: Note, evidence: Evidence) -> str:
     return section(
         "The split",
         paragraphs(
-            f"{resolved.n_modes} modes are resolved and hold {kept:.3g} % of the "
-            f"variance of the truth; noise stands in for "
-            f"{divided.unresolved.n_modes} more, with {rest:.3g} %. The remaining "
-            f"{lost:.2g} % is in no mode and left out."
+            f"{resolved.n_modes} modes are resolved and hold {_sum(shares)} % of the "
+            "variance of the truth; noise stands in for "
+            f"{divided.unresolved.n_modes} more, with {_sum(unresolved)} %. In this "
+            f"record {lost:.2g} % lies in no mode and is left out."
         ),
         f"<ul>{notes}</ul>" if notes else "",
         note.figure(
-            lambda figures: figures.spectrum(
-                resolved=Estimate(
-                    truth.variance.value / total, truth.variance.error / total
-                ),
-                unresolved=unresolved,
-            ),
+            lambda figures: figures.spectrum(resolved=shares, unresolved=unresolved),
             alt="Share of variance against rank, on logarithmic axes, resolved modes "
             "as filled squares, unresolved ones as open circles.",
             caption="Variance by mode, ranked, as a share of that of the truth; bars "
@@ -205,3 +204,9 @@ def round_number(value: float) -> float:
 def _floats(estimate: Estimate) -> tuple[float, float]:
     """Value and error of a single estimate."""
     return float(estimate.value), float(estimate.error)
+
+
+def _sum(shares: Estimate) -> str:
+    """Sum of shares in percent; errors as of independent modes."""
+    error = float(np.sqrt((shares.error**2).sum()))
+    return number(100 * float(shares.value.sum()), 100 * error)

@@ -1,11 +1,7 @@
-"""Moments and distributions of time series, with errors by resampling blocks.
+"""Moments and distributions of time series, with errors by resampling.
 
-Series are as in :mod:`eddyshed.reduce.series`. Neighbouring values of a
-series are not independent, so whole blocks of it are drawn anew, each many
-integral times long (moving blocks: H. R. Kunsch (1989), Ann. Stat. 17, 1217;
-circular: D. N. Politis and J. P. Romano (1992), in "Exploring the Limits of
-Bootstrap", Wiley, 263). A block stays within one member, whose end is joined
-to its beginning.
+Series are as in :mod:`eddyshed.reduce.series`, and blocks of them are drawn
+as :mod:`eddyshed.reduce.blocks` says.
 """
 
 from __future__ import annotations
@@ -14,17 +10,15 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import integrate, special, stats
-from scipy.sparse import csr_array
 
 from eddyshed.solver.errors import DataError
 
+from .blocks import Blocks, resampled_means
 from .estimate import Estimate
 from .series import checked_series, checked_step
 from .statistics import correlation_scales
 
-BLOCK_TIMES = 8  # a block lasts at least so many integral times
-MOST_BLOCKS = 1000  # longer blocks rather than more: 2 % error of the error
-THRESHOLDS = 64  # values at which resampled distributions are compared
+THRESHOLDS = 32  # values at which resampled distributions are compared
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -106,22 +100,14 @@ def moments(
 
     Notes
     -----
-    The scatter of the resampled records is widened by three known factors:
-
-    - Centring on the mean of ``k`` blocks: ``1 / (1 - 1 / k)`` in variance.
-    - Correlation across the edges of a block of ``b`` samples, of which the
-      resampling knows nothing: for an AR(1) series of integral time ``m``
-      samples the variance of the mean lacks the fraction
-      ``(m - 1 / (4 m)) / b``.
-    - The variance has about ``1.5 (k - 1)`` degrees of freedom (M. S. Meketon
-      and B. Schmeiser (1984), Proc. Winter Simulation Conf., 227). The ratio
-      of Student's to the normal 97.5 % quantile makes 1.96 errors what they
-      are taken for.
+    Neither the finite number of blocks nor the correlation across their edges
+    shows in the scatter of the resampled records. It is widened by what they
+    are known to hide; see `eddyshed.reduce.blocks.Blocks`.
 
     Measured on 4000 Ornstein-Uhlenbeck series each, of 30, 100 and 300
     integral times, 1.96 errors hold the true mean in 93, 94 and 95 %, the
     variance in 86, 91 and 93 %, the skewness in 98, 95 and 95 % and the
-    kurtosis in 94, 89 and 91 % of records. Without the factors it is 82, 91
+    kurtosis in 94, 89 and 91 % of records. Without the widening it is 82, 91
     and 92 % for the mean and 74, 86 and 91 % for the variance.
     """
     where = "moments"
@@ -129,7 +115,7 @@ def moments(
     series = checked_series(series, where)
     _check_samples(samples, where)
     modes = series.shape[2]
-    blocks = _Blocks.of(series, step)
+    blocks = Blocks.of(series, step)
     value, error = np.empty((4, modes)), np.empty((4, modes))
     for mode in range(modes):
         part = series[:, :, mode]
@@ -138,7 +124,7 @@ def moments(
         part = (part - centre) / scale
         square = part * part
         columns = np.stack([part, square, square * part, square * square], axis=-1)
-        drawn = _resampled(columns, blocks.length[mode], rng, samples)
+        drawn = resampled_means(columns, blocks.length[mode], rng, samples)
         unit = np.array([scale, scale**2, 1.0, 1.0])
         value[:, mode] = unit * _central(columns.mean(axis=(0, 1)))
         error[:, mode] = unit * _central(drawn).std(axis=0, ddof=1)
@@ -175,6 +161,9 @@ def kolmogorov_smirnov(
 
     Notes
     -----
+    A series too short for its integral time to be known (see `integral_time`)
+    counts as a single value, and nothing is rejected.
+
     The probability is Kolmogorov's limit for ``sqrt(n m / (n + m))`` times
     the statistic, with the effective sizes n and m.
 
@@ -192,6 +181,8 @@ def kolmogorov_smirnov(
         scales = correlation_scales(series, step)
         scale = np.maximum(scales.time.value + step / 2, scales.squared.value)
         size[:] = series.shape[0] * series.shape[1] * step / scale
+        known = np.isfinite(scales.time.error + scales.squared.error)
+        size[~known] = 1.0
     statistic = np.empty(a.shape[2])
     for mode in range(a.shape[2]):
         first, second = (np.sort(x[:, :, mode], axis=None) for x in (a, b))
@@ -240,15 +231,20 @@ def wasserstein(
 
     Notes
     -----
-    The value is from all samples. The resampled distances are from every
-    quarter of an integral time (the rest is nearly the same again) and
-    from the distribution functions at 64 quantiles of either series.
+    The value is from all samples. Resampled distances are from the
+    distribution functions at 32 quantiles of either series, with blocks that
+    start at every eighth of their length; the rest is nearly the same again.
+
+    Measured on 500 pairs of Ornstein-Uhlenbeck series each, of 100, 300 and
+    1000 integral times and half a standard deviation apart, 1.96 errors hold
+    the true distance in 92, 95 and 93 % of pairs. Two series of one process
+    are 0.19, 0.11 and 0.06 apart, with errors of 0.14, 0.07 and 0.04.
     """
     where = "Wasserstein distance"
     two = _checked_two(a, b, step_a, step_b, where)
     a, b = two[0][0], two[1][0]
     _check_samples(samples, where)
-    blocks = [_Blocks.of(*both) for both in two]
+    blocks = [Blocks.of(*both) for both in two]
     levels = (np.arange(THRESHOLDS) + 0.5) / THRESHOLDS
     value, error = np.empty(a.shape[2]), np.empty(a.shape[2])
     for mode in range(a.shape[2]):
@@ -260,7 +256,7 @@ def wasserstein(
         for part, block in zip(pair, blocks, strict=True):
             piece = max(1, block.length[mode] // 8)
             length = block.length[mode] // piece
-            sums = _resampled(_pieces(part, grid, piece), length, rng, samples)
+            sums = resampled_means(_pieces(part, grid, piece), length, rng, samples)
             middle = sums.mean(axis=0)
             sums[:, :-2] = middle[:-2] + block.widening[mode] * (sums - middle)[:, :-2]
             drawn.append(sums)
@@ -274,59 +270,6 @@ def wasserstein(
         error[mode] = distance.std(ddof=1)
     resolved = blocks[0].resolved & blocks[1].resolved
     return Estimate(value, np.where(resolved, error, np.inf))
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class _Blocks:
-    """Blocks of each mode, counted in samples.
-
-    `length` is that of a block, `widening` what the scatter of resampled
-    records is multiplied by, and `resolved` says whether the record is long
-    enough to know.
-    """
-
-    length: np.ndarray
-    widening: np.ndarray
-    resolved: np.ndarray
-
-    @classmethod
-    def of(cls, series: np.ndarray, step: float) -> _Blocks:
-        members, times, _ = series.shape
-        count = members * times
-        scales = correlation_scales(series, step)
-        time = np.maximum(scales.time.value, scales.squared.value) / step
-        resolved = np.isfinite(scales.time.error + scales.squared.error)
-        length = np.maximum(np.ceil(BLOCK_TIMES * time), count // MOST_BLOCKS)
-        length = np.clip(length, 1, max(1, min(times, count // 3))).astype(int)
-        number = count / length
-        drawn = np.round(number)
-        # The bound matters only where the integral time is not known.
-        time = scales.time.value / step
-        edges = np.minimum((time - 1 / (4 * time)) / length, 0.5)
-        variance = drawn / number / (1 - 1 / number) / (1 - edges)
-        student = stats.t.ppf(0.975, 1.5 * (number - 1)) / stats.norm.ppf(0.975)
-        return cls(length, student * np.sqrt(variance), resolved)
-
-
-def _resampled(
-    columns: np.ndarray, block: int, rng: np.random.Generator, samples: int
-) -> np.ndarray:
-    """Means of records put together from blocks of a (member, time, column) array.
-
-    Sums over all possible blocks are differences of cumulative sums; a
-    sparse matrix picks and adds those drawn. The result is (sample, column).
-    """
-    members, times, width = columns.shape
-    count = members * times
-    total = np.zeros((members, times + block, width))
-    np.cumsum(columns, axis=1, out=total[:, 1 : times + 1])
-    total[:, times + 1 :] = total[:, times, None] + total[:, 1:block]
-    sums = (total[:, block:] - total[:, :-block]).reshape(count, width)
-    number = round(count / block)
-    starts = rng.integers(count, size=samples * number)
-    weights = np.full(starts.size, 1 / (number * block))
-    rows = np.arange(samples + 1) * number
-    return csr_array((weights, starts, rows), shape=(samples, count)) @ sums
 
 
 def _pieces(part: np.ndarray, grid: np.ndarray, piece: int) -> np.ndarray:

@@ -205,10 +205,10 @@ class StrangScheme:
             One step of what :meth:`colour` returned.
         """
         h, nx = self._step, self.n_observed
-        stage, total = state, 0.0
+        stage, total = state, np.zeros_like(state)
         for weight, reach in ((1, h / 2), (2, h / 2), (2, h), (1, 0.0)):
             slope = np.concatenate(self._drift(stage[:nx], stage[nx:]))
-            total = total + weight * slope
+            total += weight * slope
             if reach:
                 stage = state + reach * slope
         state += (h / 6) * total

@@ -8,19 +8,28 @@ from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.errors import DataError
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.segments import reached_step
-from eddyshed.solver.truth import build_ocean, plan_of, run_member
+from eddyshed.solver.truth import (
+    build_ocean,
+    initial_state,
+    plan_of,
+    run_member,
+    stirring_noise,
+)
 
 from .audit import audit
+from .bases.fourier import kept_coordinates
 from .benchmark import Score, Summary, Verdict, judge, score, summarise
 from .closures import CLOSURES, closure
 from .closures.data import ClosureData, coupling
 from .noise import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
+from .settings import FourierSettings, StudyConfig
 from .simulate import simulate, step_rule
 from .split import Split, split_truth, unresolved_series
 from .statistics import correlation_function, integral_time
@@ -34,6 +43,27 @@ SPIN_UP_TIMES = 5  # of a reduced model, in correlation times of the slowest mod
 RECORD_LENGTHS = 2  # of the truth, in all members of a reduced model together
 LOST_BOUND = 10  # times the largest excursion of the truth: a member is lost
 AT_REST = 1e-8  # of the truth's variance: a mode has come to rest
+
+
+def preflight(config: StudyConfig) -> None:
+    """Refuse now what would fail only after the truth was run.
+
+    Raises
+    ------
+    DataError
+        If a pattern, a band or the basis does not fit the grid.
+    """
+    ocean = build_ocean(config)
+    initial_state(config, ocean, 0)
+    stirring_noise(config, ocean)
+    if isinstance(config.resolved, FourierSettings):
+        kept_coordinates(config.resolved, ocean.waves)
+    elif config.resolved.modes >= ocean.size:
+        message = (
+            f"[resolved] modes = {config.resolved.modes}, but the grid has "
+            f"{ocean.size} coordinates and some must be left unresolved; ask for fewer"
+        )
+        raise DataError(message)
 
 
 def run_truth(study: Study, stamp: str) -> None:

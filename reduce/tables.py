@@ -61,14 +61,12 @@ def forecast_table(config: TruthConfig, found: Forecast, free: int) -> str:
         ["coordinates of the state", str(found.coordinates)],
         [
             "truth run",
-            
             f"{found.steps} steps of {format_quantity(config.time.step, 's')}",
-       ,
         ],
         [
             "processor time of the truth",
             format_quantity(found.seconds_per_step * found.steps, "s")
-            + f" ({1e6 * found.seconds_per_step:.0f} microseconds a step, as timed now)",
+            + f" ({1e6 * found.seconds_per_step:.0f} microseconds a step)",
         ],
         [
             "disk",
@@ -152,35 +150,26 @@ def _audit(study):
 
 def _benchmark(study):
     found = read_json(study.path("benchmark.json"))
-    labels, day = found["modes"], 86400.0
-    truth = found["truth"]["summary"]
-    rows = [["model", "quantity", *labels]]
-    unit = found["unit"]
-
-    def add(name, summary):
-        for quantity, title, scale in (
-            ("mean", f"mean [{unit}]", 1.0),
-            ("variance", f"variance [({unit})^2]", 1.0),
-            ("integral_time", "integral time [d]", day),
-        ):
-            numbers = summary[quantity]
-            rows.append(
-                [
-                    name,
-                    title,
-                    *(
-                        pair(v, e, scale=scale)
-                        for v, e in zip(numbers["value"], numbers["error"], strict=True)
-                    ),
-                ]
-            )
-
-    add("truth", truth)
-    for entry in found["closures"]:
-        if entry["summary"] is not None:
-            add(entry["name"], entry["summary"])
+    scored = [entry for entry in found["closures"] if entry["summary"] is not None]
+    series = {"truth": found["truth"]["summary"]}
+    series |= {entry["name"]: entry["summary"] for entry in scored}
+    rows = [["quantity", "mode", *series]]
+    for quantity, title, scale in (
+        ("mean", f"mean [{found['unit']}]", 1.0),
+        ("variance", f"variance [({found['unit']})^2]", 1.0),
+        ("integral_time", "integral time [d]", 86400.0),
+    ):
+        for mode, label in enumerate(found["modes"]):
+            cells = [
+                pair(
+                    summary[quantity]["value"][mode],
+                    summary[quantity]["error"][mode],
+                    scale=scale,
+                )
+                for summary in series.values()
+            ]
+            rows.append([title if mode == 0 else "", label, *cells])
     verdicts = [["closure", "verdict", "within sampling", "within tolerance", "speed"]]
-    after = []
     for entry in found["closures"]:
         verdict = entry["verdict"]
         count = verdict["count"]
@@ -193,8 +182,8 @@ def _benchmark(study):
                 f"{found['truth']['cost'] / entry['cost']:.3g} x truth",
             ]
         )
-        after.append(f"{entry['name']}: {verdict['reason']}")
-    return "\n\n".join([columns(rows), columns(verdicts), "\n".join(after)])
+    reasons = [f"{e['name']}: {e['verdict']['reason']}" for e in found["closures"]]
+    return "\n\n".join([columns(rows), columns(verdicts), "\n".join(reasons)])
 
 
 def _report(study):

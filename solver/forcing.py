@@ -118,8 +118,8 @@ class StirringNoise:
         The box.
     stirring : Stirring
         Energy rate and band.
-    exponents : ndarray of complex, shape (n_modes,)
-        The ocean's linear operator.
+    damping : ndarray, shape (n_modes,)
+        Linear damping rate of each mode [s-1].
     step : float
         Time step [s].
 
@@ -137,25 +137,25 @@ class StirringNoise:
         self,
         space: Periodic,
         stirring: Stirring,
-        exponents: np.ndarray,
+        damping: np.ndarray,
         step: float,
     ):
         self._where = np.flatnonzero(band_members(space, stirring.band))
         # Energy z.z/2: each of the 2n real coordinates gets rate s^2 / 2.
         intensity = stirring.energy_rate / len(self._where)
-        growth = 2 * exponents.real[self._where] * step
+        growth = -2 * damping[self._where] * step
         gathered = step * np.where(
             growth == 0, 1.0, np.expm1(growth) / np.where(growth == 0, 1.0, growth)
         )
         self._deviation = np.sqrt(intensity * gathered)
 
-    def add(self, modes: np.ndarray, rng: np.random.Generator) -> None:
+    def add(self, z: np.ndarray, rng: np.random.Generator) -> None:
         """Add one step's increment to a state, in place.
 
         Parameters
         ----------
-        modes : ndarray of complex, shape (n_modes,)
+        z : ndarray, shape (size,)
         rng : numpy.random.Generator
         """
         normals = rng.standard_normal(2 * len(self._where)).view(complex)
-        modes[self._where] += self._deviation * normals
+        z.view(complex)[self._where] += self._deviation * normals

@@ -71,9 +71,9 @@ def forecast(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
 def seconds_per_step(config: TruthConfig, *, seconds: float = 0.3) -> float:
     """Processor time of one step [s], from as many as fit in `seconds`."""
     ocean = build_ocean(config)
-    modes = initial_state(config, ocean, 0)
-    stepper = IntegratingFactorRK4(ocean.exponents, ocean.explicit, config.time.step)
-    run = integrate(stepper, modes, first_step=0, last_step=10**9, energy_bound=np.inf)
+    z = initial_state(config, ocean, 0)
+    stepper = IntegratingFactorRK4(ocean, config.time.step)
+    run = integrate(stepper, z, first_step=0, last_step=10**9, energy_bound=np.inf)
     first = next(run)  # it pays for what is made once
     start = time.process_time()
     step = next(step for step in run if time.process_time() - start > seconds)
@@ -91,7 +91,7 @@ def _bytes(stream):
 def _warnings(config: TruthConfig, ocean, plan: Plan):
     """What to look at before running."""
     step = config.time.step
-    damping = -ocean.exponents.real
+    damping = ocean.damping
     total = np.hypot(*ocean.space.waves.T)
     edge = damping[total >= total.max() - 1].max()
     if config.forcing and config.ocean.hyperviscosity == config.ocean.viscosity == 0:
@@ -99,7 +99,7 @@ def _warnings(config: TruthConfig, ocean, plan: Plan):
             "forced, but neither viscosity nor hyperviscosity takes enstrophy out "
             "at the smallest scales: noise will pile up at the cutoff"
         )
-    frequency = np.abs(ocean.exponents.imag).max()
+    frequency = ocean.fastest_frequency
     if frequency * step > 1:
         yield (
             f"the fastest wave turns by {frequency * step:.2g} radians in a step; "

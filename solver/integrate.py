@@ -14,7 +14,7 @@ CHECK_EVERY = 50  # steps; costs under a percent of a step and loses little work
 
 def integrate(
     stepper: IntegratingFactorRK4,
-    modes: np.ndarray,
+    z: np.ndarray,
     *,
     first_step: int,
     last_step: int,
@@ -27,7 +27,7 @@ def integrate(
     ----------
     stepper : IntegratingFactorRK4
         The scheme, its step included.
-    modes : ndarray of complex, shape (n_modes,)
+    z : ndarray, shape (size,)
         The state at `first_step`; changed in place.
     first_step, last_step : int
         Steps counted from the start of the run, whose time is zero.
@@ -49,21 +49,21 @@ def integrate(
     """
     for step in range(first_step + 1, last_step + 1):
         # Time is a product, not a running sum: a resumed run sees the same bits.
-        stepper.advance((step - 1) * stepper.step, modes)
+        stepper.advance((step - 1) * stepper.step, z)
         if stir is not None:
-            stir(modes)
+            stir(z)
         if step % CHECK_EVERY == 0 or step == last_step:
-            guard(modes, step, stepper.step, energy_bound)
+            guard(z, step, stepper.step, energy_bound)
         yield step
 
 
-def guard(modes: np.ndarray, step: int, interval: float, energy_bound: float) -> None:
+def guard(z: np.ndarray, step: int, interval: float, energy_bound: float) -> None:
     """Stop a run whose state has left the finite numbers or its energy bound.
 
     Parameters
     ----------
-    modes : ndarray of complex, shape (n_modes,)
-        The state.
+    z : ndarray, shape (size,)
+        The state, in energy-orthonormal coordinates.
     step : int
         Its step.
     interval : float
@@ -76,7 +76,7 @@ def guard(modes: np.ndarray, step: int, interval: float, energy_bound: float) ->
     Blowup
         If that is so.
     """
-    energy = np.vdot(modes, modes).real / 2
+    energy = float(z @ z) / 2
     if energy <= energy_bound:  # false for NaN as well
         return
     what = f"truth run blew up: energy {energy:.4g} m2 s-2"

@@ -90,12 +90,12 @@ class MemberFiles:
         paths = _segments(self.folder)
         return paths[-1] if paths else None
 
-    def restore(self, modes: np.ndarray, rng: np.random.Generator) -> int:
+    def restore(self, z: np.ndarray, rng: np.random.Generator) -> int:
         """Load the last checkpoint, if there is one, in place.
 
         Parameters
         ----------
-        modes : ndarray of complex, shape (n_modes,)
+        z : ndarray, shape (size,)
             Gets the state.
         rng : numpy.random.Generator
             Gets the state of the stirring's stream.
@@ -118,7 +118,7 @@ class MemberFiles:
         with open_file(self.last, kind="truth segment") as file:
             self._check_config(json.loads(file.attrs["config_json"]))
             group = file["checkpoint"]
-            modes.view(float)[:] = group["modes"][:]
+            z[:] = group["state"][:]
             rng.bit_generator.state = json.loads(group.attrs["stirring_stream"])
             return int(group.attrs["step"])
 
@@ -138,7 +138,7 @@ class MemberFiles:
         self,
         step: int,
         recorder: Recorder,
-        modes: np.ndarray,
+        z: np.ndarray,
         rng: np.random.Generator,
     ) -> None:
         """Write a segment: the records so far, and a checkpoint.
@@ -149,7 +149,7 @@ class MemberFiles:
             The step that was just completed.
         recorder : Recorder
             Holds the records; emptied.
-        modes : ndarray of complex, shape (n_modes,)
+        z : ndarray, shape (size,)
             The state.
         rng : numpy.random.Generator
             The stirring's stream.
@@ -169,7 +169,7 @@ class MemberFiles:
             add_axes(file, self._output, self._ocean)
             recorder.write(file)
             group = file.create_group("checkpoint", track_order=True)
-            group.create_dataset("modes", data=modes.view(float))
+            group.create_dataset("state", data=z)
             group.attrs["step"] = step
             # Its integers have 128 bits, more than an HDF5 integer holds.
             group.attrs["stirring_stream"] = json.dumps(rng.bit_generator.state)

@@ -55,7 +55,7 @@ def build_ocean(config: TruthConfig) -> Barotropic:
 
 
 def initial_state(config: TruthConfig, ocean: Barotropic, member: int) -> np.ndarray:
-    """State at time zero, shape (n_modes,), complex.
+    """State at time zero, shape (size,).
 
     Raises
     ------
@@ -73,7 +73,7 @@ def initial_state(config: TruthConfig, ocean: Barotropic, member: int) -> np.nda
         modes[where] = rng.standard_normal(2 * where.sum()).view(complex)
         energy = np.vdot(modes, modes).real / 2
         modes *= np.sqrt(config.initial.energy / energy)
-    return modes
+    return modes.view(float)
 
 
 def stirring_noise(config: TruthConfig, ocean: Barotropic) -> StirringNoise | None:
@@ -88,7 +88,7 @@ def stirring_noise(config: TruthConfig, ocean: Barotropic) -> StirringNoise | No
         return None
     try:
         return StirringNoise(
-            ocean.space, config.stirring, ocean.exponents, config.time.step
+            ocean.space, config.stirring, ocean.damping, config.time.step
         )
     except DataError as error:
         message = f"[stirring] {error}"
@@ -180,7 +180,7 @@ def run_member(
     plan = plan_of(config, ocean)
     noise = stirring_noise(config, ocean)
     rng = stream(config.seed, member, "stirring")
-    modes = initial_state(config, ocean, member)
+    z = initial_state(config, ocean, member)
     files = MemberFiles(
         folder,
         member,
@@ -191,7 +191,7 @@ def run_member(
         title=config.name,
         total=plan.total,
     )
-    first_step = files.restore(modes, rng)
+    first_step = files.restore(z, rng)
     step_length = config.time.step
     if first_step > plan.total:
         message = (
@@ -205,11 +205,11 @@ def run_member(
         return True
     recorder = Recorder(plan.streams, plan.spin_up)
     if first_step == 0:
-        recorder.record(0, 0.0, modes.view(float))
+        recorder.record(0, 0.0, z)
     log.info("member %d: step %d of %d", member, first_step, plan.total)
     advance = integrate(
-        IntegratingFactorRK4(ocean.exponents, ocean.explicit, step_length),
-        modes,
+        IntegratingFactorRK4(ocean, step_length),
+        z,
         first_step=first_step,
         last_step=plan.total,
         energy_bound=config.time.energy_bound,
@@ -217,12 +217,12 @@ def run_member(
     )
     try:
         for step in advance:
-            recorder.record(step, step * step_length, modes.view(float))
+            recorder.record(step, step * step_length, z)
             stopping = stop()
             if step % plan.segment == 0 or step == plan.total or stopping:
                 # A checkpoint is a promise that the run can go on from it.
-                guard(modes, step, step_length, config.time.energy_bound)
-                files.add(step, recorder, modes, rng)
+                guard(z, step, step_length, config.time.energy_bound)
+                files.add(step, recorder, z, rng)
                 progress(step)
             if stopping:
                 break

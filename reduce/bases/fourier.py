@@ -46,14 +46,7 @@ def fourier_basis(
     """
     waves = model.waves
     size = len(waves)
-    kept = _kept(settings, waves)
-    if kept.all() or not kept.any():
-        message = (
-            f"[resolved] keeps {'every' if kept.all() else 'no'} wave of the "
-            f"{size // 2} on this grid (largest: {np.abs(waves).max(axis=0).tolist()} "
-            "in x and y); change up_to, or the grid"
-        )
-        raise DataError(message)
+    kept = kept_coordinates(settings, waves)
     weights = metric(model)
     if weights.ndim == 2:
         message = (
@@ -78,8 +71,27 @@ def fourier_basis(
     )
 
 
-def _kept(settings, waves):
-    """Which coordinates a family of waves holds."""
+def kept_coordinates(settings: FourierSettings, waves: np.ndarray) -> np.ndarray:
+    """Which coordinates a family of waves holds.
+
+    Parameters
+    ----------
+    settings : FourierSettings
+        The family.
+    waves : ndarray of int, shape (size, 2)
+        Wavenumbers of each coordinate, in waves per box.
+
+    Returns
+    -------
+    ndarray of bool, shape (size,)
+
+    Raises
+    ------
+    DataError
+        If a wave is not on the grid, or nothing or everything is kept.
+    """
+    largest = np.abs(waves).max(axis=0).tolist()
+    total = np.hypot(*waves.T)
     if settings.family == "listed":
         kept = np.zeros(len(waves), dtype=bool)
         for wave in settings.waves:
@@ -87,19 +99,25 @@ def _kept(settings, waves):
             if not same.any():
                 message = (
                     f"[resolved] waves: {list(wave)} is not on this grid, which keeps "
-                    f"up to {np.abs(waves).max(axis=0).tolist()} in x and y"
+                    f"up to {largest} in x and y"
                 )
                 raise DataError(message)
             kept |= same
-        return kept
-    total = np.hypot(*waves.T)
-    if settings.up_to > total.max():
+    else:
+        if settings.up_to > total.max():
+            message = (
+                f"[resolved] up_to = {settings.up_to:g} lies beyond the grid, whose "
+                f"largest wavenumber is {total.max():.4g} waves per box"
+            )
+            raise DataError(message)
+        kept = total <= settings.up_to + 1e-9
+        if settings.family == "zonal":
+            kept &= waves[:, 0] == 0
+    if kept.all() or not kept.any():
         message = (
-            f"[resolved] up_to = {settings.up_to:g} lies beyond the grid, whose "
-            f"largest wavenumber is {total.max():.4g} waves per box"
+            f"[resolved] keeps {'every' if kept.all() else 'no'} wave of the "
+            f"{len(waves) // 2} on this grid (up to {largest} in x and y); change "
+            "up_to or waves, or the grid"
         )
         raise DataError(message)
-    kept = total <= settings.up_to + 1e-9
-    if settings.family == "zonal":
-        kept &= waves[:, 0] == 0
     return kept

@@ -13,7 +13,7 @@ Geophysical Fluid Dynamics (1987), chapters 3 and 4.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -70,7 +70,8 @@ class Barotropic:
     size : int
         Number of real coordinates, two for each complex mode.
     exponents : ndarray of complex, shape (n_modes,)
-        The linear operator, which is diagonal: beta term and friction [s-1].
+        The linear operator, which is diagonal and all of it treated exactly in
+        time: beta term and friction [s-1].
     energy_conserving : bool
         B does no work: ``inner(z, B(z, z)) = 0``.
 
@@ -162,33 +163,47 @@ class Barotropic:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
 
-    def explicit(self, t: float, modes: np.ndarray) -> np.ndarray:
-        """F + B(z, z): what is left when `exponents` are treated exactly.
+    @property
+    def damping(self) -> np.ndarray:
+        """Linear damping rate of each mode [s-1], shape (n_modes,)."""
+        return -self.exponents.real
+
+    @property
+    def fastest_frequency(self) -> float:
+        """Largest angular frequency of a linear wave [s-1]."""
+        return float(np.abs(self.exponents.imag).max())
+
+    def exact_flow(self, interval: float) -> Callable[[np.ndarray], np.ndarray]:
+        """Return the function ``z -> exp(A interval) z``."""
+        factor = np.exp(self.exponents * interval)
+        return lambda z: (z.view(complex) * factor).view(float)
+
+    def explicit(self, t: float, z: np.ndarray) -> np.ndarray:
+        """F + B(z, z): what is left when A is treated exactly.
 
         Parameters
         ----------
         t : float
             Model time [s].
-        modes : ndarray of complex, shape (n_modes,)
-            The coordinates as complex numbers.
+        z : ndarray, shape (size,)
 
         Returns
         -------
-        ndarray of complex, shape (n_modes,)
+        ndarray, shape (size,)
         """
-        result = self.space.advection(modes * self._to_psi)
+        result = self.space.advection(z.view(complex) * self._to_psi)
         result *= self._from_vorticity
         result += self._forcing
-        return result
+        return result.view(float)
 
     def tendency(self, t: float, z: np.ndarray) -> np.ndarray:
         """dz/dt [m s-2], shape (..., size): the sum of the three parts."""
-        modes = _as_modes(z)
-        rows = modes.reshape(-1, modes.shape[-1])
-        result = np.empty(rows.shape, dtype=complex)
-        for row, state in enumerate(rows):
-            result[row] = self.explicit(t, state) + self.exponents * state
-        return _as_real(result.reshape(modes.shape))
+        result = self.linear(z)
+        states = np.ascontiguousarray(z, dtype=float).reshape(-1, self.size)
+        rates = result.reshape(-1, self.size)
+        for i, state in enumerate(states):
+            rates[i] += self.explicit(t, state)
+        return result
 
     def budget(self, t: float, z: np.ndarray) -> dict[str, float]:
         """Energy, enstrophy and the sources and sinks of energy.
@@ -244,7 +259,7 @@ class Barotropic:
     def scales(self, z: np.ndarray | None = None) -> Iterable[tuple[str, float, str]]:
         """Derived scales as (name, value, unit), the flow's own if `z` is given."""
         k2 = self.space.k_squared
-        slowest = -self.exponents.real
+        damping = self.damping
         spacing = max(
             length / n
             for length, n in zip(self.space.lengths, self.space.points, strict=True)
@@ -252,13 +267,13 @@ class Barotropic:
         yield "grid spacing", spacing, "m"
         yield "shortest wavelength kept", 2 * np.pi / math.sqrt(k2.max()), "m"
         yield "deformation radius", self.settings.deformation_radius, "m"
-        if slowest.max() > 0:
-            yield "shortest damping time", 1 / slowest.max(), "s"
-        if slowest.min() > 0:
-            yield "longest damping time", 1 / slowest.min(), "s"
-        frequency = np.abs(self.exponents.imag).max()
-        if frequency > 0:
-            yield "shortest Rossby wave period", 2 * np.pi / frequency, "s"
+        if damping.max() > 0:
+            yield "shortest damping time", 1 / damping.max(), "s"
+        if damping.min() > 0:
+            yield "longest damping time", 1 / damping.min(), "s"
+        if self.fastest_frequency > 0:
+            period = 2 * np.pi / self.fastest_frequency
+            yield "shortest Rossby wave period", period, "s"
         if z is not None:
             energy = float(z @ z) / 2
             enstrophy = float((self.space.k_squared.repeat(2) * z * z).sum() / 2)

@@ -10,6 +10,9 @@ import tomllib
 from dataclasses import dataclass, fields
 
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
 from eddyshed.solver.config import (
     as_table,
     differing_keys,
@@ -20,8 +23,6 @@ from eddyshed.solver.config import (
     setting,
 )
 from eddyshed.solver.errors import ConfigError
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 section = dataclass(frozen=True, slots=True, kw_only=True)
 

@@ -7,6 +7,9 @@ from decimal import Decimal
 
 import pytest
 import scipy.constants
+from hypothesis import given
+from hypothesis import strategies as st
+
 from eddyshed.solver.quantities import (
     UNITS,
     dimension_name,
@@ -16,8 +19,6 @@ from eddyshed.solver.quantities import (
     parse_quantity,
     quoted,
 )
-from hypothesis import given
-from hypothesis import strategies as st
 
 
 @pytest.mark.parametrize(

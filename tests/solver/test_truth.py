@@ -13,8 +13,8 @@ import pytest
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.errors import Blowup, DataError, RunFolderError
 from eddyshed.solver.record import open_record
-from eddyshed.solver.settings import TruthConfig
 from eddyshed.solver.segments import member_paths
+from eddyshed.solver.settings import TruthConfig
 from eddyshed.solver.truth import build_ocean, run_member
 
 TINY = """
@@ -179,7 +179,7 @@ def test_a_kill_at_any_moment_loses_nothing_acknowledged(whole, tmp_path):
         index, segments = member_paths(tmp_path, 0)
         for path in segments.glob("segment-*.h5"):
             with h5py.File(path) as file:  # whole, with its checkpoint
-                assert "modes" in file["checkpoint"]
+                assert "state" in file["checkpoint"]
         if index.exists():
             open_record(index)
     assert kills > 0
@@ -264,7 +264,7 @@ def test_a_blow_up_keeps_its_checkpoint(tmp_path):
     assert last.name in str(caught.value)
     with h5py.File(last) as file:
         # Good: the run could go on from it.
-        state = file["checkpoint/modes"][...]
+        state = file["checkpoint/state"][...]
         assert (state**2).sum() / 2 <= config.time.energy_bound
 
 
