@@ -1,1 +1,37 @@
-"""Truth runs of simplified oceans."""
+"""Truth runs of simplified oceans.
+
+The names below are the public interface; everything else may change. They are
+loaded when first used, so that importing the package costs nothing.
+"""
+
+from importlib import import_module
+
+_PUBLIC = {
+    "as_table": "config",
+    "build_ocean": "truth",
+    "forecast": "forecast",
+    "open_record": "record",
+    "parse_config": "config",
+    "parse_quantity": "quantities",
+    "read_config": "config",
+    "run_member": "truth",
+    "stream": "randomness",
+    "Barotropic": "oceans.barotropic",
+    "EddyshedError": "errors",
+    "IntegratingFactorRK4": "stepping",
+    "Periodic": "spaces.periodic",
+    "TruthConfig": "settings",
+    "TruthRecord": "record",
+}
+__all__ = list(_PUBLIC)
+
+
+def __getattr__(name):
+    if name not in _PUBLIC:
+        message = f"module {__name__!r} has no attribute {name!r}"
+        raise AttributeError(message)
+    return getattr(import_module(f".{_PUBLIC[name]}", __name__), name)
+
+
+def __dir__():
+    return [*globals(), *__all__]

@@ -59,7 +59,7 @@ class Periodic:
         self.kx = 2 * np.pi / self.lengths[0] * self.waves[:, 0]
         self.ky = 2 * np.pi / self.lengths[1] * self.waves[:, 1]
         self.k_squared = self.kx**2 + self.ky**2
-        self._transform = ComplexTransform((ny, nx))
+        self._transform = ComplexTransform((ny, nx), cx)
         # Coefficients of the packed product, see `advection`.
         self._velocity = self.kx - 1j * self.ky
         self._minus_velocity = -self._velocity
@@ -79,32 +79,25 @@ class Periodic:
 
     def _scatter(self, at_wave, at_minus):
         """Place coefficients of k and of -k in the transform's input."""
-        modes, (nx, ny), (cx, cy) = self._transform.modes, self.points, self.cutoff
-        block, mirror = at_wave[cy:], at_minus[cy:]
-        block = block.reshape(2 * cy + 1, cx)
-        mirror = mirror.reshape(2 * cy + 1, cx)
-        backwards = slice(nx - 1, nx - cx - 1, -1)
+        modes, ny, (cx, cy) = self._transform.modes, self.points[1], self.cutoff
+        block = at_wave[cy:].reshape(2 * cy + 1, cx)
+        mirror = at_minus[cy:].reshape(2 * cy + 1, cx)
         modes[ny - cy :, 1 : cx + 1] = block[:cy]
         modes[: cy + 1, 1 : cx + 1] = block[cy:]
-        modes[cy::-1, backwards] = mirror[: cy + 1]
-        modes[ny - 1 : ny - cy - 1 : -1, backwards] = mirror[cy + 1 :]
+        modes[cy::-1, :cx:-1] = mirror[: cy + 1]
+        modes[ny - 1 : ny - cy - 1 : -1, :cx:-1] = mirror[cy + 1 :]
         modes[1 : cy + 1, 0] = at_wave[:cy]
         modes[ny - 1 : ny - cy - 1 : -1, 0] = at_minus[:cy]
 
     def _gather(self, at_wave, at_minus):
         """Read coefficients of k and of -k from the transform's output."""
-        spectrum, (nx, ny), (cx, cy) = (
-            self._transform.spectrum,
-            self.points,
-            self.cutoff,
-        )
+        spectrum, ny, (cx, cy) = self._transform.spectrum, self.points[1], self.cutoff
         block = at_wave[cy:].reshape(2 * cy + 1, cx)
         mirror = at_minus[cy:].reshape(2 * cy + 1, cx)
-        backwards = slice(nx - 1, nx - cx - 1, -1)
         block[:cy] = spectrum[ny - cy :, 1 : cx + 1]
         block[cy:] = spectrum[: cy + 1, 1 : cx + 1]
-        mirror[: cy + 1] = spectrum[cy::-1, backwards]
-        mirror[cy + 1 :] = spectrum[ny - 1 : ny - cy - 1 : -1, backwards]
+        mirror[: cy + 1] = spectrum[cy::-1, :cx:-1]
+        mirror[cy + 1 :] = spectrum[ny - 1 : ny - cy - 1 : -1, :cx:-1]
         at_wave[:cy] = spectrum[1 : cy + 1, 0]
         at_minus[:cy] = spectrum[ny - 1 : ny - cy - 1 : -1, 0]
 
