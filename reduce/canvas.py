@@ -13,8 +13,10 @@ from collections.abc import Callable, Sequence
 import matplotlib.style
 import numpy as np
 from matplotlib.axes import Axes
+from matplotlib.axis import Axis
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 
 WIDTH = 5.8  # inches: that of the column, so that text is as large as the page's
 DAY = 86400.0
@@ -25,20 +27,21 @@ RESOLUTION = 180  # dots per inch of maps: fine enough for print
 LOOK = {
     "font.family": "STIXGeneral",  # comes with matplotlib: the same everywhere
     "mathtext.fontset": "stix",
-    "font.size": 10.5,
-    "axes.labelsize": 10.5,
-    "axes.titlesize": 10.5,
+    "font.size": 11.5,
+    "axes.labelsize": 11.5,
+    "axes.titlesize": 11.5,
     "axes.titlelocation": "left",
     "axes.linewidth": 0.6,
     "axes.spines.top": False,
     "axes.spines.right": False,
-    "xtick.labelsize": 9.5,
-    "ytick.labelsize": 9.5,
+    "xtick.labelsize": 10.5,
+    "ytick.labelsize": 10.5,
     "xtick.major.width": 0.6,
     "ytick.major.width": 0.6,
-    "legend.fontsize": 10,
+    "legend.fontsize": 11,
     "legend.frameon": False,
-    "legend.handlelength": 2.4,
+    "legend.handlelength": 2.2,
+    "legend.handletextpad": 0.5,
     "lines.linewidth": 1.2,
     "lines.markersize": 3.6,
     "figure.facecolor": "none",
@@ -121,6 +124,16 @@ def legend(figure: Figure, axes: Axes) -> None:
     """One legend for all panels, above them."""
     handles, labels = axes.get_legend_handles_labels()
     figure.legend(handles, labels, loc="outside upper left", ncols=5, columnspacing=1.2)
+
+
+def logarithmic(axis: Axis) -> None:
+    """Make an axis logarithmic, with its ticks as plain numbers."""
+    axis.axes.set(**{f"{axis.axis_name}scale": "log"})
+    low, high = axis.get_view_interval()
+    narrow = high < 30 * low
+    axis.set_major_locator(LogLocator(subs=(1, 2, 5) if narrow else (1,)))
+    axis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+    axis.set_minor_formatter(NullFormatter())
 
 
 def in_math(unit: str) -> str:

@@ -17,6 +17,7 @@ from .canvas import (
     WIDTH,
     drawn,
     in_math,
+    logarithmic,
     power_of_ten,
     scaled_unit,
 )
@@ -190,7 +191,8 @@ def spectrum(*, resolved: Estimate, unresolved: Estimate) -> str:
                 elinewidth=0.7,
                 label=name,
             )
-        axes.set(xscale="log", yscale="log")
+        logarithmic(axes.xaxis)
+        logarithmic(axes.yaxis)
         axes.set(xlabel="rank of the mode", ylabel="share of the variance [%]")
         axes.legend()
 

@@ -19,10 +19,11 @@ from .canvas import (
     in_math,
     legend,
     letter,
+    logarithmic,
     panels,
 )
+from .curves import Correlation, Distribution
 from .estimate import Estimate
-from .measures import Correlation, Distribution
 
 HIGHEST = 1.8  # times the peak of the truth: where axes of density end
 
@@ -35,7 +36,7 @@ def noise(
     marked: np.ndarray,
     with_errors: int,
 ) -> str:
-    """Decay time and frequency of the noise against share of variance.
+    """Decay time of the noise, and frequency if any turns, against variance.
 
     Parameters
     ----------
@@ -48,40 +49,45 @@ def noise(
     with_errors : int
         The largest so many get error bars.
     """
-    time = Estimate(1 / decay.value / DAY, decay.error / decay.value**2 / DAY)
-    turning = Estimate(frequency.value * DAY, frequency.error * DAY)
+    shown = [
+        (
+            Estimate(1 / decay.value / DAY, decay.error / decay.value**2 / DAY),
+            "decay time [d]",
+        )
+    ]
+    if frequency.value.any():
+        turning = Estimate(frequency.value * DAY, frequency.error * DAY)
+        shown.append((turning, f"frequency [rad {in_math('d-1')}]"))
 
     def draw(figure):
-        left, right = figure.subplots(1, 2)
-        for axes, shown, name in (
-            (left, time, "decay time [d]"),
-            (right, turning, f"frequency [rad {in_math('d-1')}]"),
-        ):
+        all_axes = figure.subplots(1, len(shown), squeeze=False)[0]
+        for k, (axes, (value, name)) in enumerate(zip(all_axes, shown, strict=True)):
             for chosen, marker, face in ((~marked, "o", "white"), (marked, "x", TRUTH)):
                 if chosen.any():
                     axes.plot(
                         100 * shares[chosen],
-                        shown.value[chosen],
+                        value.value[chosen],
                         marker,
                         color=TRUTH,
                         markerfacecolor=face,
                         markeredgewidth=0.7,
                     )
             top = slice(None, with_errors)
-            known = np.where(np.isfinite(shown.error[top]), shown.error[top], 0.0)
+            known = np.where(np.isfinite(value.error[top]), value.error[top], 0.0)
             axes.errorbar(
                 100 * shares[top],
-                shown.value[top],
+                value.value[top],
                 yerr=2 * known,
                 fmt="none",
                 ecolor=HUES[1],
                 elinewidth=1.0,
                 zorder=0,
             )
-            axes.set(xscale="log", xlabel="share of the variance [%]", ylabel=name)
-        left.set(yscale="log", title="(a)")
-        right.set_title("(b)")
-        right.axhline(0, color=BAND, linewidth=0.6, zorder=0)
+            logarithmic(axes.xaxis)
+            axes.set(xlabel="share of the variance [%]", ylabel=name, title=letter(k))
+        logarithmic(all_axes[0].yaxis)
+        for axes in all_axes[1:]:
+            axes.axhline(0, color=BAND, linewidth=0.6, zorder=0)
 
     return drawn(2.9, draw)
 

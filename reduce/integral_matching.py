@@ -36,6 +36,8 @@ class Replicates:
     imbalance : ndarray, shape (batch + 1, n)
         Difference of the mean squares of two parts over their sum; zero for
         an unpaired coordinate.
+    unit : ndarray of int, shape (n,)
+        Number of the pair or single coordinate that each belongs to.
     uncorrected : ndarray of bool, shape (n,)
         Where `decay` and `frequency` are the raw ones.
     rate, rate_error, covariance : ndarray, shape (n, n)
@@ -49,6 +51,7 @@ class Replicates:
     raw_frequency: np.ndarray
     double_window_decay: np.ndarray
     imbalance: np.ndarray
+    unit: np.ndarray
     uncorrected: np.ndarray
     rate: np.ndarray
     rate_error: np.ndarray
@@ -81,7 +84,6 @@ def match_units(
     -------
     Replicates
     """
-    size = series.shape[2]
     record = series.shape[0] * series.shape[1] * step
     means = unit_means(series, bartlett_kernels(lags, step), batches, first, second)
     paired = second >= 0
@@ -97,11 +99,46 @@ def match_units(
     rate = np.where(uncorrected, raw, rate)
     wide = np.where(wide_solved.all(axis=0), wide, wide_raw)
 
-    owner = np.empty(size, dtype=int)  # unit of each coordinate
+    return replicates_of_units(
+        first, second, means.square, variance, raw, rate, wide, uncorrected
+    )
+
+
+def replicates_of_units(
+    first: np.ndarray,
+    second: np.ndarray,
+    squares: np.ndarray,
+    variance: np.ndarray,
+    raw: np.ndarray,
+    rate: np.ndarray,
+    wide: np.ndarray,
+    uncorrected: np.ndarray,
+) -> Replicates:
+    """Give each coordinate what was found for its unit.
+
+    Parameters
+    ----------
+    first, second : ndarray of int, shape (unit,)
+        Coordinates of the real and the imaginary part; -1 for no second.
+    squares : ndarray, shape (2, batch + 1, unit)
+        Mean squares of the two parts.
+    variance : ndarray, shape (batch + 1, unit)
+        Mean square of the unit, both parts together.
+    raw, rate, wide : ndarray of complex, shape (batch + 1, unit)
+        Rates as found, corrected for the window, and from twice the window.
+    uncorrected : ndarray of bool, shape (unit,)
+        Where `rate` is the raw one.
+
+    Returns
+    -------
+    Replicates
+    """
+    paired = second >= 0
+    owner = np.empty(len(first) + paired.sum(), dtype=int)  # unit of a coordinate
     owner[first] = np.arange(first.size)
     owner[second[paired]] = np.flatnonzero(paired)
+    difference = np.where(paired, squares[0] - squares[1], 0.0)
     variance = (variance / np.where(paired, 2, 1))[:, owner]
-    difference = np.where(paired, means.square[0] - means.square[1], 0.0)
     decay, frequency = rate.real[:, owner], rate.imag[:, owner]
     real, imag = first[paired], second[paired]
     matrix, error = np.diag(decay[0]), np.diag(jackknife_error(decay))
@@ -115,7 +152,8 @@ def match_units(
         raw_decay=raw.real[:, owner],
         raw_frequency=raw.imag[:, owner],
         double_window_decay=wide.real[:, owner],
-        imbalance=(difference / square)[:, owner],
+        imbalance=(difference / squares.sum(axis=0))[:, owner],
+        unit=owner,
         uncorrected=uncorrected[owner],
         rate=matrix,
         rate_error=error,
@@ -165,6 +203,7 @@ def match_matrix(
         raw_frequency=none,
         double_window_decay=_diagonals(wide),
         imbalance=none,
+        unit=np.arange(size),
         uncorrected=np.full(size, not solved),
         rate=rate[0],
         rate_error=jackknife_error(rate),

@@ -14,6 +14,8 @@ from dataclasses import dataclass
 from itertools import count
 from types import ModuleType
 
+from eddyshed.solver.quantities import UNITS
+
 from .estimate import Estimate
 
 STYLE = """\
@@ -54,12 +56,12 @@ th:last-child, td:last-child { padding-right: 0; }
 td { vertical-align: top; }
 tbody th { font-weight: inherit; vertical-align: top; }
 .figures { text-align: right; }
-td.figures, tbody th { white-space: nowrap; }
+td.figures, table code { white-space: nowrap; }
 th[scope=rowgroup] { font-style: italic; padding-top: .5rem; }
 tbody.group + tbody.group > tr:first-child > * { border-top: .75px solid #bdbdb6; }
 td.words { padding-bottom: .6rem; color: #333; min-width: 17rem; }
-.words p { margin: 0 0 .2rem; }
-code, pre { font: .84em/1.45 ui-monospace, "DejaVu Sans Mono", Menlo, monospace; }
+.words p { margin: 0 0 .2rem; max-width: calc(100vw - 2.4rem); }
+code, pre { font: .8em/1.45 ui-monospace, "DejaVu Sans Mono", Menlo, monospace; }
 pre { overflow-x: auto; border: .75px solid #bdbdb6; padding: .7rem .8rem; }
 p code, li code { overflow-wrap: anywhere; }
 @media (max-width: 30rem) {
@@ -67,10 +69,12 @@ p code, li code { overflow-wrap: anywhere; }
   h1 { font-size: 1.4rem; }
 }
 @media print {
-  @page { margin: 20mm 22mm; }
+  @page { margin: 20mm 30mm; }
   body { max-width: none; padding: 0; background: none; font-size: 10.5pt; }
-  figure, tbody.group { break-inside: avoid; }
-  h2, figcaption { break-after: avoid; }
+  figure, figcaption, tbody.group { break-inside: avoid; }
+  .table { break-inside: auto; }
+  figure img { width: 88%; max-height: 135mm; object-fit: contain; object-position: 0; }
+  h2, dt, .table > figcaption { break-after: avoid; }
   .scroll { overflow: visible; }
   pre { white-space: pre-wrap; }
 }
@@ -107,6 +111,11 @@ NO_PICTURE = (
 def text(value: object) -> str:
     """Text as HTML: whatever it holds, it is shown and not interpreted."""
     return html.escape(str(value), quote=True)
+
+
+def unbroken(value: object) -> str:
+    """The same, kept on one line."""
+    return text(value).replace(" ", "&nbsp;")
 
 
 def number(value: float | None, error: float | None, *, scale: float = 1.0) -> str:
@@ -151,6 +160,15 @@ def unit(si: str) -> str:
         text(si),
     )
     return raised.replace(" ", "&nbsp;")
+
+
+def span(seconds: float) -> str:
+    """A length of time to three figures, in years, days or hours, as HTML."""
+    for symbol in ("yr", "d", "h"):
+        size = float(UNITS[symbol][0])
+        if seconds >= (3 if symbol == "yr" else 1) * size or symbol == "h":
+            break
+    return f"{float(f'{seconds / size:.3g}'):g}&nbsp;{symbol}"
 
 
 def listed(items: Sequence[str]) -> str:
@@ -269,9 +287,9 @@ class Note:
             for group in groups
         )
         return (
-            f'<figure>\n<figcaption><span class="number">Table {self.tables}.</span> '
-            f'{caption}</figcaption>\n<div class="scroll" role="region" '
-            f'aria-label="Table {self.tables}" tabindex="0">\n<table>\n'
+            '<figure class="table">\n<figcaption><span class="number">Table '
+            f'{self.tables}.</span> {caption}</figcaption>\n<div class="scroll" '
+            f'role="region" aria-label="Table {self.tables}" tabindex="0">\n<table>\n'
             f"<thead><tr>{head}</tr></thead>\n{bodies}\n</table>\n</div>\n</figure>"
         )
 

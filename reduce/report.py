@@ -17,9 +17,20 @@ from eddyshed.solver.quantities import format_quantity
 
 from .benchmark import SAMPLING
 from .evidence import Evidence, gather
-from .markup import Note, listed, number, page, paragraphs, section, text
+from .markup import (
+    Note,
+    listed,
+    number,
+    page,
+    paragraphs,
+    section,
+    span,
+    text,
+    unbroken,
+)
 from .report_flow import flow, split
-from .report_models import models, noise
+from .report_models import models
+from .report_noise import noise
 from .settings import StudyConfig
 from .stages import STAGES
 from .study import Study, stamp
@@ -124,9 +135,9 @@ def opening(evidence: Evidence) -> str:
     return paragraphs(
         f"A {text(kind)} ocean ({text(OCEANS.get(kind, kind))}), in a box of {sides} "
         f"that repeats in both directions, on {points} grid points, was run for "
-        f"{format_quantity(evidence.length, 's')} after a spin-up of "
-        f"{format_quantity(config.time.spin_up, 's')}: {known} correlation times of "
-        f"its slowest resolved mode, {text(resolved.labels[slowest])}. Of its "
+        f"{span(evidence.length)} after a spin-up of {span(config.time.spin_up)}: "
+        f"{known} correlation times of its slowest resolved mode, "
+        f"{text(resolved.labels[slowest])}. Of its "
         f"{evidence.record.size} coordinates {resolved.n_modes} were kept. Each way to "
         "stand in for the rest, a closure, makes a reduced model; "
         f"{len(evidence.closures)} of them were scored against that run, here called "
@@ -183,7 +194,7 @@ def verdict(note: Note, evidence: Evidence) -> str:
         "seen, not whether it matters. With a truth long enough every approximation "
         "fails here; with a short one anything passes.</dd>\n"
         "<dt>Within tolerance</dt>\n<dd>The difference is small enough for use, by "
-        "bounds that were set in the config before the models were run: "
+        "bounds that the config sets: "
         f"{settings.mean_tolerance:g} standard deviations for the mean, "
         f"{settings.variance_tolerance:g} in the logarithm of the variance, "
         f"{settings.time_tolerance:g} in that of the integral time, and "
@@ -193,7 +204,8 @@ def verdict(note: Note, evidence: Evidence) -> str:
         paragraphs(
             "<em>Indistinguishable</em> is a closure with nine scores in ten within "
             "sampling error and none far outside it (Holm 1979, Scand. J. Statist. "
-            "6:65); <em>close</em> one whose means, variances and distributions all "
+            "6:65), if only because the records are too short to tell, which is then "
+            "said; <em>close</em> one whose means, variances and distributions all "
             "lie within tolerance, whatever its integral times; <em>off</em> any "
             "other; <em>failed</em> one that blew up or came to rest."
         ),
@@ -221,8 +233,8 @@ def audit(note: Note, evidence: Evidence) -> str:
                     text(finding["name"]),
                     f"<strong>{text(finding['verdict'])}</strong>",
                     number(finding["value"], finding["error"]),
-                    f"{text(finding['sense'])} {finding['threshold']:g}",
-                    text(finding["where"]),
+                    unbroken(f"{finding['sense']} {finding['threshold']:g}"),
+                    unbroken(finding["where"]),
                 ],
                 "".join(f"<p>{text(part)}</p>" for part in words),
             ]
@@ -232,7 +244,7 @@ def audit(note: Note, evidence: Evidence) -> str:
         note.table(
             ["assumption", "verdict", "value", "threshold", "worst mode"],
             groups,
-            words=(0, 1, 4),
+            words=(0, 1, 3, 4),
             caption="Assumptions of the closures, measured on the truth, in the mode "
             "that is placed worst. A verdict needs the whole 95 % interval, 1.96 "
             "standard errors to either side, on one side of the threshold. The "

@@ -8,7 +8,7 @@ from eddyshed.solver.quantities import format_quantity
 
 from .estimate import Estimate
 from .evidence import Evidence
-from .markup import Note, number, paragraphs, section, text, unit
+from .markup import Note, number, paragraphs, section, span, text, unbroken, unit
 from .measures import (
     EnergyBudget,
     batch_states,
@@ -60,7 +60,7 @@ def _map(note, evidence):
     strongest = int(np.abs(profile.value).argmax())
     _, ly = evidence.study.config.grid.lengths
     where = format_quantity(round(strongest * ly / len(profile.value), -3), "m")
-    when = format_quantity(float(record.times[-1] - record.times[0]), "s")
+    when = span(float(record.times[-1] - record.times[0]))
     return note.figure(
         lambda figures: figures.flow(
             vorticity=refined(fields["vorticity"], MAP_POINTS),
@@ -72,12 +72,12 @@ def _map(note, evidence):
         ),
         alt="Left, a map of relative vorticity in kilometres with contours of the "
         "streamfunction; right, eastward velocity averaged along x, by latitude. The "
-        f"strongest time-mean jet, {profile.value[strongest]:+.2g} ± {profile.error[strongest]:.1g} m/s, lies at "
-        f"y = {where}.",
+        f"strongest time-mean jet, {profile.value[strongest]:+.2g} ± "
+        f"{profile.error[strongest]:.1g} m/s, lies at y = {where}.",
         caption=f"(a) Relative vorticity of the last recorded state, {when} into the "
         "record: orange, which prints light, turns anticlockwise (above zero), blue "
         "clockwise. Contours: streamfunction, every "
-        f"{number(interval, 0.0)} {unit('m2 s-1')}, dashed below zero. (b) Eastward "
+        f"{interval:g}&nbsp;{unit('m2 s-1')}, dashed below zero. (b) Eastward "
         "velocity averaged along x: time mean (black, with two standard errors to "
         f"either side from {len(parts)} batch means) and that of the state in (a) "
         "(dashed).",
@@ -97,7 +97,7 @@ def _energy_figure(note, evidence, series):
     level = block_ranges(series["energy"], BLOCKS)
     work, *_ = block_ranges(series["work"], BLOCKS)
     loss, *_ = block_ranges(-series["dissipation"], BLOCKS)
-    block = f"{len(since) * record.step / len(middle) / DAY:.2g} d"
+    block = span(len(since) * record.step / len(middle))
     return note.figure(
         lambda figures: figures.energy(times=middle, level=level, work=work, loss=loss),
         alt="Two time series: energy above; below, the work of the forcing and the "
@@ -113,17 +113,17 @@ def _budget_table(note, evidence, budget: EnergyBudget):
     stirring = evidence.study.config.stirring
     energy, power = unit("m2 s-2"), unit("m2 s-3")
     rows = [
-        ["energy", number(*_floats(budget.energy)), energy],
-        ["work of the steady forcing", number(*_floats(budget.work)), power],
-        ["dissipation", number(*_floats(budget.dissipation)), power],
-        ["change of energy, end against start", number(*_floats(budget.change)), power],
-        ["residual", number(*_floats(budget.residual)), power],
+        [f"energy [{energy}]", number(*_floats(budget.energy))],
+        [f"work of the steady forcing [{power}]", number(*_floats(budget.work))],
+        [f"dissipation [{power}]", number(*_floats(budget.dissipation))],
+        [f"change, end against start [{power}]", number(*_floats(budget.change))],
+        [f"residual [{power}]", number(*_floats(budget.residual))],
     ]
     if stirring is None:
         after = (
             "The residual, change less work less dissipation, is what the sampled "
             "record fails to account for: zero but for the interval of the record "
-            f"({format_quantity(evidence.record.step, 's')}) and the errors of the "
+            f"({span(evidence.record.step)}) and the errors of the "
             "time step."
         )
     else:
@@ -132,9 +132,8 @@ def _budget_table(note, evidence, budget: EnergyBudget):
             f"fed; the config asks for {number(stirring.energy_rate, 0.0)} {power}."
         )
     return note.table(
-        ["mean over the record", "value", "unit"],
+        ["mean over the record", "value"],
         [rows],
-        words=(0, 2),
         caption=f"Energy budget. Standard errors from {budget.batches} batch means. "
         f"{after}",
     )
@@ -152,7 +151,7 @@ def split(note: Note, evidence: Evidence) -> str:
     )
     rows = [
         [
-            text(label),
+            unbroken(label),
             number(truth.variance.value[k], truth.variance.error[k]),
             number(100 * shares.value[k], 100 * shares.error[k]),
             number(

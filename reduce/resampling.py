@@ -126,8 +126,8 @@ def moments(
         columns = np.stack([part, square, square * part, square * square], axis=-1)
         drawn = resampled_means(columns, blocks.length[mode], rng, samples)
         unit = np.array([scale, scale**2, 1.0, 1.0])
-        value[:, mode] = unit * _central(columns.mean(axis=(0, 1)))
-        error[:, mode] = unit * _central(drawn).std(axis=0, ddof=1)
+        value[:, mode] = unit * central_moments(columns.mean(axis=(0, 1)))
+        error[:, mode] = unit * central_moments(drawn).std(axis=0, ddof=1)
         value[0, mode] += centre
     error *= np.where(blocks.resolved, blocks.widening, np.inf)
     return Moments(*map(Estimate, value, error), block=blocks.length * step)
@@ -297,8 +297,18 @@ def _pieces(part: np.ndarray, grid: np.ndarray, piece: int) -> np.ndarray:
     return np.column_stack([below, *powers]).reshape(members, -1, bins + 1)
 
 
-def _central(raw: np.ndarray) -> np.ndarray:
-    """Mean, variance, skewness and kurtosis from four raw moments (last axis)."""
+def central_moments(raw: np.ndarray) -> np.ndarray:
+    """Mean, variance, skewness and kurtosis from four moments about zero.
+
+    Parameters
+    ----------
+    raw : ndarray, shape (..., 4)
+        Means of the first to fourth powers.
+
+    Returns
+    -------
+    ndarray, shape (..., 4)
+    """
     first, second, third, fourth = np.moveaxis(raw, -1, 0)
     variance = second - first**2
     third = third - 3 * first * second + 2 * first**3

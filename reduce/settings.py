@@ -67,6 +67,14 @@ class UnresolvedSettings:
 class NoiseFitSettings:
     """How the Ornstein-Uhlenbeck noise is fitted."""
 
+    match: str = setting(
+        default="auto",
+        choices=("auto", "integral", "product"),
+        doc="what the noise shares with the unresolved modes beside their variance. "
+        "integral: that of the lag covariance, which linear coupling feels; product: "
+        "that of the squared correlation, which quadratic coupling feels; auto: by "
+        "which coupling is larger along the truth",
+    )
     window: float | None = setting(
         default=None,
         unit="s",

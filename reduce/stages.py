@@ -25,7 +25,8 @@ from .audit import audit
 from .bases.fourier import kept_coordinates
 from .benchmark import Score, Summary, Verdict, judge, score, summarise
 from .closures import CLOSURES, closure
-from .closures.data import ClosureData, coupling
+from .closures.data import ClosureData
+from .coupling import coupling, coupling_sizes
 from .noise import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
@@ -114,10 +115,22 @@ def run_reduce(study: Study, stamp: str) -> None:
     if window is None:
         times = integral_time(y[np.newaxis], record.step).value
         window = window_rule(times, split.unresolved.variance, record.step)
+    linear, quadratic = coupling_sizes(operators, split.x, y)
+    log.info(
+        "reduce: unresolved modes reach the resolved ones by linear terms of "
+        "%.3g and quadratic terms of %.3g %s per second (rms)",
+        linear,
+        quadratic,
+        ocean.unit,
+    )
+    match = config.noise.match
+    if match == "auto":
+        match = "product" if quadratic > linear else "integral"
     noise = fit_ornstein_uhlenbeck(
         y[np.newaxis],
         record.step,
         window=window,
+        match=match,
         partners=split.unresolved.partners,
         labels=split.unresolved.labels,
     )

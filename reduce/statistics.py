@@ -287,7 +287,7 @@ def covariance(series: np.ndarray, *, batches: int = 20) -> Estimate:
     """
     where = "covariance"
     series = checked_series(series, where)
-    flat = series.reshape(-1, series.shape[2])
+    flat = series.reshape(series.shape[0] * series.shape[1], series.shape[2])
     if not 2 <= batches <= len(flat):
         message = (
             f"{where}: {batches} batches of a record of {len(flat)} samples, allowed "

@@ -216,16 +216,18 @@ def run_member(
         stir=None if noise is None else lambda state: noise.add(state, rng),
     )
     try:
-        for step in advance:
-            recorder.record(step, step * step_length, z)
-            stopping = stop()
-            if step % plan.segment == 0 or step == plan.total or stopping:
-                # A checkpoint is a promise that the run can go on from it.
-                guard(z, step, step_length, config.time.energy_bound)
-                files.add(step, recorder, z, rng)
-                progress(step)
-            if stopping:
-                break
+        # A state on its way out overflows before it is caught: say so once, well.
+        with np.errstate(over="ignore", invalid="ignore"):
+            for step in advance:
+                recorder.record(step, step * step_length, z)
+                stopping = stop()
+                if step % plan.segment == 0 or step == plan.total or stopping:
+                    # A checkpoint is a promise that the run can go on from it.
+                    guard(z, step, step_length, config.time.energy_bound)
+                    files.add(step, recorder, z, rng)
+                    progress(step)
+                if stopping:
+                    break
     except Blowup as error:
         last = files.last
         kept = (

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..contract import Model
+from ..coupling import coupling
 from ..noise import NoiseFit
 from ..operators import Operators
 from ..split import Split
@@ -51,20 +52,5 @@ class ClosureData:
 
     @property
     def coupling(self) -> np.ndarray:
-        """What the unresolved modes do to the resolved ones, shape (n_time, nx).
-
-        The full resolved tendency less that of the truncated equation, so it
-        holds what is in no mode at all as well [state unit s-1].
-        """
+        """What the unresolved modes do to the resolved ones, shape (n_time, nx)."""
         return coupling(self.split, self.operators)
-
-
-def coupling(split: Split, operators: Operators) -> np.ndarray:
-    """Resolved tendency less that of the truncated equation, (n_time, nx)."""
-    x = split.x
-    truncated = (
-        operators.F1
-        + x @ operators.A11.T
-        + np.einsum("ijk,tj,tk->ti", operators.B111, x, x, optimize=True)
-    )
-    return split.tendency - truncated

@@ -98,8 +98,8 @@ def test_scatter_of_correlations():
         # Four standard errors; the next order in 1 / n is that of 53 values in
         # the mean, 1 / 53. Products lost beyond the ends take lag / n.
         tolerance = 4 * relative_error_of_variance(modes) + 2 / 53
-        expected *= 1 - lag / times
-        assert found[lag].var(ddof=1) == pytest.approx(expected, rel=tolerance)
+        scatter = found[lag].var(ddof=1) / (1 - lag / times)
+        assert scatter == pytest.approx(expected, rel=tolerance)
 
 
 def test_bootstrap_errors_of_moments():
