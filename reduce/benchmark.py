@@ -1,274 +1,210 @@
-"""Reduced models against the truth: scores, each with errors from both sides.
-
-Two statements are made and never merged. *Within sampling error*: the
-difference is no larger than the two finite records leave open. *Within
-tolerance*: the difference is small enough for use, by bounds in the config.
-With a long truth every approximate closure fails the first; with a short one
-every closure passes it, and the score says so.
-"""
+"""Reduced models run as long as the truth, and set beside it."""
 
 from __future__ import annotations
 
+import time
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
-from scipy.special import erfc
 
-from .resampling import kolmogorov_smirnov, moments, wasserstein
-from .settings import BenchmarkSettings
-from .statistics import Estimate, integral_time
+from eddyshed.solver.randomness import stream
 
-SAMPLING = 2.0  # standard errors within which two numbers agree
-QUANTITIES = ("mean", "variance", "integral time", "distribution")
+from .closures import CLOSURES
+from .reduced import ReducedModel
+from .scores import Summary, Verdict, judge, score, summarise
+from .settings import StudyConfig
+from .simulate import simulate, step_rule
+from .simulated import Simulated
+from .split import Split
+from .statistics import correlation_function
+from .store import plain
 
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Summary:
-    """Statistics of one set of series of the resolved modes.
-
-    Attributes
-    ----------
-    mean, variance, integral_time : Estimate, shape (mode,)
-        In the state unit, its square, and seconds.
-    """
-
-    mean: Estimate
-    variance: Estimate
-    integral_time: Estimate
+LAGS = 120  # of the correlation functions that are kept for the report
+SPIN_UP_TIMES = 5  # of a reduced model, in correlation times of the slowest mode
+RECORD_LENGTHS = 2  # of the truth, in all members of a reduced model together
+LOST_BOUND = 10  # times the largest excursion of the truth: a member is lost
+AT_REST = 1e-8  # of the truth's variance: a mode has come to rest
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Score:
-    """One quantity of a closure against the truth, for every mode.
+class TruthSide:
+    """The truth, as reduced models are compared with it.
 
     Attributes
     ----------
-    quantity : str
-        One of `QUANTITIES`.
-    difference : Estimate, shape (mode,)
-        Mean: difference in standard deviations of the truth. Variance and
-        integral time: logarithm of the ratio. Distribution: Wasserstein
-        distance in standard deviations of the truth.
-    sampling : ndarray of bool, shape (mode,)
-        Within sampling error.
-    tolerance : float
-        Bound on the difference.
-    close : ndarray of bool, shape (mode,)
-        Within tolerance.
-    p_value : ndarray, shape (mode,)
-        Probability of a larger difference if there were none.
+    split : Split
+        The divided truth.
+    series : ndarray, shape (1, time, mode)
+        Resolved coordinates, not centred.
+    step : float
+        Sampling interval [s].
+    summary : Summary
+        Its statistics.
+    lags : ndarray of int, shape (n_lags,)
+        Lags of the correlation functions in samples, dense at first, up to
+        three times the slowest integral time.
     """
 
-    quantity: str
-    difference: Estimate
-    sampling: np.ndarray
-    tolerance: float
-    close: np.ndarray
-    p_value: np.ndarray
+    split: Split
+    series: np.ndarray
+    step: float
+    summary: Summary
+    lags: np.ndarray
+
+    def correlations(self, series: np.ndarray) -> np.ndarray:
+        """Correlation functions at the lags, shape (n_lags, mode)."""
+        return correlation_function(series, int(self.lags[-1]))[self.lags]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Verdict:
-    """What the scores of a closure come to.
-
-    Attributes
-    ----------
-    word : str
-        ``indistinguishable``, ``close``, ``undecided``, ``off`` or ``failed``.
-    reason : str
-        Why, in a sentence.
-    within_sampling, within_tolerance, count : int
-        How many scores pass each statement, of how many.
-    """
-
-    word: str
-    reason: str
-    within_sampling: int
-    within_tolerance: int
-    count: int
-
-
-def summarise(series: np.ndarray, step: float, rng: np.random.Generator) -> Summary:
-    """Statistics of series of the resolved modes.
+def truth_side(split: Split, seed: int) -> TruthSide:
+    """Prepare the truth for comparison.
 
     Parameters
     ----------
-    series : ndarray, shape (member, time, mode)
-        In the state unit.
-    step : float
-        Sampling interval [s].
-    rng : numpy.random.Generator
-        For the bootstrap.
+    split : Split
+        The divided truth.
+    seed : int
+        Entropy of the study.
 
     Returns
     -------
-    Summary
+    TruthSide
 
     Raises
     ------
     DataError
-        If a mode is constant or the series too short.
+        If a resolved mode is constant or the truth too short.
     """
-    found = moments(series, step, rng=rng)
-    return Summary(
-        mean=found.mean,
-        variance=found.variance,
-        integral_time=integral_time(series, step),
-    )
+    series = (split.fine_x + split.resolved_mean)[np.newaxis]
+    step = split.fine_step
+    summary = summarise(series, step, stream(seed, 0, "truth statistics"))
+    longest = 3 * summary.integral_time.value.max() / step
+    spread = np.geomspace(1, np.clip(longest, 2, series.shape[1] / 4), LAGS)
+    lags = np.unique(np.concatenate([[0], np.round(spread)])).astype(int)
+    return TruthSide(split=split, series=series, step=step, summary=summary, lags=lags)
 
 
-def score(
-    settings: BenchmarkSettings,
-    truth: np.ndarray,
-    truth_step: float,
-    truth_summary: Summary,
-    reduced: np.ndarray,
-    reduced_step: float,
-    reduced_summary: Summary,
-    rng: np.random.Generator,
-) -> list[Score]:
-    """Set a reduced model against the truth.
+def run_closure(
+    config: StudyConfig,
+    model: ReducedModel,
+    truth: TruthSide,
+    progress: Callable[[int, int], None],
+) -> Simulated:
+    """Run a reduced model from states of the truth.
 
     Parameters
     ----------
-    settings : BenchmarkSettings
-        The tolerances.
-    truth, reduced : ndarray, shape (member, time, mode)
-        Series of the resolved modes in the same coordinates.
-    truth_step, reduced_step : float
-        Sampling intervals [s].
-    truth_summary, reduced_summary : Summary
-        Their statistics.
-    rng : numpy.random.Generator
-        For the bootstrap.
+    config : StudyConfig
+        Section ``[benchmark]``, and the seed.
+    model : ReducedModel
+        The model.
+    truth : TruthSide
+        Gives the starts, the sampling interval and the length.
+    progress : callable
+        Told how many units of work are done, of how many.
 
     Returns
     -------
-    list of Score
-        One for each of `QUANTITIES`.
+    Simulated
     """
-    deviation = np.sqrt(truth_summary.variance.value)
-    mean = Estimate(
-        (reduced_summary.mean.value - truth_summary.mean.value) / deviation,
-        np.hypot(reduced_summary.mean.error, truth_summary.mean.error) / deviation,
+    split, interval, seed = truth.split, truth.step, config.seed
+    members = config.benchmark.members
+    step, every = step_rule(model, np.sqrt(split.resolved.variance), interval=interval)
+    duration = config.benchmark.duration
+    if duration is None:
+        duration = RECORD_LENGTHS * len(split.x) * split.step / members
+    spin_up = SPIN_UP_TIMES * float(truth.summary.integral_time.value.max())
+    skip = int(np.ceil(spin_up / interval))
+    n_steps = (skip + int(np.ceil(duration / interval))) * every
+    starts = stream(seed, 0, f"starts of {model.name}").integers(
+        len(split.x), size=members
     )
-    distance = wasserstein(reduced, truth, reduced_step, truth_step, rng=rng)
-    test = kolmogorov_smirnov(reduced, truth, reduced_step, truth_step)
-    scores = [
-        _by_error("mean", mean, settings.mean_tolerance),
-        _by_error(
-            "variance",
-            log_ratio(reduced_summary.variance, truth_summary.variance),
-            settings.variance_tolerance,
-        ),
-        _by_error(
-            "integral time",
-            log_ratio(reduced_summary.integral_time, truth_summary.integral_time),
-            settings.time_tolerance,
-        ),
-    ]
-    scores.append(
-        Score(
-            quantity="distribution",
-            difference=distance,
-            sampling=test.p_value > 0.05,
-            tolerance=settings.distribution_tolerance,
-            close=distance.value < settings.distribution_tolerance,
-            p_value=test.p_value,
+    before = time.process_time()
+    trajectory = simulate(
+        model,
+        split.x[starts],
+        step=step,
+        n_steps=n_steps,
+        every=every,
+        streams=[stream(seed, k, f"noise of {model.name}") for k in range(members)],
+        bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=1).max()),
+        progress=progress,
+    )
+    seconds = time.process_time() - before
+    return Simulated(
+        series=trajectory.series[:, skip:] + split.resolved_mean,
+        start=float(trajectory.times[skip]),
+        step=interval,
+        lost=trajectory.lost,
+        cost=seconds / (n_steps * step * members),
+    )
+
+
+def compare(
+    config: StudyConfig, name: str, truth: TruthSide, run: Simulated
+) -> dict[str, Any]:
+    """Score a reduced model.
+
+    Parameters
+    ----------
+    config : StudyConfig
+        Section ``[benchmark]``, and the seed.
+    name : str
+        The closure.
+    truth : TruthSide
+    run : Simulated
+
+    Returns
+    -------
+    dict
+        Plain data: ``name``, ``what`` it is, members ``lost``, ``cost``,
+        ``verdict``, and ``summary`` and ``scores``, which are None and empty
+        for a model that gives no statistics.
+    """
+    labels = truth.split.resolved.labels
+    summary, scores, verdict = None, [], _failure(truth, run)
+    if verdict is None:
+        rng = stream(config.seed, 0, f"scores of {name}")
+        summary = summarise(run.series, run.step, rng)
+        scores = score(
+            config.benchmark,
+            truth.series,
+            truth.step,
+            truth.summary,
+            run.series,
+            run.step,
+            summary,
+            rng,
         )
-    )
-    return scores
-
-
-def log_ratio(a: Estimate, b: Estimate) -> Estimate:
-    """Logarithm of a ratio of positive estimates, errors to first order."""
-    return Estimate(
-        np.log(a.value / b.value), np.hypot(a.error / a.value, b.error / b.value)
-    )
-
-
-def _by_error(quantity, difference, tolerance):
-    """Score a difference whose error is known and near normal."""
-    with np.errstate(invalid="ignore"):
-        z = np.abs(difference.value) / difference.error
-    z = np.where(np.isfinite(difference.error), z, 0.0)
-    return Score(
-        quantity=quantity,
-        difference=difference,
-        sampling=z < SAMPLING,
-        tolerance=tolerance,
-        close=np.abs(difference.value) < tolerance,
-        p_value=erfc(z / np.sqrt(2)),
-    )
-
-
-def judge(scores: list[Score], labels: tuple[str, ...]) -> Verdict:
-    """Sum up the scores of a closure.
-
-    Parameters
-    ----------
-    scores : list of Score
-        All its scores.
-    labels : tuple of str
-        Names of the modes.
-
-    Returns
-    -------
-    Verdict
-
-    Notes
-    -----
-    *Indistinguishable*: nine scores in ten lie within sampling error, and the
-    smallest p-value stands up to Holm's correction for the number of scores
-    at five percent (Holm 1979, Scand. J. Statist. 6:65). *Close*: every mean,
-    variance and distribution lies within tolerance. *Off*: one of them is
-    beyond its tolerance by more than two standard errors. *Undecided*:
-    neither; longer records would tell. Integral times are scored and counted
-    but not asked of a close closure: one that gets the slow modes' memory
-    wrong can still serve for their climate.
-    """
-    sampling = np.concatenate([s.sampling for s in scores])
-    close = np.concatenate([s.close for s in scores])
-    p_values = np.concatenate([s.p_value for s in scores])
-    asked = [s for s in scores if s.quantity != "integral time"]
-    counts = {
-        "within_sampling": int(sampling.sum()),
-        "within_tolerance": int(close.sum()),
-        "count": len(sampling),
+        verdict = judge(scores, labels)
+    return {
+        "name": name,
+        "what": CLOSURES[name],
+        "lost": [list(pair) for pair in run.lost],
+        "cost": run.cost,
+        "summary": plain(summary),
+        "scores": plain(scores),
+        "verdict": plain(verdict),
     }
-    if sampling.mean() >= 0.9 and p_values.min() > 0.05 / len(p_values):
-        word, reason = "indistinguishable", _furthest(scores, labels)
-        wide = [s for s in asked if np.any(s.difference.error > s.tolerance / 2)]
-        if wide:
-            names = " and ".join(s.quantity for s in wide)
-            reason += (
-                f"; but the records are too short to tell: errors of the {names} are "
-                "above half the tolerance"
-            )
-    elif all(s.close.all() for s in asked):
-        word, reason = "close", _furthest(scores, labels)
-    elif any(np.any(_excess(s) > SAMPLING) for s in asked):
-        word, reason = "off", _furthest(asked, labels)
+
+
+def _failure(truth: TruthSide, run: Simulated) -> Verdict | None:
+    """Verdict on a model that gives no statistics, if that is so."""
+    labels = truth.split.resolved.labels
+    if run.lost:
+        first = min(when for _, when in run.lost)
+        reason = (
+            f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
+            f"{first / 86400:.4g} days"
+        )
     else:
-        word, reason = "undecided", _furthest(asked, labels)
-        reason += ", by less than its sampling error"
-    return Verdict(word=word, reason=reason, **counts)
-
-
-def _excess(score):
-    """Standard errors by which each mode is beyond its tolerance."""
-    beyond = np.abs(score.difference.value) - score.tolerance
-    return beyond / score.difference.error
-
-
-def _furthest(scores, labels):
-    """Name the mode and quantity furthest from the truth, by its tolerance."""
-    worst = max(
-        scores, key=lambda s: float(np.max(np.abs(s.difference.value))) / s.tolerance
-    )
-    mode = int(np.argmax(np.abs(worst.difference.value)))
-    size = abs(worst.difference.value[mode]) / worst.tolerance
-    return (
-        f"furthest from the truth: {worst.quantity} of {labels[mode]}, at {size:.2g} "
-        "of its tolerance"
+        variance = run.series.var(axis=(0, 1))
+        rest = variance < AT_REST * truth.summary.variance.value
+        if not rest.any():
+            return None
+        reason = f"{labels[int(np.argmax(rest))]} comes to rest: it has no variance"
+    return Verdict(
+        word="failed", reason=reason, within_sampling=0, within_tolerance=0, count=0
     )

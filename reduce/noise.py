@@ -35,7 +35,7 @@ MATCHES = ("integral", "product")
 WINDOW_TIMES = 8  # integral times in the default window
 FEWEST_BATCHES = 4  # a scatter of fewer is no error
 SHORTEST_WINDOW = 4  # samples; fewer are no integral
-FEWEST_WINDOWS = 20  # in a record: the variance is then known to a third or so
+FEWEST_WINDOWS = 20  # in a record: integrals are then known to a quarter
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False, repr=False)

@@ -1,8 +1,9 @@
-"""The simulated series of a reduced model, on disk."""
+"""The simulated series of a reduced model, in memory and on disk."""
 
 from __future__ import annotations
 
 import json
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -16,20 +17,35 @@ from eddyshed.solver.files import (
     open_file,
 )
 
-from .simulate import Trajectory
-
 KIND = "simulated"
 
 
-def save(
-    path: Path,
-    stamp: str,
-    title: str,
-    series: np.ndarray,
-    interval: float,
-    trajectory: Trajectory,
-    cost: float,
-) -> None:
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Simulated:
+    """Series of a reduced model after its spin-up.
+
+    Attributes
+    ----------
+    series : ndarray, shape (member, time, mode)
+        Resolved coordinates, not centred; NaN once a member was lost.
+    start : float
+        Model time of the first record [s].
+    step : float
+        Sampling interval [s].
+    lost : tuple of (int, float)
+        Members that blew up, and when [s].
+    cost : float
+        Processor time over model time, per member.
+    """
+
+    series: np.ndarray
+    start: float
+    step: float
+    lost: tuple[tuple[int, float], ...]
+    cost: float
+
+
+def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
     """Write the series of a reduced model.
 
     Parameters
@@ -40,55 +56,49 @@ def save(
         Fingerprint of what it was made from.
     title : str
         CF title.
-    series : ndarray, shape (member, time, mode)
-        Resolved coordinates after the spin-up.
-    interval : float
-        Sampling interval [s].
-    trajectory : Trajectory
-        The whole run, for the members that were lost.
-    cost : float
-        Processor time over model time, per member.
+    run : Simulated
+        What to write.
     """
-    members, n_time, n_modes = series.shape
+    members, n_time, n_modes = run.series.shape
     attributes = {
         "fingerprint": stamp,
-        "interval": interval,
-        "cost": cost,
-        "lost": json.dumps([list(pair) for pair in trajectory.lost]),
+        "step": run.step,
+        "cost": run.cost,
+        "lost": json.dumps([list(pair) for pair in run.lost]),
     }
     with new_file(path, kind=KIND, title=title, attributes=attributes) as file:
         add_scale(file, "member", np.arange(members), long_name="member")
-        add_time(file, "time", trajectory.times[-n_time:])
+        add_time(file, "time", run.start + run.step * np.arange(n_time))
         add_scale(file, "mode", np.arange(n_modes), long_name="resolved mode")
         add_variable(
             file,
             "x",
             ("member", "time", "mode"),
-            series,
+            run.series,
             long_name="resolved coordinates",
         )
 
 
-def load(
-    path: Path, stamp: str
-) -> tuple[np.ndarray, tuple[tuple[int, float], ...], float, float] | None:
-    """Read the series back: series, lost members, cost and interval [s].
+def load(path: Path, stamp: str) -> Simulated | None:
+    """Read the series back.
 
     Returns
     -------
-    tuple or None
+    Simulated or None
         None if the file is missing, damaged, or made from something else.
     """
     try:
         with open_file(path, kind=KIND) as file:
             if file.attrs["fingerprint"] != stamp:
                 return None
-            lost = tuple((int(k), float(t)) for k, t in json.loads(file.attrs["lost"]))
-            return (
-                file["x"][:],
-                lost,
-                float(file.attrs["cost"]),
-                float(file.attrs["interval"]),
+            return Simulated(
+                series=file["x"][:],
+                start=float(file["time"][0]),
+                step=float(file.attrs["step"]),
+                lost=tuple(
+                    (int(k), float(t)) for k, t in json.loads(file.attrs["lost"])
+                ),
+                cost=float(file.attrs["cost"]),
             )
     except DataError:
         return None

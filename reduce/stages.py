@@ -3,11 +3,10 @@
 from __future__ import annotations
 
 import logging
-import time
-from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.config import fingerprint
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
@@ -23,27 +22,21 @@ from eddyshed.solver.truth import (
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
-from .benchmark import Score, Summary, Verdict, judge, score, summarise
-from .closures import CLOSURES, closure
+from .benchmark import compare, run_closure, truth_side
+from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
 from .noise import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
 from .settings import FourierSettings, StudyConfig
-from .simulate import simulate, step_rule
+from .simulated import load, save
 from .split import Split, split_truth, unresolved_series
-from .statistics import correlation_function, integral_time
+from .statistics import integral_time
 from .store import plain, read_one, write_all, write_json
-from .study import Interrupted, Stage, Study
+from .study import Interrupted, Stage, Study, fingerprint_of
 
 log = logging.getLogger(__name__)
-
-LAGS = 120  # of the correlation functions that are kept for the report
-SPIN_UP_TIMES = 5  # of a reduced model, in correlation times of the slowest mode
-RECORD_LENGTHS = 2  # of the truth, in all members of a reduced model together
-LOST_BOUND = 10  # times the largest excursion of the truth: a member is lost
-AT_REST = 1e-8  # of the truth's variance: a mode has come to rest
 
 
 def preflight(config: StudyConfig) -> None:
@@ -193,170 +186,68 @@ def run_audit(study: Study, stamp: str) -> None:
 def run_benchmark(study: Study, stamp: str) -> None:
     """Simulate every closure and score it."""
     config, split = study.config, read_split(study)
-    labels = split.resolved.labels
-    truth = (split.fine_x + split.resolved_mean)[np.newaxis]
-    truth_summary = summarise(
-        truth, split.fine_step, stream(config.seed, 0, "truth statistics")
-    )
-    lags = _lags(split, truth_summary)
-    results = []
-    correlations = {"truth": _correlations(truth, lags)}
+    truth = truth_side(split, config.seed)
+    entries, correlations = [], {"truth": truth.correlations(truth.series)}
     for name in config.closures.use:
-        series, lost, cost, interval = _simulated(study, name, split, truth_summary)
-        entry: dict[str, Any] = {
-            "name": name,
-            "what": CLOSURES[name],
-            "lost": [list(pair) for pair in lost],
-            "cost": cost,
-            "summary": None,
-            "scores": [],
-        }
-        verdict = _failure(series, lost, truth_summary, labels)
-        if verdict is None:
-            summary, scores, verdict = _scored(
-                study, name, split, truth, truth_summary, series, interval
-            )
-            entry |= {"summary": plain(summary), "scores": plain(scores)}
-            correlations[name] = _correlations(series, lags)
-        entry["verdict"] = plain(verdict)
-        results.append(entry)
-    ocean = build_ocean(config)
+        run = _simulated(study, name, truth)
+        entry = compare(config, name, truth, run)
+        entries.append(entry)
+        if entry["summary"] is not None:
+            correlations[name] = truth.correlations(run.series)
     write_json(
         study.path("benchmark.json"),
         stamp,
         {
-            "modes": list(labels),
-            "unit": ocean.unit,
+            "modes": list(split.resolved.labels),
+            "unit": build_ocean(config).unit,
             "truth": {
-                "length": len(truth[0]) * split.fine_step,
-                "summary": plain(truth_summary),
+                "length": truth.series.shape[1] * truth.step,
+                "summary": plain(truth.summary),
                 "cost": seconds_per_step(config) / config.time.step,
             },
-            "closures": results,
+            "closures": entries,
             "correlation": {
-                "lags": (lags * split.fine_step).tolist(),
+                "lags": (truth.lags * truth.step).tolist(),
                 **{name: values.tolist() for name, values in correlations.items()},
             },
         },
     )
 
 
-def _simulated(study, name, split, truth_summary):
-    """Series of a reduced model, from its file if that is fresh, else run now."""
-    from .simulated import load, save
-
-    config = study.config
-    path = study.path(f"simulated/{name}.h5")
-    stamp = simulation_stamp(study, name)
+def _simulated(study, name, truth):
+    """Run of a reduced model: from its file if that is fresh, else made now."""
+    path, stamp = study.path(f"simulated/{name}.h5"), simulation_stamp(study, name)
     found = load(path, stamp)
     if found is not None:
         log.info("benchmark: %s: simulation reused", name)
         return found
-    model = read_model(study, name)
-    members, interval = config.benchmark.members, split.fine_step
-    scale = np.sqrt(split.resolved.variance)
-    step, every = step_rule(model, scale, interval=interval)
-    duration = config.benchmark.duration
-    if duration is None:
-        duration = RECORD_LENGTHS * len(split.x) * split.step / members
-    spin_up = SPIN_UP_TIMES * float(truth_summary.integral_time.value.max())
-    skip = int(np.ceil(spin_up / interval))
-    n_steps = (skip + int(np.ceil(duration / interval))) * every
-    starts = stream(config.seed, 0, f"starts of {name}").integers(
-        len(split.x), size=members
-    )
-    before = time.process_time()
-    with progress(name, n_steps, quiet=study.quiet) as shown:
-        path_of_members = simulate(
-            model,
-            split.x[starts],
-            step=step,
-            n_steps=n_steps,
-            every=every,
-            streams=[
-                stream(config.seed, k, f"noise of {name}") for k in range(members)
-            ],
-            bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=1).max()),
-            progress=lambda done, total: shown.to(n_steps * done // total),
+    with progress(name, 1, quiet=study.quiet) as shown:
+        run = run_closure(
+            study.config,
+            read_model(study, name),
+            truth,
+            progress=lambda done, total: shown.to(done / total),
         )
-    seconds = time.process_time() - before
-    cost = seconds / (n_steps * step * members)
-    series = path_of_members.series[:, skip:] + split.resolved_mean
-    save(path, stamp, f"{config.name}: {name}", series, interval, path_of_members, cost)
-    return series, path_of_members.lost, cost, interval
+    save(path, stamp, f"{study.config.name}: {name}", run)
+    return run
 
 
 def simulation_stamp(study: Study, name: str) -> str:
     """Fingerprint of a simulation: its closure and how it is run."""
-    from eddyshed.solver.config import as_table, fingerprint
-
-    from .study import stamp
-
     benchmark = study.config.benchmark
     return fingerprint(
         {
             "closure": name,
-            "after": stamp(study, STAGES, "reduce"),
+            "after": fingerprint_of(study, STAGES, "reduce"),
             "members": benchmark.members,
             "duration": benchmark.duration,
-            "seed": as_table(study.config)["seed"],
         }
     )
 
 
-def _failure(series, lost, truth_summary, labels) -> Verdict | None:
-    """Verdict on a model that gives no statistics, if that is so."""
-    if lost:
-        first = min(when for _, when in lost)
-        reason = (
-            f"{len(lost)} of {len(series)} members blew up, the first after "
-            f"{first / 86400:.4g} days"
-        )
-    else:
-        rest = series.var(axis=(0, 1)) < AT_REST * truth_summary.variance.value
-        if not rest.any():
-            return None
-        reason = f"{labels[int(np.argmax(rest))]} comes to rest: it has no variance"
-    return Verdict(
-        word="failed", reason=reason, within_sampling=0, within_tolerance=0, count=0
-    )
-
-
-def _scored(
-    study, name, split, truth, truth_summary, series, interval
-) -> tuple[Summary, list[Score], Verdict]:
-    """Scores of a reduced model and what they come to."""
-    rng = stream(study.config.seed, 0, f"scores of {name}")
-    summary = summarise(series, interval, rng)
-    scores = score(
-        study.config.benchmark,
-        truth,
-        split.fine_step,
-        truth_summary,
-        series,
-        interval,
-        summary,
-        rng,
-    )
-    return summary, scores, judge(scores, split.resolved.labels)
-
-
-def _lags(split, truth_summary):
-    """Lags in samples, dense at first, up to three times the slowest time."""
-    longest = 3 * truth_summary.integral_time.value.max() / split.fine_step
-    longest = min(longest, len(split.fine_x) / 4)
-    spread = np.geomspace(1, max(2, longest), LAGS)
-    return np.unique(np.concatenate([[0], np.round(spread)])).astype(int)
-
-
-def _correlations(series, lags):
-    """Correlation function at some lags, shape (lag, mode)."""
-    return correlation_function(series, int(lags[-1]))[lags]
-
-
 def run_report(study: Study, stamp: str) -> None:
     """Write the report."""
-    from .report import write_report
+    from .report.page import write_report
 
     write_report(study, stamp)
 

@@ -106,7 +106,7 @@ class Interrupted(Exception):
     """Work was asked to stop, and stopped with a checkpoint."""
 
 
-def stamp(study: Study, stages: dict[str, Stage], name: str) -> str:
+def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
     """Fingerprint that the files of a stage must carry to be reused."""
     stage = stages[name]
     table = as_table(study.config)
@@ -118,14 +118,16 @@ def stamp(study: Study, stages: dict[str, Stage], name: str) -> str:
             "stage": name,
             "version": version("eddyshed"),
             "config": {key: table.get(key) for key in stage.sections},
-            "after": {other: stamp(study, stages, other) for other in stage.after},
+            "after": {
+                other: fingerprint_of(study, stages, other) for other in stage.after
+            },
         }
     )
 
 
 def is_fresh(study: Study, stages: dict[str, Stage], name: str) -> tuple[bool, str]:
     """Whether a stage can be reused, and why not if it cannot."""
-    wanted = stamp(study, stages, name)
+    wanted = fingerprint_of(study, stages, name)
     for output in stages[name].outputs:
         path = study.path(output)
         if not path.exists():
@@ -166,7 +168,7 @@ def bring_up_to_date(study: Study, stages: dict[str, Stage], name: str) -> None:
         log.info("%s: up to date, reused", name)
         return
     log.info("%s: running, because %s", name, why)
-    stages[name].run(study, stamp(study, stages, name))
+    stages[name].run(study, fingerprint_of(study, stages, name))
 
 
 @contextmanager

@@ -123,7 +123,8 @@ def _reduce(study):
         f"variance ({', '.join(split.resolved.labels)})\n"
         f"unresolved: {split.unresolved.n_modes} modes, {100 * unresolved:.3g} %\n"
         f"in no mode: {100 * left:.2g} %\n"
-        f"noise: {noise.structure}, matches the {noise.match}, window {format_quantity(noise.window, 's')}"
+        f"noise: {noise.structure}, matches the {noise.match} over a window of "
+        f"{format_quantity(noise.window, 's')}"
     )
     return "\n".join([text, *(f"note: {note}" for note in noise.notes)])
 

@@ -4,14 +4,14 @@ import numpy as np
 import pytest
 from scipy import signal, stats
 
-from eddyshed.reduce.curves import (
+from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.report.curves import (
     density,
     large_lag_error,
     process_correlation,
     rotating_units,
     unit_correlation,
 )
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
 
 
 @pytest.fixture

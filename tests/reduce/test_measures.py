@@ -6,7 +6,8 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
-from eddyshed.reduce.measures import (
+from eddyshed.reduce.report.flow import round_number
+from eddyshed.reduce.report.measures import (
     batch_edges,
     batch_states,
     block_ranges,
@@ -15,7 +16,6 @@ from eddyshed.reduce.measures import (
     of_batches,
     refined,
 )
-from eddyshed.reduce.report_flow import round_number
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
 from eddyshed.solver.spaces.periodic import Periodic
 

@@ -11,13 +11,13 @@ from xml.etree import ElementTree
 import numpy as np
 import pytest
 
-from eddyshed.reduce.evidence import gather
-from eddyshed.reduce.markup import number, page, span, text, unit
-from eddyshed.reduce.report import figures_module, render, write_report
+from eddyshed.reduce.report.evidence import gather
+from eddyshed.reduce.report.markup import number, page, span, text, unit
+from eddyshed.reduce.report.page import figures_module, render, write_report
 from eddyshed.reduce.settings import StudyConfig
 from eddyshed.reduce.stages import STAGES
 from eddyshed.reduce.store import read_fingerprint, read_json
-from eddyshed.reduce.study import Study, bring_up_to_date, is_fresh, stamp
+from eddyshed.reduce.study import Study, bring_up_to_date, fingerprint_of, is_fresh
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.errors import DataError
 
@@ -147,7 +147,7 @@ class TestPage:
     def test_says_its_language_title_and_width(self, study, walk):
         assert walk.tags("html") == [{"lang": "en"}]
         named = {meta.get("name"): meta.get("content") for meta in walk.tags("meta")}
-        assert named["fingerprint"] == stamp(study, STAGES, "report")
+        assert named["fingerprint"] == fingerprint_of(study, STAGES, "report")
         assert "width=device-width" in named["viewport"]
         assert len(walk.tags("title")) == len(walk.tags("h1")) == 1
 
@@ -201,7 +201,7 @@ class TestPage:
         odd = {"font.size": 30.0, "svg.hashsalt": "other", "axes.facecolor": "red"}
         with mpl.rc_context(odd):
             again = render(
-                gather(study), stamp(study, STAGES, "report"), figures_module()
+                gather(study), fingerprint_of(study, STAGES, "report"), figures_module()
             )
             assert {key: mpl.rcParams[key] for key in odd} == odd
         assert again == html
@@ -259,7 +259,7 @@ class TestContent:
 
     def test_lists_the_fingerprints_and_seeds(self, study, html):
         for name in ("truth", "reduce", "audit", "benchmark"):
-            assert stamp(study, STAGES, name) in html
+            assert fingerprint_of(study, STAGES, name) in html
         assert "drawn from seed 3" in words(html)
 
     def test_names_a_failed_closure_and_why(self, evidence):
@@ -314,7 +314,7 @@ class TestContent:
 class TestStage:
     def test_is_fresh_once_written(self, study, html):
         path = study.path("report.html")
-        assert read_fingerprint(path) == stamp(study, STAGES, "report")
+        assert read_fingerprint(path) == fingerprint_of(study, STAGES, "report")
         assert is_fresh(study, STAGES, "report") == (True, "")
         assert list(study.folder.glob(".*.partial")) == []
 
@@ -322,7 +322,7 @@ class TestStage:
         path = study.path("report.html")
         monkeypatch.setitem(sys.modules, "matplotlib", None)  # its import fails now
         assert figures_module() is None
-        write_report(study, stamp(study, STAGES, "report"))
+        write_report(study, fingerprint_of(study, STAGES, "report"))
         plain = path.read_text(encoding="utf-8")
         # Stale, so that the same command draws the pictures when it can.
         fresh, _ = is_fresh(study, STAGES, "report")
@@ -375,7 +375,7 @@ class TestWords:
 
 class TestColours:
     def test_the_map_keeps_its_order_in_grey_and_is_grey_at_zero(self):
-        from eddyshed.reduce.canvas import VORTICITY
+        from eddyshed.reduce.report.canvas import VORTICITY
 
         rgb = VORTICITY(np.linspace(0, 1, 101))[:, :3]
         # Relative luminance of sRGB (IEC 61966-2-1), then lightness (CIE 1976).
@@ -388,8 +388,8 @@ class TestColours:
         assert np.ptp(rgb[50]) < 0.03
 
     def test_closures_differ_in_hue_dash_and_marker(self):
-        from eddyshed.reduce.canvas import closure_style
         from eddyshed.reduce.closures import CLOSURES
+        from eddyshed.reduce.report.canvas import closure_style
 
         styles = [closure_style(k) for k in range(len(CLOSURES))]
         for key in ("color", "dashes", "marker"):

@@ -8,7 +8,7 @@ import numpy as np
 
 from eddyshed.solver.record import TruthRecord
 
-from .estimate import Estimate
+from ..estimate import Estimate
 
 BATCHES = 20  # batch means: common practice, the error is then known to a sixth
 

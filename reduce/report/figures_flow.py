@@ -8,6 +8,7 @@ from __future__ import annotations
 import numpy as np
 from matplotlib.ticker import MaxNLocator
 
+from ..estimate import Estimate
 from .canvas import (
     BAND,
     DAY,
@@ -21,7 +22,6 @@ from .canvas import (
     power_of_ten,
     scaled_unit,
 )
-from .estimate import Estimate
 
 YEAR = 365.25 * DAY
 

@@ -6,7 +6,7 @@ import numpy as np
 
 from eddyshed.solver.quantities import format_quantity
 
-from .estimate import Estimate
+from ..estimate import Estimate
 from .evidence import Evidence
 from .markup import Note, number, paragraphs, section, span, text, unbroken, unit
 from .measures import (

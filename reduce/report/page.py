@@ -15,8 +15,12 @@ from eddyshed.solver.errors import ConfigError
 from eddyshed.solver.files import replacing
 from eddyshed.solver.quantities import format_quantity
 
-from .benchmark import SAMPLING
+from ..scores import SAMPLING
+from ..settings import StudyConfig
+from ..stages import STAGES
+from ..study import Study, fingerprint_of
 from .evidence import Evidence, gather
+from .flow import flow, split
 from .markup import (
     Note,
     listed,
@@ -28,12 +32,8 @@ from .markup import (
     text,
     unbroken,
 )
-from .report_flow import flow, split
-from .report_models import models
-from .report_noise import noise
-from .settings import StudyConfig
-from .stages import STAGES
-from .study import Study, stamp
+from .models import models
+from .noise import noise
 
 OCEANS = {"barotropic": "one layer of quasi-geostrophic flow on a beta plane"}
 CAUTION = (
@@ -206,8 +206,10 @@ def verdict(note: Note, evidence: Evidence) -> str:
             "sampling error and none far outside it (Holm 1979, Scand. J. Statist. "
             "6:65), if only because the records are too short to tell, which is then "
             "said; <em>close</em> one whose means, variances and distributions all "
-            "lie within tolerance, whatever its integral times; <em>off</em> any "
-            "other; <em>failed</em> one that blew up or came to rest."
+            "lie within tolerance, whatever its integral times; <em>off</em> one of "
+            "which any of these is beyond its tolerance by more than two standard "
+            "errors; <em>undecided</em> any other; <em>failed</em> one that blew up or "
+            "came to rest."
         ),
     )
 
@@ -269,7 +271,9 @@ def reproduce(note: Note, evidence: Evidence) -> str:
         [
             f"<code>{name}</code>",
             what,
-            f"<code>{stamp(study, STAGES, stage)}</code>" if stage else "in each file",
+            f"<code>{fingerprint_of(study, STAGES, stage)}</code>"
+            if stage
+            else "in each file",
         ]
         for name, stage, what in files
     ]

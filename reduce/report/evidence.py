@@ -11,14 +11,14 @@ from eddyshed.solver.oceans.barotropic import Barotropic
 from eddyshed.solver.record import TruthRecord
 from eddyshed.solver.truth import build_ocean
 
-from .benchmark import Summary
-from .estimate import Estimate
-from .noise import NoiseFit
-from .simulated import load
-from .split import Split
-from .stages import read_noise, read_split, simulation_stamp
-from .store import read_json
-from .study import Study
+from ..estimate import Estimate
+from ..noise import NoiseFit
+from ..scores import Summary
+from ..simulated import load
+from ..split import Split
+from ..stages import read_noise, read_split, simulation_stamp
+from ..store import read_json
+from ..study import Study
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -83,10 +83,17 @@ class Evidence:
         return [entry for entry in self.closures if entry["summary"] is None]
 
     def simulated(self, name: str) -> np.ndarray | None:
-        """Series of a closure, shape (member, time, mode); None if not on disk."""
+        """Series of a closure less the mean of the truth; None if not on disk.
+
+        Returns
+        -------
+        ndarray, shape (member, time, mode), or None
+        """
         path = self.study.path(f"simulated/{name}.h5")
         found = load(path, simulation_stamp(self.study, name))
-        return None if found is None else found[0]
+        if found is None:
+            return None
+        return found.series - self.split.resolved_mean
 
 
 def gather(study: Study) -> Evidence:

@@ -9,6 +9,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
+from ..estimate import Estimate
 from .canvas import (
     BAND,
     DAY,
@@ -23,7 +24,6 @@ from .canvas import (
     panels,
 )
 from .curves import Correlation, Distribution
-from .estimate import Estimate
 
 HIGHEST = 1.8  # times the peak of the truth: where axes of density end
 

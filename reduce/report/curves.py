@@ -7,10 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .estimate import Estimate
+from ..estimate import Estimate
+from ..ornstein_uhlenbeck import OrnsteinUhlenbeck
+from ..statistics import autocovariance, effective_size
 from .measures import batch_edges, of_batches
-from .ornstein_uhlenbeck import OrnsteinUhlenbeck
-from .statistics import autocovariance, effective_size
 
 BARTLETT = "Bartlett 1946, J. R. Stat. Soc. Suppl. 8:27"  # of `large_lag_error`
 

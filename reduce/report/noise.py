@@ -6,6 +6,8 @@ import dataclasses
 
 import numpy as np
 
+from ..estimate import Estimate
+from ..split import unresolved_series
 from .curves import (
     BARTLETT,
     Correlation,
@@ -14,10 +16,8 @@ from .curves import (
     rotating_units,
     unit_correlation,
 )
-from .estimate import Estimate
 from .evidence import Evidence
 from .markup import Note, paragraphs, section, span, text
-from .split import unresolved_series
 
 LARGEST = 3  # modes whose correlation function is shown
 WITH_ERRORS = 12  # modes with error bars

@@ -1,0 +1,1 @@
+"""The report: one HTML page with everything that a reader must see."""
