@@ -1,1 +1,44 @@
-"""Reduced stochastic models, and the evidence for or against them."""
+"""Reduced stochastic models, and the evidence for or against them.
+
+The names below are the public interface; everything else may change. They are
+loaded when first used, so that importing the package costs nothing.
+"""
+
+from importlib import import_module
+
+_PUBLIC = {
+    "check_model": "contract",
+    "closure": "closures",
+    "fit_ornstein_uhlenbeck": "noise",
+    "galerkin": "operators",
+    "integral_time": "statistics",
+    "kolmogorov_smirnov": "resampling",
+    "moments": "resampling",
+    "project": "contract",
+    "simulate": "simulation",
+    "step_rule": "simulation",
+    "wasserstein": "resampling",
+    "window_rule": "noise",
+    "Basis": "bases.basis",
+    "ClosureData": "closures.data",
+    "Estimate": "estimate",
+    "Model": "contract",
+    "NoiseFit": "noise",
+    "Operators": "operators",
+    "OrnsteinUhlenbeck": "ornstein_uhlenbeck",
+    "ReducedModel": "reduced",
+    "Split": "split",
+    "StudyConfig": "settings",
+}
+__all__ = list(_PUBLIC)
+
+
+def __getattr__(name):
+    if name not in _PUBLIC:
+        message = f"module {__name__!r} has no attribute {name!r}"
+        raise AttributeError(message)
+    return getattr(import_module(f".{_PUBLIC[name]}", __name__), name)
+
+
+def __dir__():
+    return [*globals(), *__all__]

@@ -15,7 +15,7 @@ from .closures import CLOSURES
 from .reduced import ReducedModel
 from .scores import Summary, Verdict, judge, score, summarise
 from .settings import StudyConfig
-from .simulate import simulate, step_rule
+from .simulation import simulate, step_rule
 from .simulated import Simulated
 from .split import Split
 from .statistics import correlation_function

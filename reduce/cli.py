@@ -154,14 +154,14 @@ def _check(options):
         problem = "give a config, or --reference for the list of keys"
         raise ConfigError("eddyshed check", (problem,))  # noqa: EM101 (not a message)
     document = _read(options)
-    from eddyshed.solver.forecast import forecast
+    from eddyshed.solver.forecast import forecast_run
 
     from .stages import preflight
     from .study import free_bytes
     from .tables import forecast_json, forecast_table
 
     preflight(document.config)
-    found = forecast(document.config)
+    found = forecast_run(document.config)
     free = free_bytes(options.runs)
     if options.json:
         print(json.dumps(forecast_json(found, free), indent=1))

@@ -9,7 +9,7 @@ from importlib import import_module
 _PUBLIC = {
     "as_table": "config",
     "build_ocean": "truth",
-    "forecast": "forecast",
+    "forecast_run": "forecast",
     "open_record": "record",
     "parse_config": "config",
     "parse_quantity": "quantities",

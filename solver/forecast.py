@@ -44,7 +44,7 @@ class Forecast:
     warnings: tuple[str, ...]
 
 
-def forecast(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
+def forecast_run(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
     """Work out scales and costs, timing a few steps for `seconds`.
 
     Raises

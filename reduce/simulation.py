@@ -8,7 +8,7 @@ registering it there.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import singledispatch
 from typing import Protocol
@@ -108,36 +108,6 @@ class Trajectory:
     times: np.ndarray
     series: np.ndarray
     lost: tuple[tuple[int, float], ...]
-
-
-def stream_per_member(
-    entropy: int, members: int | Iterable[int], purpose: int
-) -> list[np.random.Generator]:
-    """Independent random streams, the same for a member in any ensemble.
-
-    Parameters
-    ----------
-    entropy : int
-        Names the experiment.
-    members : int or iterable of int
-        How many members, or which.
-    purpose : int
-        Tells uses of randomness apart within an experiment.
-
-    Returns
-    -------
-    list of numpy.random.Generator
-        PCG64, from ``SeedSequence(entropy, spawn_key=(member, purpose))``.
-    """
-    chosen = range(members) if isinstance(members, int | np.integer) else members
-    return [
-        np.random.Generator(
-            np.random.PCG64(
-                np.random.SeedSequence(entropy, spawn_key=(member, purpose))
-            )
-        )
-        for member in chosen
-    ]
 
 
 def step_rule(

@@ -9,16 +9,22 @@ from toys import coloured_model, orthonormal_vectors, random_model
 
 from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.reduced import ReducedModel
-from eddyshed.reduce.simulate import (
+from eddyshed.reduce.simulation import (
     make_scheme,
     simulate,
     step_rule,
-    stream_per_member,
 )
 from eddyshed.reduce.splitting import ornstein_uhlenbeck_step
 from eddyshed.solver.errors import DataError
+from eddyshed.solver.randomness import stream
 
-NOBODY = stream_per_member(0, 1, 0)
+
+def streams(entropy, members):
+    """One random stream for each member."""
+    return [stream(entropy, member, "test") for member in range(members)]
+
+
+NOBODY = streams(0, 1)
 
 
 @pytest.fixture
@@ -293,11 +299,11 @@ def test_triad_at_equal_temperatures_stays_gibbs(eps, step):
     mean over times from 6 to 24.
     """
     members, model = 4000, triad(eps)
-    streams = stream_per_member(61, members, 0)
-    start = math.sqrt(0.5) * np.array([s.standard_normal(1) for s in streams])
+    noise = streams(61, members)
+    start = math.sqrt(0.5) * np.array([s.standard_normal(1) for s in noise])
     n_steps = round(24 / step)
     found = simulate(
-        model, start, step=step, n_steps=n_steps, every=n_steps // 8, streams=streams
+        model, start, step=step, n_steps=n_steps, every=n_steps // 8, streams=noise
     )
     x = found.series[:, 2:, 0]
     # Members are independent, times are not: errors from the means of members.
@@ -345,7 +351,7 @@ def test_rotating_noise_drives_a_mean(eps, expected):
         step=step,
         n_steps=n_steps,
         every=n_steps // 12,
-        streams=stream_per_member(62, members, 0),
+        streams=streams(62, members),
     )
     # From time 12 on: what the start left decays as exp(-t / 2).
     of_member = found.series[:, 6:, 1].mean(axis=1)
@@ -383,7 +389,7 @@ def test_a_member_does_not_depend_on_the_others(keep, rng):
             step=0.01,
             n_steps=n_steps,
             every=every,
-            streams=stream_per_member(63, members, 0),
+            streams=streams(63, members),
         ).series
 
     many = run(40)
@@ -406,7 +412,7 @@ def test_large_ensembles_are_stepped_in_groups():
             step=0.1,
             n_steps=10,
             every=5,
-            streams=stream_per_member(64, members, 0),
+            streams=streams(64, members),
         )
 
     many = run(members)
@@ -432,27 +438,13 @@ def test_noise_at_the_start_can_be_given():
         step=1e-3,
         n_steps=1000,
         every=1000,
-        streams=stream_per_member(65, 2, 0),
+        streams=streams(65, 2),
     )
     gathered = 1 - math.exp(-1)
     # The composition is off by step^2 / 24 of it.
     np.testing.assert_allclose(
         found.series[:, 1, 0], [gathered, -3 * gathered], rtol=1e-7
     )
-
-
-def test_streams_belong_to_member_and_purpose():
-    three, five = stream_per_member(7, 3, 1), stream_per_member(7, 5, 1)
-    chosen = stream_per_member(7, (4, 0), 1)
-    other = stream_per_member(7, 1, 2)
-    drawn = [[g.standard_normal() for g in s] for s in (three, five, chosen, other)]
-    assert drawn[0] == drawn[1][:3]
-    assert drawn[2] == [drawn[1][4], drawn[1][0]]
-    assert len({*drawn[1], *drawn[3]}) == 6
-    expected = np.random.Generator(
-        np.random.PCG64(np.random.SeedSequence(7, spawn_key=(2, 1)))
-    )
-    assert drawn[0][2] == expected.standard_normal()
 
 
 # --- members that are lost --------------------------------------------------
@@ -470,7 +462,7 @@ def test_lost_members_are_recorded_and_the_rest_go_on():
         every=100,
         bound=50.0,
         start_time=10.0,
-        streams=stream_per_member(66, 4, 0),
+        streams=streams(66, 4),
     )
     assert [member for member, _ in found.lost] == [1, 3]
     for member, time in found.lost:
@@ -499,7 +491,7 @@ def test_members_beyond_the_finite_numbers_are_lost_without_a_bound():
         step=0.01,
         n_steps=200,
         every=200,
-        streams=stream_per_member(67, 2, 0),
+        streams=streams(67, 2),
     )
     ((member, time),) = found.lost
     assert member == 0
@@ -523,7 +515,7 @@ def test_a_lost_member_changes_no_other(rng):
             n_steps=50,
             every=10,
             bound=2e4,
-            streams=stream_per_member(68, 3, 0),
+            streams=streams(68, 3),
         )
         for first in (start, wild)
     ]
@@ -590,7 +582,7 @@ def test_bad_arguments_are_refused(changes, complaint):
         "step": 0.1,
         "n_steps": 10,
         "every": 5,
-        "streams": stream_per_member(69, 2, 0),
+        "streams": streams(69, 2),
     }
     arguments |= changes
     with pytest.raises(DataError, match=complaint):
@@ -610,7 +602,7 @@ def test_progress_counts_member_steps():
         step=0.1,
         n_steps=200,
         every=100,
-        streams=stream_per_member(70, 3, 0),
+        streams=streams(70, 3),
         progress=lambda done, total: calls.append((done, total)),
     )
     assert calls == [(192, 600), (384, 600), (576, 600), (600, 600)]
