@@ -15,8 +15,8 @@ from .closures import CLOSURES
 from .reduced import ReducedModel
 from .scores import Summary, Verdict, judge, score, summarise
 from .settings import StudyConfig
-from .simulation import simulate, step_rule
 from .simulated import Simulated
+from .simulation import simulate, step_rule
 from .split import Split
 from .statistics import correlation_function
 from .store import plain

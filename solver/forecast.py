@@ -45,7 +45,18 @@ class Forecast:
 
 
 def forecast_run(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
-    """Work out scales and costs, timing a few steps for `seconds`.
+    """Work out scales and costs.
+
+    Parameters
+    ----------
+    config : TruthConfig
+        The run.
+    seconds : float
+        Processor time that may be spent on timing steps [s].
+
+    Returns
+    -------
+    Forecast
 
     Raises
     ------
