@@ -105,6 +105,10 @@ def main(argv: Sequence[str] | None = None) -> int:
         Exit code.
     """
     options = parser().parse_args(argv)
+    # Products here are small: a second thread waits more than it works, and the
+    # last bits of a sum depend on how many there are. Numpy is not loaded yet.
+    for library in ("OMP", "OPENBLAS", "MKL"):
+        os.environ.setdefault(f"{library}_NUM_THREADS", "1")
     try:
         return _run(options)
     except KeyboardInterrupt:

@@ -51,7 +51,7 @@ def coupling_sizes(
         Root mean square of ``A12 y + 2 B112(x, y)`` and of ``B122(y, y)`` less
         its mean [state unit s-1].
     """
-    every = max(1, len(x) // SAMPLE)
+    every = -(-len(x) // SAMPLE)
     x, y = x[::every], y[::every]
     linear = y @ operators.A12.T
     linear += 2 * np.einsum("ijm,tj,tm->ti", operators.B112, x, y, optimize=True)

@@ -124,7 +124,8 @@ def unpack(group: h5py.Group, kind: type) -> Any:
         if dataclasses.is_dataclass(hint):
             values[field.name] = unpack(group[field.name], hint)
         elif origin is np.ndarray:
-            values[field.name] = group[field.name][...]
+            stored = group[field.name][...]
+            values[field.name] = stored.astype(bool) if _is_flag(stored) else stored
         elif origin in (float, int, bool, str):
             values[field.name] = origin(group.attrs[field.name])
         else:
@@ -134,6 +135,11 @@ def unpack(group: h5py.Group, kind: type) -> Any:
 
 def _is_float(item):
     return isinstance(item, float | np.floating)
+
+
+def _is_flag(stored):
+    """Whether an array was one of bool, which readers do not agree on."""
+    return stored.dtype == np.int8
 
 
 def _add(group, name, axes, values):

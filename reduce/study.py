@@ -161,14 +161,19 @@ def bring_up_to_date(study: Study, stages: dict[str, Stage], name: str) -> None:
     Interrupted
         If the truth run was asked to stop.
     """
-    for other in stages[name].after:
-        bring_up_to_date(study, stages, other)
-    fresh, why = is_fresh(study, stages, name)
-    if fresh:
-        log.info("%s: up to date, reused", name)
-        return
-    log.info("%s: running, because %s", name, why)
-    stages[name].run(study, fingerprint_of(study, stages, name))
+    for needed in _upstream(stages, name):
+        fresh, why = is_fresh(study, stages, needed)
+        if fresh:
+            log.info("%s: up to date, reused", needed)
+            continue
+        log.info("%s: running, because %s", needed, why)
+        stages[needed].run(study, fingerprint_of(study, stages, needed))
+
+
+def _upstream(stages, name):
+    """Names of a stage and of all before it, each once, in the order of running."""
+    needed = [part for other in stages[name].after for part in _upstream(stages, other)]
+    return list(dict.fromkeys([*needed, name]))
 
 
 @contextmanager

@@ -9,6 +9,7 @@ knows are used.
 
 from __future__ import annotations
 
+import io
 import os
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager, suppress
@@ -74,22 +75,33 @@ def new_file(
         CF title.
     attributes : mapping
         Further root attributes: text, numbers, or lists of them.
+
+    Raises
+    ------
+    RunFolderError
+        As `replacing`.
+
+    Notes
+    -----
+    The file is put together in memory, which takes its size once more, and
+    written at the end. HDF5 does not survive a disk that fills up while it has
+    a file open there: it can neither finish nor close it.
     """
-    with (
-        replacing(path) as temporary,
-        h5py.File(temporary, "w", track_order=True) as file,
-    ):
-        file.attrs.update(
-            {
-                "Conventions": "CF-1.8",
-                "title": title,
-                "source": f"eddyshed {version('eddyshed')}",
-                "eddyshed_kind": kind,
-                "eddyshed_schema": SCHEMA,
-                **attributes,
-            }
-        )
-        yield file
+    buffer = io.BytesIO()
+    with replacing(path) as temporary:
+        with h5py.File(buffer, "w", track_order=True) as file:
+            file.attrs.update(
+                {
+                    "Conventions": "CF-1.8",
+                    "title": title,
+                    "source": f"eddyshed {version('eddyshed')}",
+                    "eddyshed_kind": kind,
+                    "eddyshed_schema": SCHEMA,
+                    **attributes,
+                }
+            )
+            yield file
+        temporary.write_bytes(buffer.getbuffer())
 
 
 @contextmanager
@@ -127,10 +139,11 @@ def open_file(path: Path, *, kind: str | None = None) -> Iterator[h5py.File]:
         if kind is not None and found != kind:
             message = f"{path}: holds {found!r}, where {kind!r} is needed"
             raise DataError(message)
-        if file.attrs["eddyshed_schema"] != SCHEMA:
+        schema = file.attrs.get("eddyshed_schema")
+        if schema != SCHEMA:
             message = (
-                f"{path}: schema {file.attrs['eddyshed_schema']}, this version reads "
-                f"{SCHEMA}; make the file anew"
+                f"{path}: schema {schema}, this version reads {SCHEMA}; make the file "
+                "anew"
             )
             raise DataError(message)
         yield file
@@ -201,6 +214,7 @@ def add_variable(
         if isinstance(values, (list, tuple)) and values and isinstance(values[0], str):
             values = np.array(values, dtype=h5py.string_dtype())
         dataset = group.create_dataset(name, data=values)
-    for axis, dimension in enumerate(dimensions):
-        dataset.dims[axis].attach_scale(group[dimension])
+    # One axis without a scale, and no reader opens the file.
+    for axis, dimension in zip(dataset.dims, dimensions, strict=True):
+        axis.attach_scale(group[dimension])
     dataset.attrs.update({"units": units, "long_name": long_name, **attributes})

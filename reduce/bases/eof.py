@@ -87,7 +87,6 @@ def eof_basis(
             anomalies[where] = flat(states)
         variance, weights_in_time = linalg.eigh(anomalies @ anomalies.T / n_time)
         vectors = anomalies.T @ weights_in_time
-        vectors /= np.maximum(linalg.norm(vectors, axis=0), np.finfo(float).tiny)
     variance, vectors = variance[::-1][:rank], vectors[:, ::-1][:, :rank]
     varying = variance > 1e-12 * variance[0]  # beyond it eigenvectors are round-off
     if varying.sum() <= settings.modes:
@@ -97,13 +96,15 @@ def eof_basis(
         )
         raise DataError(message)
     variance, vectors = variance[varying], vectors[:, varying]
-    largest = np.abs(vectors).argmax(axis=0)
-    vectors = vectors * np.sign(vectors[largest, np.arange(len(largest))])
+    # Products of states with weights lose orthogonality by the ratio of variances.
+    vectors, _ = linalg.qr(vectors, mode="economic")
     vectors = (
         vectors / root[:, np.newaxis]
         if root.ndim == 1
         else linalg.solve_triangular(root, vectors)
     )
+    largest = np.abs(vectors).argmax(axis=0)
+    vectors = vectors * np.sign(vectors[largest, np.arange(len(largest))])
     everything = Basis(
         vectors=vectors,
         labels=tuple(f"EOF {i + 1}" for i in range(len(variance))),
