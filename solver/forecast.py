@@ -102,9 +102,6 @@ def _bytes(stream):
 def _warnings(config: TruthConfig, ocean, plan: Plan):
     """What to look at before running."""
     step = config.time.step
-    damping = ocean.damping
-    total = np.hypot(*ocean.space.waves.T)
-    edge = damping[total >= total.max() - 1].max()
     if config.forcing and config.ocean.hyperviscosity == config.ocean.viscosity == 0:
         yield (
             "forced, but neither viscosity nor hyperviscosity takes enstrophy out "
@@ -115,11 +112,6 @@ def _warnings(config: TruthConfig, ocean, plan: Plan):
         yield (
             f"the fastest wave turns by {frequency * step:.2g} radians in a step; "
             f"try a step of {0.5 / frequency:.3g} s"
-        )
-    if config.output.state_every * edge < 1e-3 and edge > 0:
-        yield (
-            f"the smallest scales are damped in {1 / edge:.3g} s, a thousand times "
-            "slower than the state is recorded: they may not be damped enough"
         )
     if plan.total - plan.spin_up < 1000 * round(config.output.state_every / step):
         yield "under a thousand states will be recorded: too few to fit noise to"

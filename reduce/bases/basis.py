@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -23,15 +23,12 @@ class Basis:
         the flow is statistically homogeneous); -1 if there is none.
     variance : ndarray, shape (n_modes,)
         Variance of the truth in each mode [state unit squared].
-    notes : tuple of str
-        What a reader must know.
     """
 
     vectors: np.ndarray
     labels: tuple[str, ...]
     partners: np.ndarray
     variance: np.ndarray
-    notes: tuple[str, ...] = field(default=())
 
     @property
     def n_modes(self) -> int:
@@ -48,5 +45,4 @@ class Basis:
                 [position.get(int(self.partners[i]), -1) for i in chosen], dtype=int
             ),
             variance=self.variance[chosen],
-            notes=self.notes,
         )

@@ -160,7 +160,6 @@ def split(note: Note, evidence: Evidence) -> str:
         ]
         for k, label in enumerate(resolved.labels)
     ]
-    notes = "".join(f"<li>{text(words)}</li>" for words in resolved.notes)
     return section(
         "The split",
         paragraphs(
@@ -169,7 +168,6 @@ def split(note: Note, evidence: Evidence) -> str:
             f"{divided.unresolved.n_modes} more, with {_sum(unresolved)} %. In this "
             f"record {lost:.2g} % lies in no mode and is left out."
         ),
-        f"<ul>{notes}</ul>" if notes else "",
         note.figure(
             lambda figures: figures.spectrum(resolved=shares, unresolved=unresolved),
             alt="Share of variance against rank, on logarithmic axes, resolved modes "
