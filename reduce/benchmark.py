@@ -14,7 +14,7 @@ from eddyshed.solver.randomness import stream
 from .closures import CLOSURES
 from .reduced import ReducedModel
 from .scores import Summary, Verdict, judge, score, summarise
-from .settings import StudyConfig
+from .settings import BenchmarkSettings, StudyConfig
 from .simulated import Simulated
 from .simulation import simulate, step_rule
 from .split import Split
@@ -86,6 +86,13 @@ def truth_side(split: Split, seed: int) -> TruthSide:
     return TruthSide(split=split, series=series, step=step, summary=summary, lags=lags)
 
 
+def member_duration(settings: BenchmarkSettings, truth_length: float) -> float:
+    """Length of the record of each member of a reduced model [s]."""
+    if settings.duration is not None:
+        return settings.duration
+    return RECORD_LENGTHS * truth_length / settings.members
+
+
 def run_closure(
     config: StudyConfig,
     model: ReducedModel,
@@ -112,9 +119,7 @@ def run_closure(
     split, interval, seed = truth.split, truth.step, config.seed
     members = config.benchmark.members
     step, every = step_rule(model, np.sqrt(split.resolved.variance), interval=interval)
-    duration = config.benchmark.duration
-    if duration is None:
-        duration = RECORD_LENGTHS * len(split.x) * split.step / members
+    duration = member_duration(config.benchmark, len(split.x) * split.step)
     spin_up = SPIN_UP_TIMES * float(truth.summary.integral_time.value.max())
     skip = int(np.ceil(spin_up / interval))
     n_steps = (skip + int(np.ceil(duration / interval))) * every

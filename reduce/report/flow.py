@@ -8,7 +8,7 @@ from eddyshed.solver.quantities import format_quantity
 
 from ..estimate import Estimate
 from .evidence import Evidence
-from .markup import Note, number, paragraphs, section, span, text, unbroken, unit
+from .markup import Note, number, paragraphs, section, span, unbroken, unit
 from .measures import (
     EnergyBudget,
     batch_states,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from ..benchmark import member_duration
 from .curves import BARTLETT, Correlation, Distribution, density, large_lag_error
 from .evidence import Evidence, summary_of
 from .markup import Note, listed, number, paragraphs, section, span, text, unit
@@ -28,8 +29,8 @@ def models(note: Note, evidence: Evidence) -> str:
         "The reduced models",
         paragraphs(
             f"Each closure was run as {settings.members} members from states of the "
-            f"truth, for {span(settings.duration or evidence.length / 2)} after a "
-            "spin-up of their own."
+            f"truth, for {span(member_duration(settings, evidence.length))} each after "
+            "a spin-up of their own."
         ),
         "<p>Without scores, and so without curves, because they give no statistics:"
         f"</p>\n<ul>{failed}</ul>"
@@ -179,11 +180,10 @@ def _scores(note, evidence):
             "distance of distributions",
         ],
         groups,
-        caption="Every score, mode by mode, with standard errors. Means are less that "
-        "of the full states of the truth. The distance is that of Wasserstein, in "
-        "standard deviations of the truth; it is never negative, and two records of "
-        "one process are at a distance of about its error. * not within sampling "
-        "error; † not within tolerance.",
+        caption="Every score, mode by mode, with standard errors. The distance is that "
+        "of Wasserstein, in standard deviations of the truth; it is never negative, "
+        "and two records of one process are at a distance of about its error. * not "
+        "within sampling error; † not within tolerance.",
     )
 
 
@@ -202,7 +202,7 @@ def _theirs(evidence):
     if not evidence.scored:
         return ""
     settings = evidence.study.config.benchmark
-    length = settings.members * (settings.duration or evidence.length / 2)
+    length = settings.members * member_duration(settings, evidence.length)
     return (
         f" The closures' curves rest on records {length / evidence.length:.2g} times "
         "as long as that of the truth."

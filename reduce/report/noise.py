@@ -23,6 +23,15 @@ LARGEST = 3  # modes whose correlation function is shown
 WITH_ERRORS = 12  # modes with error bars
 
 
+# What the noise has in common with the modes that it stands in for.
+KEPT = {
+    "integral": "integrals of their lag covariances, which is what a slow mode feels "
+    "of them through linear terms",
+    "product": "integrals of their squared correlation functions, which is what a slow "
+    "mode feels of them through products",
+}
+
+
 def noise(note: Note, evidence: Evidence) -> str:
     """What stands in for the unresolved modes."""
     fit = evidence.noise
@@ -41,8 +50,8 @@ def noise(note: Note, evidence: Evidence) -> str:
         paragraphs(
             "The unresolved modes are replaced by an Ornstein–Uhlenbeck process "
             f"({text(fit.structure)} rates) that keeps their variances and the "
-            "integrals of their lag covariances over a window of "
-            f"{span(fit.window)}. It has {fit.process.size} coordinates"
+            f"{KEPT[fit.match]}, over a window of {span(fit.window)}. It has "
+            f"{fit.process.size} coordinates"
             + (
                 f"; {2 * pairs} of them form {pairs} pairs, the two parts of a wave "
                 "that decays and turns at one rate."
@@ -120,7 +129,7 @@ def _noise_correlations(note, evidence, units):
         "of largest variance, over the window of the fit: truth (dots; grey, two "
         f"standard errors to either side by Bartlett's large-lag formula, {BARTLETT}) "
         "and fitted noise (line). Of a pair the real part is shown. The fit keeps the "
-        "integral of the curve, which is what a slow mode feels, and not its shape.",
+        f"{KEPT[fit.match]}, and not the shape of the curve.",
     )
 
 

@@ -2,6 +2,7 @@
 
 import re
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -179,13 +180,11 @@ def test_half_a_pair_is_no_pair():
         labels=("a", "b", "c", "d"),
         partners=np.array([1, 0, 3, 2]),
         variance=np.arange(4.0),
-        notes=("note",),
     )
     some = basis.take(np.array([3, 1, 2]))
     assert some.labels == ("d", "b", "c")
     assert some.partners.tolist() == [2, -1, 0]
     assert some.variance.tolist() == [3, 1, 2]
-    assert some.notes == ("note",)
     assert some.n_modes == 3
     np.testing.assert_array_equal(some.vectors, np.eye(4)[:, [3, 1, 2]])
 
@@ -363,7 +362,7 @@ def test_spectrum_of_red_noise(embed):
     edges[0] = 1e-6  # zero is a root as well, and not meant
     roots = [
         optimize.brentq(condition, low, high, xtol=1e-15)
-        for low, high in zip(edges[:-1], edges[1:], strict=True)
+        for low, high in pairwise(edges)
     ]
     expected = (1 - r**2) / (1 - 2 * r * np.cos(roots) + r**2)
     # The roots err by 1e-15, which near zero is 1e-13 of the eigenvalue.
