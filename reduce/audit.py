@@ -103,7 +103,8 @@ def decide(
         return ("holds" if distance > 0 else "fails"), 1.0
     if distance == 0 or not math.isfinite(error):
         return "undecided", math.inf
-    return "undecided", (CONFIDENCE * error / distance) ** 2
+    errors = CONFIDENCE * error / distance
+    return "undecided", errors * errors  # a power would raise if it overflowed
 
 
 def audit(

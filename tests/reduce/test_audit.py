@@ -239,7 +239,6 @@ def test_gaussian_systems_seldom_fail():
         found = findings(series[:, :2], series[:, 2:], seed=replica)
         for name, finding in found.items():
             fails[name] += finding.verdict == "fails"
-    print(fails)
     assert max(fails.values()) <= most, fails
 
 
