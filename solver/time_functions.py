@@ -100,6 +100,28 @@ class Gusts:
     )
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class GustBand:
+    """Gusts on a ring of wavenumbers, an independent process for each part."""
+
+    acceleration: float = setting(
+        unit="m s-2", above=0, doc="root mean square acceleration over the domain"
+    )
+    band: tuple[float, float] = setting(
+        minimum=0,
+        doc="smallest and largest total wavenumber forced, in waves per box (half "
+        "waves between walls)",
+    )
+    decorrelation: float = setting(
+        unit="s", above=0, doc="e-folding time of the correlation"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if self.band[0] > self.band[1]:
+            yield f"band = {list(self.band)} runs downwards; give the smaller first"
+
+
 TimeFunction: TypeAlias = Steady | Seasonal | Ramp | Step
 TimeBehaviour: TypeAlias = Steady | Seasonal | Ramp | Step | Gusts
 
