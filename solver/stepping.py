@@ -23,6 +23,15 @@ class Steppable(Protocol):
         """All of the tendency but L z, shape (size,), a new array each time."""
 
 
+class Stepper(Protocol):
+    """A scheme bound to an ocean and a step."""
+
+    step: float
+
+    def advance(self, t: float, z: np.ndarray, push: np.ndarray | None = None) -> None:
+        """Advance a state by one step, in place."""
+
+
 class IntegratingFactorRK4:
     r"""Classical Runge-Kutta of order four for ``exp(-L t) z``.
 
