@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 
-from .stepping import INSET, with_push
+from .errors import DataError
+from .stepping import INSET, IntegratingFactorRK4, Stepper, with_push
 
 NEAR_ZERO = 2.0  # below it the closed forms lose digits; the series has none to lose
 TERMS = 32  # 2^32 / 32! is 2e-26: far below round-off where the series is used
@@ -143,3 +144,37 @@ class ExponentialDifferencingRK4:
         z += self._first(start)
         z += self._middle(middle)
         z += self._last(end)
+
+
+SCHEMES = ("integrating factor", "exponential differencing")
+
+
+def stepper_of(scheme: str, ocean: Any, step: float) -> Stepper:
+    """Build the stepper that a config names.
+
+    Parameters
+    ----------
+    scheme : {"integrating factor", "exponential differencing"}
+    ocean : ocean
+    step : float
+        Time step [s].
+
+    Returns
+    -------
+    Stepper
+
+    Raises
+    ------
+    DataError
+        If exponential differencing is asked of an ocean that does not give
+        functions of its linear part.
+    """
+    if scheme == SCHEMES[0]:
+        return IntegratingFactorRK4(ocean, step)
+    if getattr(ocean, "linear_function", None) is None:
+        message = (
+            f'[time] scheme = "{scheme}" needs functions of the linear part, which '
+            f'this ocean does not give; use scheme = "{SCHEMES[0]}"'
+        )
+        raise DataError(message)
+    return ExponentialDifferencingRK4(ocean, step)

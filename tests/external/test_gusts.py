@@ -50,6 +50,20 @@ def test_value_is_stationary_with_the_given_correlation():
     assert abs(np.mean(first * gust.value) - r) < 4 * np.sqrt((1 + r * r) / count)
 
 
+def test_push_and_value_of_a_step_go_together():
+    # Over many processes: the covariance of the mean over a step with the value at
+    # its end is (1 - a)^2 / x + a (1 - a) / x, x the step over the time, a = e^-x.
+    rng = np.random.default_rng(12)
+    count, x = 20000, 1.5
+    gust = GustProcess(np.ones(count), 1.0, x, rng, where=np.arange(count))
+    push = np.zeros(count)
+    gust.add_push(push)
+    a = np.exp(-x)
+    expected = (1 - a) ** 2 / x + a * (1 - a) / x
+    # Four standard errors of a covariance of normals, at most sqrt(2 / n).
+    assert abs(np.mean(push * gust.value) - expected) < 4 * np.sqrt(2 / count)
+
+
 def test_a_pattern_and_a_band_feel_the_same_process():
     # One process times a pattern; or one for each of three coordinates.
     band = GustProcess(
