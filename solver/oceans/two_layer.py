@@ -19,6 +19,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
+from typing import Any
 
 import numpy as np
 
@@ -26,6 +27,7 @@ from ..block_functions import block_function
 from . import two_layer_measures as measures
 from .two_layer_waves import (
     TwoLayerSettings,
+    dissipation,
     frequencies,
     linear_blocks,
     modes_to_layers,
@@ -51,6 +53,10 @@ class TwoLayer:
     ----------
     size : int
         Number of coordinates, two for each of the space.
+    edge : float
+        Smaller of the largest wavenumbers kept along x and y [m-1].
+    dissipation : ndarray, shape (n_real,)
+        Rate of viscosity and hyperviscosity [s-1].
     energy_conserving : bool
         B does no work: ``inner(z, B(z, z)) = 0``. It conserves the potential
         enstrophy of each layer as well.
@@ -90,7 +96,7 @@ class TwoLayer:
     def __init__(
         self,
         settings: TwoLayerSettings,
-        space,
+        space: Any,
         source: np.ndarray | None = None,
     ):
         if not space.x_is_periodic:
@@ -107,10 +113,15 @@ class TwoLayer:
         self._to_modes = self._to_layers.T * np.array(settings.fractions)
         # What multiplies z on the way to the layers, shape (layer, mode, n_real).
         self._layers = self._to_layers[:, :, np.newaxis] / self._from_psi
-        self._turn = _Turn(space)
-        self._real, self._imaginary = linear_blocks(
-            settings, space.wavenumber_x, space.k_squared
+        self.edge = min(
+            np.abs(space.wavenumber_x).max(), np.abs(space.wavenumber_y).max()
         )
+        self.dissipation = dissipation(settings, space.k_squared, self.edge)
+        real, imaginary = linear_blocks(
+            settings, space.wavenumber_x, space.k_squared, self.dissipation
+        )
+        self._blocks = real + 1j * imaginary
+        self._linear = _OnWaves(self._blocks, space.partners)
         self.source = np.zeros(space.n_real) if source is None else np.array(source)
         upper = np.stack([self.source, np.zeros_like(self.source)])
         self._forcing = -(self._from_vorticity * (self._to_modes @ upper)).ravel()
@@ -164,10 +175,7 @@ class TwoLayer:
 
     def linear(self, z: np.ndarray) -> np.ndarray:
         """A z [m s-2], shape (..., size)."""
-        modes = self._stacked(z)
-        return self._flat(
-            _apply(self._real, modes) + _apply(self._imaginary, self._turn(modes))
-        )
+        return self._flat(self._linear(self._stacked(z)))
 
     def bilinear(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """B(u, w), symmetric, shape (..., size), over all leading axes."""
@@ -192,12 +200,13 @@ class TwoLayer:
         """
         k = np.stack([self.space.wavenumber_x, self.space.k_squared], axis=1)
         k, k_squared = np.unique(k, axis=0).T
-        return frequencies(self.settings, k, k_squared)
+        damping = dissipation(self.settings, k_squared, self.edge)
+        return frequencies(self.settings, k, k_squared, damping)
 
     @property
     def damping(self) -> np.ndarray:
         """Rate at which friction alone damps each coordinate [s-1], shape (size,)."""
-        return -np.concatenate([self._real[0, 0], self._real[1, 1]])
+        return -np.concatenate([self._blocks[0, 0].real, self._blocks[1, 1].real])
 
     @property
     def fastest_frequency(self) -> float:
@@ -218,24 +227,10 @@ class TwoLayer:
         # Waves that differ in the sign of l alone share a block.
         k = np.stack([self.space.wavenumber_x, self.space.k_squared], axis=1)
         _, first, back = np.unique(k, axis=0, return_index=True, return_inverse=True)
-        blocks = self._real[..., first] + 1j * self._imaginary[..., first]
-        results = block_function(np.moveaxis(blocks, -1, 0), function)
-        results = np.moveaxis(results, 0, -1)[..., back.ravel()]
-        real, imaginary = results.real.copy(), results.imag.copy()
-        turn = self._turn
-
-        def apply(z):
-            modes = z.reshape(2, -1)
-            turned = turn(modes)
-            result = np.empty_like(modes)
-            for row in range(2):
-                np.multiply(real[row, 0], modes[0], out=result[row])
-                result[row] += real[row, 1] * modes[1]
-                result[row] += imaginary[row, 0] * turned[0]
-                result[row] += imaginary[row, 1] * turned[1]
-            return result.ravel()
-
-        return apply
+        blocks = np.moveaxis(self._blocks[..., first], -1, 0)
+        results = np.moveaxis(block_function(blocks, function), 0, -1)
+        multiply = _OnWaves(results[..., back.ravel()], self.space.partners)
+        return lambda z: multiply(z.reshape(2, -1)).ravel()
 
     def exact_flow(self, interval: float) -> Callable[[np.ndarray], np.ndarray]:
         """Return the function ``z -> exp(A interval) z``."""
@@ -288,6 +283,18 @@ class TwoLayer:
     def budget_units(self) -> dict[str, tuple[str, str]]:
         """Units and long name of what `budget` returns."""
         return dict(measures.BUDGET_UNITS)
+
+    def largest_speed(self, z: np.ndarray) -> float:
+        """Largest of |u|/dx + |v|/dy of the eddies in either layer [s-1].
+
+        The imposed currents are left out: their part is exact in time.
+        """
+        (nx, ny), (lx, ly) = self.space.points, self.space.lengths
+        speeds = [self.space.velocity(psi) for psi in self.layers(z)]
+        return max(
+            float(np.max(np.abs(u) * (nx / lx) + np.abs(v) * (ny / ly)))
+            for u, v in speeds
+        )
 
     def fields(self, z: np.ndarray) -> dict[str, np.ndarray]:
         """Streamfunction and relative vorticity of the eddies in each layer.
@@ -351,29 +358,32 @@ class TwoLayer:
         return result.ravel()
 
 
-class _Turn:
-    """The quarter turn R within each wave: ``d/dx`` without its wavenumber.
+class _OnWaves:
+    """Multiplies complex blocks (2, 2, n_real) into modes (..., 2, n_real).
 
-    Waves that do not vary in x have no other half, and are turned to zero.
+    The two parts of a wave, side by side, are one complex amplitude. Waves
+    that do not vary in x may have a single part; they stand first, and their
+    blocks are real.
     """
 
-    def __init__(self, space):
-        k = space.wavenumber_x
-        varying = k != 0
-        self._sign = np.zeros(space.n_real)
-        # The derivative of all ones reads off each sign.
-        ones = space.ddx(np.ones(space.n_real))
-        self._sign[varying] = np.round(ones[varying] / k[varying])
-        self._partners = np.where(varying, space.partners, 0)
+    def __init__(self, blocks, partners):
+        self._single = int(np.count_nonzero(partners < 0))
+        self._alone = blocks[..., : self._single].real.copy()
+        self._pairs = blocks[..., self._single :: 2].copy()
 
     def __call__(self, modes):
-        """Turn the last axis of an array, shape (..., n_real)."""
-        return np.take(modes, self._partners, axis=-1) * self._sign
+        modes = np.ascontiguousarray(modes, dtype=float)
+        result, single = np.empty_like(modes), self._single
+        _multiply(self._alone, modes[..., :single], result[..., :single])
+        _multiply(
+            self._pairs,
+            modes[..., single:].view(complex),
+            result[..., single:].view(complex),
+        )
+        return result
 
 
-def _apply(blocks, modes):
+def _multiply(blocks, modes, result):
     """Multiply blocks (2, 2, n) into modes (..., 2, n)."""
-    return (
-        blocks[:, 0] * modes[..., np.newaxis, 0, :]
-        + blocks[:, 1] * modes[..., np.newaxis, 1, :]
-    )
+    np.multiply(blocks[:, 0], modes[..., np.newaxis, 0, :], out=result)
+    result += blocks[:, 1] * modes[..., np.newaxis, 1, :]

@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from .two_layer_waves import dissipation, most_unstable
+from .two_layer_waves import most_unstable, stiffness
 
 if TYPE_CHECKING:
     from .two_layer import TwoLayer
@@ -27,6 +27,10 @@ BUDGET_UNITS = {
     "bottom_drag": ("m2 s-3", "energy lost to bottom drag (negative)"),
     "dissipation": ("m2 s-3", "energy lost to viscosity (negative)"),
     "enstrophy": ("s-2", "domain-mean potential enstrophy of both layers"),
+    "enstrophy_work": ("s-3", "enstrophy fed by the forcing"),
+    "enstrophy_production": ("s-3", "enstrophy drawn from the background gradients"),
+    "enstrophy_bottom_drag": ("s-3", "enstrophy lost to bottom drag"),
+    "enstrophy_dissipation": ("s-3", "enstrophy lost to viscosity (negative)"),
     "upper_enstrophy": ("s-2", "potential enstrophy of the upper layer"),
     "lower_enstrophy": ("s-2", "potential enstrophy of the lower layer"),
 }
@@ -39,7 +43,7 @@ FIELD_UNITS = {
 
 
 def budget(ocean: TwoLayer, t: float, z: np.ndarray) -> dict[str, float]:
-    """Energy, enstrophies, and every source and sink of the energy.
+    """Energy, enstrophies, and every source and sink of both.
 
     Parameters
     ----------
@@ -52,27 +56,43 @@ def budget(ocean: TwoLayer, t: float, z: np.ndarray) -> dict[str, float]:
     Returns
     -------
     dict
-        Units and meaning as in `BUDGET_UNITS`. The rates sum to that of the
-        energy. What the shear gives is ``F1 h1 (U1 - U2) <psi1 dpsi2/dx>``, a
-        flux of buoyancy across the current (Pedlosky 1987, chapter 7).
+        Units and meaning as in `BUDGET_UNITS`. The rates in m2 s-3 sum to that
+        of the energy, those in s-3 to that of the enstrophy, the mean of the
+        layers' weighted by depth. What the shear gives is ``F1 h1 (U1 - U2)
+        <psi1 dpsi2/dx>``, a flux of buoyancy across the current; what the
+        gradients give, the fluxes of potential vorticity down them (Pedlosky
+        1987, chapter 7).
     """
     settings, space = ocean.settings, ocean.space
-    psi = ocean.layers(z)
+    psi, forcing = ocean.layers(z), ocean.forcing(t)
     q = ocean.potential_vorticity(psi)
     (h1, h2), (f1, _) = settings.fractions, settings.coupling
-    thickness = np.sum(space.norm * (psi[0] - psi[1]) ** 2)
-    flux = np.sum(space.norm * psi[0] * space.ddx(psi[1]))
-    bottom = np.sum(space.norm * space.k_squared * psi[1] ** 2)
-    lost = np.sum(dissipation(settings, space.k_squared) * np.square(z.reshape(2, -1)))
-    enstrophies = np.sum(space.norm * q**2, axis=-1) / 2
+
+    def mean(a, b):
+        return np.sum(space.norm * a * b, axis=-1)
+
+    northward = np.stack([space.ddx(layer) for layer in psi])
+    weights = np.array([h1, h2])
+    step = psi[0] - psi[1]
+    spread = space.k_squared * psi[1]
+    losses = ocean.dissipation * np.square(z.reshape(2, -1))
+    stiff = stiffness(settings, space.k_squared)
+    enstrophies = mean(q, q) / 2
+    flux_down = -mean(q, northward) * settings.gradients
     return {
         "energy": float(z @ z / 2),
-        "potential_energy": float(f1 * h1 * thickness / 2),
-        "work": float(ocean.forcing(t) @ z),
-        "shear_production": float(f1 * h1 * settings.shear * flux),
-        "bottom_drag": float(-settings.drag * h2 * bottom),
-        "dissipation": float(-lost),
-        "enstrophy": float(h1 * enstrophies[0] + h2 * enstrophies[1]),
+        "potential_energy": float(f1 * h1 * mean(step, step) / 2),
+        "work": float(forcing @ z),
+        "shear_production": float(
+            f1 * h1 * settings.shear * mean(psi[0], northward[1])
+        ),
+        "bottom_drag": float(-settings.drag * h2 * mean(psi[1], spread)),
+        "dissipation": float(-losses.sum()),
+        "enstrophy": float(weights @ enstrophies),
+        "enstrophy_work": float((stiff.ravel() * forcing) @ z),
+        "enstrophy_production": float(weights @ flux_down),
+        "enstrophy_bottom_drag": float(settings.drag * h2 * mean(q[1], spread)),
+        "enstrophy_dissipation": float(-(stiff * losses).sum()),
         "upper_enstrophy": float(enstrophies[0]),
         "lower_enstrophy": float(enstrophies[1]),
     }
@@ -103,7 +123,7 @@ def scales(ocean: TwoLayer) -> Iterator[tuple[str, float, str]]:
     yield "deformation radius of the upper layer", upper**-0.5, "m"
     yield "deformation radius of the lower layer", lower**-0.5, "m"
     across = np.maximum(space.k_squared - space.wavenumber_x**2, 0)
-    wavelength, rate = most_unstable(settings, math.sqrt(across.min()))
+    wavelength, rate = most_unstable(settings, math.sqrt(across.min()), ocean.edge)
     if rate > 0:
         yield "most unstable wavelength", wavelength, "m"
         yield "e-folding time of the most unstable wave", 1 / rate, "s"

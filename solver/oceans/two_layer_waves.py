@@ -62,12 +62,19 @@ class TwoLayerSettings:
         minimum=0,
         doc="lateral viscosity, on the potential vorticity of the eddies in each layer",
     )
-    hyperviscosity: float = setting(
-        unit="m8 s-1",
-        default=0.0,
-        minimum=0,
-        doc="coefficient of the eighth derivative: damps the eddies' potential "
-        "vorticity in each layer at the rate hyperviscosity * wavenumber^8",
+    hyperviscosity_time: float = setting(
+        unit="s",
+        default=math.inf,
+        above=0,
+        infinite=True,
+        doc="e-folding time of hyperviscosity, which acts as viscosity does, at the "
+        "largest wavenumber that the grid keeps along x or y, whichever is smaller; "
+        '"inf" for none',
+    )
+    hyperviscosity_order: int = setting(
+        default=8,
+        choices=(4, 6, 8, 10, 12, 16),
+        doc="power of the wavenumber with which the rate of hyperviscosity grows",
     )
 
     @property
@@ -133,13 +140,33 @@ def stiffness(settings: TwoLayerSettings, k_squared: np.ndarray) -> np.ndarray:
     return np.stack([k_squared, k_squared + settings.deformation_radius**-2])
 
 
-def dissipation(settings: TwoLayerSettings, k_squared: np.ndarray) -> np.ndarray:
-    """Rate at which viscosity and hyperviscosity damp a wave [s-1]."""
-    return settings.viscosity * k_squared + settings.hyperviscosity * k_squared**4
+def dissipation(
+    settings: TwoLayerSettings, k_squared: np.ndarray, edge: float
+) -> np.ndarray:
+    """Rate at which viscosity and hyperviscosity damp a wave [s-1].
+
+    Parameters
+    ----------
+    settings : TwoLayerSettings
+        Physical parameters.
+    k_squared : ndarray, shape (...)
+        Squared wavenumbers [m-2].
+    edge : float
+        Wavenumber at which the time of hyperviscosity holds [m-1].
+
+    Returns
+    -------
+    ndarray, shape (...)
+    """
+    steep = (k_squared / edge**2) ** (settings.hyperviscosity_order // 2)
+    return settings.viscosity * k_squared + steep / settings.hyperviscosity_time
 
 
 def linear_blocks(
-    settings: TwoLayerSettings, wavenumber_x: np.ndarray, k_squared: np.ndarray
+    settings: TwoLayerSettings,
+    wavenumber_x: np.ndarray,
+    k_squared: np.ndarray,
+    damping: np.ndarray | float = 0.0,
 ) -> tuple[np.ndarray, np.ndarray]:
     r"""Linear operator on the vertical modes of each wave, as 2 x 2 blocks.
 
@@ -151,6 +178,8 @@ def linear_blocks(
         Wavenumber k along the current [m-1].
     k_squared : ndarray, shape (...)
         ``K2 = k^2 + l^2``, positive [m-2].
+    damping : ndarray, shape (...), or float
+        Rate of :func:`dissipation` [s-1].
 
     Returns
     -------
@@ -163,7 +192,7 @@ def linear_blocks(
     -----
     With T of :func:`modes_to_layers`, W the roots of :func:`stiffness` on the
     diagonal, U and Q the currents and gradients on the diagonal and d the
-    rate of :func:`dissipation`, the block is
+    damping, the block is
 
     .. math:: -d - r h_2 K^2 v v^T + ik\,(W^{-1} T^{-1} Q T W^{-1}
               - W^{-1} T^{-1} U T W),  \qquad v = W^{-1} T^T (0, 1)^T
@@ -186,14 +215,17 @@ def linear_blocks(
     bottom = on_waves(weights[1] * np.outer(to_layers[1], to_layers[1]))
     identity = on_waves(np.eye(2))
     sides = root[:, np.newaxis] * root[np.newaxis]
-    real = -dissipation(settings, k_squared) * identity
+    real = -damping * identity
     real = real - settings.drag * k_squared * bottom / sides
     turning = gradients / sides - advection * root[np.newaxis] / root[:, np.newaxis]
     return real, wavenumber_x * turning
 
 
 def frequencies(
-    settings: TwoLayerSettings, wavenumber_x: np.ndarray, k_squared: np.ndarray
+    settings: TwoLayerSettings,
+    wavenumber_x: np.ndarray,
+    k_squared: np.ndarray,
+    damping: np.ndarray | float = 0.0,
 ) -> np.ndarray:
     """Complex frequencies of the two waves of each wavenumber.
 
@@ -201,7 +233,7 @@ def frequencies(
     ----------
     settings : TwoLayerSettings
         Physical parameters.
-    wavenumber_x, k_squared : ndarray, shape (...)
+    wavenumber_x, k_squared, damping : ndarray, shape (...)
         As for :func:`linear_blocks`.
 
     Returns
@@ -210,7 +242,7 @@ def frequencies(
         omega [s-1], for waves ``exp(i(k x + l y - omega t))``, the faster
         growing one first. The imaginary part is the growth rate.
     """
-    real, imaginary = linear_blocks(settings, wavenumber_x, k_squared)
+    real, imaginary = linear_blocks(settings, wavenumber_x, k_squared, damping)
     blocks = np.moveaxis(real + 1j * imaginary, (0, 1), (-2, -1))
     omega = 1j * np.linalg.eigvals(blocks)
     order = np.argsort(-omega.imag, axis=-1)
@@ -218,7 +250,7 @@ def frequencies(
 
 
 def most_unstable(
-    settings: TwoLayerSettings, smallest_l: float = 0.0
+    settings: TwoLayerSettings, smallest_l: float = 0.0, edge: float = math.inf
 ) -> tuple[float, float]:
     """Find the fastest growing wave, whatever the grid.
 
@@ -229,6 +261,8 @@ def most_unstable(
     smallest_l : float
         Smallest wavenumber across the current [m-1]: zero without walls, pi
         over the width between walls.
+    edge : float
+        As for :func:`dissipation`; no hyperviscosity if infinite.
 
     Returns
     -------
@@ -244,14 +278,20 @@ def most_unstable(
     is largest for the smallest l; and where ``beta = 0`` growth ends at
     ``K^4 = 4 F1 F2``, below 1 / Ld (Pedlosky 1987, chapter 7).
     """
+
+    def omega(k):
+        k_squared = k**2 + smallest_l**2
+        damping = dissipation(settings, k_squared, edge)
+        return frequencies(settings, k, k_squared, damping)[..., 0]
+
     k = np.linspace(0.002, 8, 4000) / settings.deformation_radius
-    omega = frequencies(settings, k, k**2 + smallest_l**2)[:, 0]
-    best = int(np.argmax(omega.imag))
+    scanned = omega(k)
+    best = int(np.argmax(scanned.imag))
     # The round-off of a real pair of frequencies is no growth.
-    if omega[best].imag <= 1e-9 * np.abs(omega).max():
+    if scanned[best].imag <= 1e-9 * np.abs(scanned).max():
         return math.inf, 0.0
     found = optimize.minimize_scalar(
-        lambda x: -frequencies(settings, x, x**2 + smallest_l**2)[0].imag,
+        lambda k: -omega(k).imag,
         bounds=(k[max(best - 1, 0)], k[min(best + 1, len(k) - 1)]),
         method="bounded",
         options={"xatol": 1e-6 * k[best]},
