@@ -7,12 +7,12 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TypeAlias
 
-import h5py
 import numpy as np
 
 from .config import setting
 from .errors import DataError
 from .files import open_file
+from .grid_files import read_fields
 from .quantities import nearest, quoted
 from .randomness import stream
 from .stirring import band_coordinates
@@ -177,51 +177,8 @@ def _single_mode(initial, ocean):
 def _from_fields(path, ocean):
     """State from fields on the grid."""
     names = ocean.prognostic
-    if path.suffix == ".npy":
-        if len(names) > 1:
-            message = (
-                f"{path}: holds one field, this ocean steps {', '.join(names)}; give "
-                "an HDF5 file with a variable for each"
-            )
-            raise DataError(message)
-        try:
-            found = {names[0]: np.load(path, allow_pickle=False)}
-        except (OSError, ValueError, EOFError) as error:
-            message = f"{path}: cannot be read as a NumPy array ({error})"
-            raise DataError(message) from error
-    else:
-        found = _hdf5_fields(path, names)
-    nx, ny = ocean.space.points
-    for name, values in found.items():
-        if values.shape != (ny, nx) or values.dtype.kind not in "fiu":
-            message = (
-                f"{path}: {name} is an array of {values.dtype} of shape "
-                f"{values.shape}; numbers of shape {(ny, nx)} (y, x) are needed, the "
-                "points of [grid]"
-            )
-            raise DataError(message)
-        if not np.all(np.isfinite(values)):
-            message = f"{path}: {name} is not finite everywhere; fill its gaps first"
-            raise DataError(message)
-    modes = [ocean.space.to_modes(found[name].astype(float)) for name in names]
-    return ocean.coordinates(*modes)
-
-
-def _hdf5_fields(path, names):
-    """Fields by name from an HDF5 file, any one."""
-    try:
-        with h5py.File(path) as file:
-            missing = [name for name in names if name not in file]
-            if missing:
-                message = (
-                    f"{path}: has no variable {quoted(missing[0])}; found: "
-                    f"{', '.join(file) or 'none'}"
-                )
-                raise DataError(message)
-            return {name: file[name][...] for name in names}
-    except OSError as error:
-        message = f"{path}: cannot be read as HDF5 ({error}); give a .npy or .h5 file"
-        raise DataError(message) from error
+    found = read_fields(path, names, ocean.space.points)
+    return ocean.coordinates(*(ocean.space.to_modes(found[name]) for name in names))
 
 
 def _end_of_run(path, ocean):
