@@ -21,6 +21,7 @@ import numpy as np
 
 from .config import setting
 from .errors import DataError
+from .time_functions import TimeBehaviour, in_time
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -39,6 +40,7 @@ class SurfaceBuoyancy:
     phase: float = setting(
         default=0.0, doc="phase of the cosine at the origin, in radians"
     )
+    time: TimeBehaviour = in_time()
 
 
 def surface_source(space, pattern: SurfaceBuoyancy) -> np.ndarray:
@@ -59,7 +61,8 @@ def surface_source(space, pattern: SurfaceBuoyancy) -> np.ndarray:
     Raises
     ------
     DataError
-        If the wave, or the depth of absorption, is beyond what the grid keeps.
+        If there are no walls above and below, or the wave or the depth of
+        absorption is beyond what the grid keeps.
 
     Notes
     -----
@@ -67,6 +70,9 @@ def surface_source(space, pattern: SurfaceBuoyancy) -> np.ndarray:
     ``sin(q z)`` in ``exp(-(H - z) / d)`` is
     ``(2 / H) q ((-1)^(m+1) + exp(-H / d)) / (q^2 + 1 / d^2)``.
     """
+    if not space.x_is_periodic or space.y_is_periodic:
+        message = 'a surface needs walls above and below; give [grid] space = "channel"'
+        raise DataError(message)
     height = space.lengths[1]
     across, up = space.cutoff
     if pattern.waves > across:

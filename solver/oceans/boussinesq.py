@@ -26,7 +26,6 @@ import numpy as np
 
 from ..block_functions import block_function
 from ..errors import DataError
-from ..spaces.periodic import Periodic
 from .boussinesq_scales import scales_of_flow, scales_of_settings
 from .boussinesq_waves import BoussinesqSettings, linear_blocks
 
@@ -96,9 +95,7 @@ class Boussinesq:
         self.size = self.n_fields * space.n_real
         self.prognostic = NAMES[: self.n_fields]
         self._k = space.wavenumber_x
-        # Signed where z is periodic; between walls m is only ever squared.
-        half_waves = 2 if isinstance(space, Periodic) else 1
-        self._m = np.pi * half_waves / space.lengths[1] * space.waves[:, 1]
+        self._m = space.wavenumber_y
         self._blocks = linear_blocks(settings, self._k, self._m)
         root, k_squared = np.sqrt(space.norm), space.k_squared
         scale = [root * np.sqrt(k_squared), root / settings.weight, root]
@@ -365,6 +362,12 @@ class Boussinesq:
         units = {"streamfunction": "m2 s-1", "vorticity": "s-1", "buoyancy": "m s-2"}
         return units | ({"cross_velocity": "m s-1"} if self.n_fields == 3 else {})
 
+    def largest_speed(self, z: np.ndarray) -> float:
+        """Largest of |u|/dx + |w|/dz on the grid [s-1], for the CFL number."""
+        u, w = self.space.velocity(np.ascontiguousarray(self.streamfunction(z)))
+        (nx, nz), (lx, lz) = self.space.points, self.space.lengths
+        return float(np.max(np.abs(u) * (nx / lx) + np.abs(w) * (nz / lz)))
+
     def scales(self, z: np.ndarray | None = None) -> Iterable[tuple[str, float, str]]:
         """Derived scales as (name, value, unit), the flow's own if `z` is given."""
         yield from scales_of_settings(self.settings, self.space, self._k, self._m)
@@ -426,15 +429,15 @@ def _check_space(settings, space):
     """Refuse a space that the equations do not fit."""
     if not space.x_is_periodic:
         message = (
-            'boussinesq: needs a space that is periodic in x; give space = "periodic" '
+            '[grid] space: the Boussinesq slice must be periodic in x; give "periodic" '
             'or "channel"'
         )
         raise DataError(message)
-    if settings.n_fields == 3 and not isinstance(space, Periodic):
+    if settings.n_fields == 3 and not space.y_is_periodic:
         message = (
-            f"boussinesq: coriolis = {settings.coriolis:.6g} s-1 does not fit walls "
-            "above and below: between slippery walls the velocity through the slice is "
-            "a cosine series, which this space does not hold; give coriolis = 0 or "
-            'space = "periodic"'
+            f"[ocean] coriolis = {settings.coriolis:.6g} s-1 does not fit walls above "
+            "and below: between slippery walls the velocity through the slice is a "
+            "cosine series, which this space does not hold; give coriolis = 0 or "
+            '[grid] space = "periodic"'
         )
         raise DataError(message)
