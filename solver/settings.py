@@ -11,6 +11,7 @@ from .exponential import SCHEMES
 from .forcing import Wave
 from .initial import INITIAL_KINDS, InitialSettings, RestSettings
 from .oceans.barotropic import BarotropicSettings
+from .oceans.two_layer_waves import TwoLayerSettings
 from .stirring import Stirring
 from .time_functions import GustBand, break_times
 
@@ -116,8 +117,9 @@ class TruthConfig:
         default=1, minimum=0, doc="entropy of every random stream of the study"
     )
     grid: GridSettings = setting(doc="the box and its grid")
-    ocean: BarotropicSettings = setting(
-        kinds={"barotropic": BarotropicSettings}, doc="the flow that is run"
+    ocean: BarotropicSettings | TwoLayerSettings = setting(
+        kinds={"barotropic": BarotropicSettings, "two_layer": TwoLayerSettings},
+        doc="the flow that is run",
     )
     forcing: dict[str, Wave | GustBand] = setting(
         default=dict,
