@@ -10,10 +10,16 @@ from .forcing import vorticity_source
 from .oceans.barotropic import Barotropic, BarotropicSettings
 from .oceans.two_layer import TwoLayer, TwoLayerSettings
 from .settings import GridSettings, TruthConfig
+from .spaces.basin import Basin
+from .spaces.channel import Channel
 from .spaces.periodic import Periodic
 from .topography import heights
 
-SPACES: dict[str, Callable[..., Any]] = {"periodic": Periodic}
+SPACES: dict[str, Callable[..., Any]] = {
+    "periodic": Periodic,
+    "channel": Channel,
+    "basin": Basin,
+}
 
 
 def build_space(grid: GridSettings) -> Any:
