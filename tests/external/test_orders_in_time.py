@@ -42,9 +42,24 @@ state_every = "1 d"
 """
 
 
+TWO_LAYER = BAROTROPIC.replace("barotropic", "two_layer").replace(
+    'deformation_radius = "100 km"',
+    'deformation_radius = "60 km"\nupper_current = "0.1 m/s"\n'
+    'upper_depth = "800 m"\nlower_depth = "3200 m"',
+)
+OCEANS = {
+    "barotropic periodic": BAROTROPIC,
+    "barotropic channel": BAROTROPIC.replace("[grid]", '[grid]\nspace = "channel"'),
+    "barotropic basin": BAROTROPIC.replace("[grid]", '[grid]\nspace = "basin"'),
+    "two layers periodic": TWO_LAYER,
+    "two layers channel": TWO_LAYER.replace("[grid]", '[grid]\nspace = "channel"'),
+}
+
+
 @pytest.mark.parametrize("scheme", SCHEMES)
-def test_order_is_four_on_successive_halvings(scheme):
-    config = parse_config(BAROTROPIC, TruthConfig, "order.toml").config
+@pytest.mark.parametrize("name", OCEANS)
+def test_order_is_four_on_successive_halvings(name, scheme):
+    config = parse_config(OCEANS[name], TruthConfig, "order.toml").config
     ocean = build_ocean(config)
     start = starting_state(config.initial, ocean, seed=1, member=0)
     ends = []
