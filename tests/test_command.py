@@ -299,7 +299,7 @@ def test_a_blow_up_exits_with_one(tmp_path, capsys):
         "output.state_every=40 d",
         "output.resolved.every=40 d",
         "output.checkpoint_every=40 d",
-        "forcing.trades.amplitude=1e-10 s-2",
+        "forcing.trades.amplitude=1e-11 s-2",
     ):
         options += ["--set", text]
     with np.errstate(over="ignore", invalid="ignore"):
