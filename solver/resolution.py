@@ -13,7 +13,7 @@ from scipy.sparse.linalg import LinearOperator, gmres
 # points; a wavelength from twice it, so that it can at least steepen.
 LENGTHS_KEPT = 0.5
 WAVELENGTHS_KEPT = 2.0
-STEPS_PER_TURNOVER = 20  # common practice: a tenth of a radian or so in a step
+STEPS_PER_TURNOVER = 6  # so that a particle turns by a radian in a step
 # Runge-Kutta of order four is stable to 2 sqrt(2) on the imaginary axis; modes up to
 # two thirds of the grid's turn at 2 pi / 3 times (speed over grid spacing).
 LARGEST_COURANT = 2 * math.sqrt(2) / (2 * math.pi / 3)
