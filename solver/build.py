@@ -8,11 +8,18 @@ from typing import Any
 from .driven import driven_ocean
 from .forcing import vorticity_source
 from .oceans.barotropic import Barotropic, BarotropicSettings
+from .oceans.two_layer import TwoLayer, TwoLayerSettings
 from .settings import GridSettings, TruthConfig
+from .spaces.basin import Basin
+from .spaces.channel import Channel
 from .spaces.periodic import Periodic
 from .topography import heights
 
-SPACES: dict[str, Callable[..., Any]] = {"periodic": Periodic}
+SPACES: dict[str, Callable[..., Any]] = {
+    "periodic": Periodic,
+    "channel": Channel,
+    "basin": Basin,
+}
 
 
 def build_space(grid: GridSettings) -> Any:
@@ -29,8 +36,16 @@ def _barotropic(settings, space, patterns):
     return Barotropic(settings, space, vorticity_source(space, patterns), bottom)
 
 
+def _two_layer(settings, space, patterns):
+    """Two-layer ocean, its patterns in the upper layer."""
+    return TwoLayer(settings, space, vorticity_source(space, patterns))
+
+
 # For each class of settings ``build(settings, space, patterns)``.
-OCEANS: dict[type, Callable[..., Any]] = {BarotropicSettings: _barotropic}
+OCEANS: dict[type, Callable[..., Any]] = {
+    BarotropicSettings: _barotropic,
+    TwoLayerSettings: _two_layer,
+}
 
 
 def build_with(config: TruthConfig, patterns: Mapping[str, Any]) -> Any:

@@ -10,6 +10,7 @@ import numpy as np
 
 from .build import build_ocean
 from .exponential import stepper_of
+from .initial import ModeSettings, NoiseSettings
 from .resolution import flow_scales, laminar_state, unresolved_lengths
 from .settings import TruthConfig
 from .truth import Plan, initial_state, plan_of, random_forcing_of
@@ -105,7 +106,12 @@ def scales_of(
     start = initial_state(config, ocean, 0)
     for name, z in (("initial state", start), ("laminar flow", laminar_state(ocean))):
         if z is not None and z.any():
-            more, wrong = flow_scales(ocean, z, name, config.time.step)
+            seeded = z is start and isinstance(
+                config.initial, NoiseSettings | ModeSettings
+            )
+            more, wrong = flow_scales(
+                ocean, z, name, config.time.step, lengths=not seeded
+            )
             scales += more
             warnings += wrong
     return scales, warnings

@@ -13,7 +13,7 @@ from scipy.sparse.linalg import LinearOperator, gmres
 # points; a wavelength from twice it, so that it can at least steepen.
 LENGTHS_KEPT = 0.5
 WAVELENGTHS_KEPT = 2.0
-STEPS_PER_TURNOVER = 20  # common practice: a tenth of a radian or so in a step
+STEPS_PER_TURNOVER = 6  # so that a particle turns by a radian in a step
 # Runge-Kutta of order four is stable to 2 sqrt(2) on the imaginary axis; modes up to
 # two thirds of the grid's turn at 2 pi / 3 times (speed over grid spacing).
 LARGEST_COURANT = 2 * math.sqrt(2) / (2 * math.pi / 3)
@@ -51,7 +51,7 @@ def unresolved_lengths(scales: Iterable[Scale]) -> Iterator[str]:
 
 
 def flow_scales(
-    ocean: Any, z: np.ndarray, name: str, step: float
+    ocean: Any, z: np.ndarray, name: str, step: float, *, lengths: bool = True
 ) -> tuple[list[Scale], list[str]]:
     """Scales of a flow, and what grid and step do not resolve of them.
 
@@ -64,6 +64,9 @@ def flow_scales(
         What the flow is, for the names of the scales.
     step : float
         Time step [s].
+    lengths : bool
+        Whether the lengths of the flow must be resolved. Those of a weak random
+        start say nothing of the flow to come.
 
     Returns
     -------
@@ -75,7 +78,9 @@ def flow_scales(
     everything = list(ocean.scales(z))
     own = [scale for scale in everything if scale[0] not in still]
     kept = [scale for scale in everything if scale[0] == "shortest wavelength kept"]
-    warnings = [f"{name}: {text}" for text in unresolved_lengths([*own, *kept])]
+    warnings = []
+    if lengths:
+        warnings += [f"{name}: {text}" for text in unresolved_lengths([*own, *kept])]
     rate = ocean.largest_speed(z)
     if rate > 0:
         longest = LARGEST_COURANT / rate

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 
 from .config import setting
 from .exponential import SCHEMES
-from .forcing import Wave
+from .forcing import Wave, Wind
 from .initial import INITIAL_KINDS, InitialSettings, RestSettings
 from .oceans.barotropic import BarotropicSettings
+from .oceans.two_layer_waves import TwoLayerSettings
 from .stirring import Stirring
 from .time_functions import GustBand, break_times
 
@@ -21,8 +22,9 @@ class GridSettings:
 
     space: str = setting(
         default="periodic",
-        choices=("periodic",),
-        doc="the space: periodic in x and y",
+        choices=("periodic", "channel", "basin"),
+        doc="the space: periodic in x and y; a channel, periodic in x between walls "
+        "in y; or a basin between four walls. Walls are free of stress",
     )
     points: tuple[int, int] = setting(
         minimum=8, maximum=8192, doc="grid points in x and y; even numbers"
@@ -116,12 +118,13 @@ class TruthConfig:
         default=1, minimum=0, doc="entropy of every random stream of the study"
     )
     grid: GridSettings = setting(doc="the box and its grid")
-    ocean: BarotropicSettings = setting(
-        kinds={"barotropic": BarotropicSettings}, doc="the flow that is run"
+    ocean: BarotropicSettings | TwoLayerSettings = setting(
+        kinds={"barotropic": BarotropicSettings, "two_layer": TwoLayerSettings},
+        doc="the flow that is run",
     )
-    forcing: dict[str, Wave | GustBand] = setting(
+    forcing: dict[str, Wave | Wind | GustBand] = setting(
         default=dict,
-        kinds={"wave": Wave, "gusts": GustBand},
+        kinds={"wave": Wave, "wind": Wind, "gusts": GustBand},
         doc="what drives the flow, each under a name of its own",
     )
     stirring: Stirring | None = setting(

@@ -24,6 +24,7 @@ from typing import Any
 import numpy as np
 
 from ..block_functions import block_function
+from ..errors import DataError
 from . import two_layer_measures as measures
 from .two_layer_waves import (
     TwoLayerSettings,
@@ -33,6 +34,7 @@ from .two_layer_waves import (
     modes_to_layers,
     stiffness,
 )
+from .wave_blocks import WaveBlocks
 
 __all__ = ["TwoLayer", "TwoLayerSettings"]
 
@@ -63,7 +65,7 @@ class TwoLayer:
 
     Raises
     ------
-    ValueError
+    DataError
         If the space is not periodic in x.
 
     Notes
@@ -92,6 +94,7 @@ class TwoLayer:
 
     energy_conserving = True
     unit = "m s-1"
+    prognostic = ("upper_streamfunction", "lower_streamfunction")
 
     def __init__(
         self,
@@ -100,8 +103,11 @@ class TwoLayer:
         source: np.ndarray | None = None,
     ):
         if not space.x_is_periodic:
-            message = "a two-layer ocean needs a space that is periodic in x"
-            raise ValueError(message)
+            message = (
+                '[ocean] kind = "two_layer": between walls in x the imposed currents '
+                'cannot flow; take [grid] space = "periodic" or "channel"'
+            )
+            raise DataError(message)
         self.settings = settings
         self.space = space
         self.size = 2 * space.n_real
@@ -121,14 +127,18 @@ class TwoLayer:
             settings, space.wavenumber_x, space.k_squared, self.dissipation
         )
         self._blocks = real + 1j * imaginary
-        self._linear = _OnWaves(self._blocks, space.partners)
+        self._linear = WaveBlocks(self._blocks, space.partners)
         self.source = np.zeros(space.n_real) if source is None else np.array(source)
         upper = np.stack([self.source, np.zeros_like(self.source)])
         self._forcing = -(self._from_vorticity * (self._to_modes @ upper)).ravel()
 
-    def streamfunction(self, z: np.ndarray) -> np.ndarray:
+    def streamfunctions(self, z: np.ndarray) -> np.ndarray:
         """Streamfunctions of both layers [m2 s-1], shape (..., 2, n_real)."""
         return self._to_layers @ (self._stacked(z) / self._from_psi)
+
+    def streamfunction(self, z: np.ndarray) -> np.ndarray:
+        """Streamfunction of the upper layer, shape (..., n_real)."""
+        return self.streamfunctions(z)[..., 0, :]
 
     def layers(self, z: np.ndarray) -> np.ndarray:
         """Streamfunctions of both layers of one state, shape (2, n_real): fast."""
@@ -137,8 +147,15 @@ class TwoLayer:
         result += self._layers[:, 1] * modes[1]
         return result
 
-    def coordinates(self, psi: np.ndarray) -> np.ndarray:
-        """Coordinates of both streamfunctions, shape (..., size); the inverse."""
+    def coordinates(self, upper: np.ndarray, lower: np.ndarray) -> np.ndarray:
+        """Coordinates of the layers' streamfunctions, shape (..., size).
+
+        Parameters
+        ----------
+        upper, lower : ndarray, shape (..., n_real)
+            Streamfunctions [m2 s-1], as in `prognostic`.
+        """
+        psi = np.stack([upper, lower], axis=-2)
         return self._flat((self._to_modes @ psi) * self._from_psi)
 
     def potential_vorticity(self, psi: np.ndarray) -> np.ndarray:
@@ -180,7 +197,7 @@ class TwoLayer:
     def bilinear(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """B(u, w), symmetric, shape (..., size), over all leading axes."""
         u, w = np.broadcast_arrays(u, w)
-        psi_u, psi_w = self.streamfunction(u), self.streamfunction(w)
+        psi_u, psi_w = self.streamfunctions(u), self.streamfunctions(w)
         flat = (-1, 2, self.space.n_real)
         pairs = zip(psi_u.reshape(flat), psi_w.reshape(flat), strict=True)
         rows = [self._advection(a, b) for a, b in pairs]
@@ -229,7 +246,7 @@ class TwoLayer:
         _, first, back = np.unique(k, axis=0, return_index=True, return_inverse=True)
         blocks = np.moveaxis(self._blocks[..., first], -1, 0)
         results = np.moveaxis(block_function(blocks, function), 0, -1)
-        multiply = _OnWaves(results[..., back.ravel()], self.space.partners)
+        multiply = WaveBlocks(results[..., back.ravel()], self.space.partners)
         return lambda z: multiply(z.reshape(2, -1)).ravel()
 
     def exact_flow(self, interval: float) -> Callable[[np.ndarray], np.ndarray]:
@@ -289,12 +306,7 @@ class TwoLayer:
 
         The imposed currents are left out: their part is exact in time.
         """
-        (nx, ny), (lx, ly) = self.space.points, self.space.lengths
-        speeds = [self.space.velocity(psi) for psi in self.layers(z)]
-        return max(
-            float(np.max(np.abs(u) * (nx / lx) + np.abs(v) * (ny / ly)))
-            for u, v in speeds
-        )
+        return measures.largest_speed(self, z)
 
     def fields(self, z: np.ndarray) -> dict[str, np.ndarray]:
         """Streamfunction and relative vorticity of the eddies in each layer.
@@ -356,34 +368,3 @@ class TwoLayer:
         np.multiply(between, math.sqrt(h1 * h2), out=result[1])
         result *= self._from_vorticity
         return result.ravel()
-
-
-class _OnWaves:
-    """Multiplies complex blocks (2, 2, n_real) into modes (..., 2, n_real).
-
-    The two parts of a wave, side by side, are one complex amplitude. Waves
-    that do not vary in x may have a single part; they stand first, and their
-    blocks are real.
-    """
-
-    def __init__(self, blocks, partners):
-        self._single = int(np.count_nonzero(partners < 0))
-        self._alone = blocks[..., : self._single].real.copy()
-        self._pairs = blocks[..., self._single :: 2].copy()
-
-    def __call__(self, modes):
-        modes = np.ascontiguousarray(modes, dtype=float)
-        result, single = np.empty_like(modes), self._single
-        _multiply(self._alone, modes[..., :single], result[..., :single])
-        _multiply(
-            self._pairs,
-            modes[..., single:].view(complex),
-            result[..., single:].view(complex),
-        )
-        return result
-
-
-def _multiply(blocks, modes, result):
-    """Multiply blocks (2, 2, n) into modes (..., 2, n)."""
-    np.multiply(blocks[:, 0], modes[..., np.newaxis, 0, :], out=result)
-    result += blocks[:, 1] * modes[..., np.newaxis, 1, :]

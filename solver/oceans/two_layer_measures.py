@@ -111,6 +111,13 @@ def fields(ocean: TwoLayer, z: np.ndarray) -> dict[str, np.ndarray]:
     }
 
 
+def largest_speed(ocean: TwoLayer, z: np.ndarray) -> float:
+    """Largest of |u|/dx + |v|/dy in either layer [s-1], without the currents."""
+    (nx, ny), (lx, ly) = ocean.space.points, ocean.space.lengths
+    flows = (ocean.space.velocity(psi) for psi in ocean.layers(z))
+    return max(float(np.max(abs(u) * (nx / lx) + abs(v) * (ny / ly))) for u, v in flows)
+
+
 def scales(ocean: TwoLayer) -> Iterator[tuple[str, float, str]]:
     """Scales of the settings and the grid as (name, value, unit)."""
     settings, space = ocean.settings, ocean.space

@@ -282,16 +282,17 @@ def most_unstable(
     def omega(k):
         k_squared = k**2 + smallest_l**2
         damping = dissipation(settings, k_squared, edge)
-        return frequencies(settings, k, k_squared, damping)[..., 0]
+        return frequencies(settings, k, k_squared, damping)
 
     k = np.linspace(0.002, 8, 4000) / settings.deformation_radius
     scanned = omega(k)
-    best = int(np.argmax(scanned.imag))
-    # The round-off of a real pair of frequencies is no growth.
-    if scanned[best].imag <= 1e-9 * np.abs(scanned).max():
+    growth = scanned[:, 0].imag
+    best = int(np.argmax(growth))
+    # The round-off of real frequencies and of damping is no growth.
+    if growth[best] <= 1e-9 * np.abs(scanned).max():
         return math.inf, 0.0
     found = optimize.minimize_scalar(
-        lambda k: -omega(k).imag,
+        lambda k: -omega(k)[0].imag,
         bounds=(k[max(best - 1, 0)], k[min(best + 1, len(k) - 1)]),
         method="bounded",
         options={"xatol": 1e-6 * k[best]},
