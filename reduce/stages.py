@@ -6,18 +6,19 @@ import logging
 
 import numpy as np
 
+from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
 from eddyshed.solver.errors import DataError
+from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.segments import reached_step
 from eddyshed.solver.truth import (
-    build_ocean,
     initial_state,
     plan_of,
+    random_forcing_of,
     run_member,
-    stirring_noise,
 )
 
 from .audit import audit
@@ -49,7 +50,8 @@ def preflight(config: StudyConfig) -> None:
     """
     ocean = build_ocean(config)
     initial_state(config, ocean, 0)
-    stirring_noise(config, ocean)
+    random_forcing_of(config, ocean, 0)
+    stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
     elif config.resolved.modes >= ocean.size:

@@ -53,10 +53,7 @@ def forecast_json(found: Forecast, free: int) -> dict[str, Any]:
 def forecast_table(config: TruthConfig, found: Forecast, free: int) -> str:
     """Write a forecast for people."""
     rows = [["what", "value"]]
-    rows += [
-        [name, format_quantity(value, unit) if value != float("inf") else "none"]
-        for name, value, unit in found.scales
-    ]
+    rows += [[name, _scale(value, unit)] for name, value, unit in found.scales]
     rows += [
         ["coordinates of the state", str(found.coordinates)],
         [
@@ -81,6 +78,13 @@ def forecast_table(config: TruthConfig, found: Forecast, free: int) -> str:
     for warning in warnings:
         text += f"\nwarning: {warning}"
     return f"{text}\n{CAUTION}"
+
+
+def _scale(value, unit):
+    """Write a scale; an infinite one stands for something that there is not."""
+    if value == float("inf"):
+        return "none"
+    return f"{value:.4g}" if unit == "1" else format_quantity(value, unit)
 
 
 def stage_json(study: Study, command: str) -> dict[str, Any]:

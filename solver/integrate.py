@@ -7,25 +7,26 @@ from collections.abc import Callable, Iterator
 import numpy as np
 
 from .errors import Blowup
-from .stepping import IntegratingFactorRK4
+from .stepping import Stepper
 
 CHECK_EVERY = 50  # steps; costs under a percent of a step and loses little work
 
 
 def integrate(
-    stepper: IntegratingFactorRK4,
+    stepper: Stepper,
     z: np.ndarray,
     *,
     first_step: int,
     last_step: int,
     energy_bound: float,
+    push: Callable[[np.ndarray], np.ndarray | None] | None = None,
     stir: Callable[[np.ndarray], None] | None = None,
 ) -> Iterator[int]:
     """Advance a state step by step.
 
     Parameters
     ----------
-    stepper : IntegratingFactorRK4
+    stepper : Stepper
         The scheme, its step included.
     z : ndarray, shape (size,)
         The state at `first_step`; changed in place.
@@ -33,6 +34,9 @@ def integrate(
         Steps counted from the start of the run, whose time is zero.
     energy_bound : float
         Energy [m2 s-2] beyond which the run counts as blown up.
+    push : callable, optional
+        Called with the state before each step; what it returns is added to the
+        tendency all through the step.
     stir : callable, optional
         Called with the state after each step to add a random increment.
 
@@ -49,7 +53,8 @@ def integrate(
     """
     for step in range(first_step + 1, last_step + 1):
         # Time is a product, not a running sum: a resumed run sees the same bits.
-        stepper.advance((step - 1) * stepper.step, z)
+        added = None if push is None else push(z)
+        stepper.advance((step - 1) * stepper.step, z, added)
         if stir is not None:
             stir(z)
         if step % CHECK_EVERY == 0 or step == last_step:

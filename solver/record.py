@@ -79,10 +79,24 @@ class TruthRecord:
             return file["resolved"][:]
 
     def read_budget(self) -> dict[str, np.ndarray]:
-        """Energy, enstrophy and the terms of the energy budget, each (n_time,)."""
-        names = ("energy", "enstrophy", "work", "dissipation")
+        """All scalars recorded with the states, by name, each (n_time,)."""
         with open_file(self.path, kind="truth") as file:
-            return {name: file[name][:] for name in names}
+            return {name: file[name][:] for name in self._scalars(file)}
+
+    def budget_units(self) -> dict[str, str]:
+        """Unit of each of :meth:`read_budget`."""
+        with open_file(self.path, kind="truth") as file:
+            return {name: file[name].attrs["units"] for name in self._scalars(file)}
+
+    def _scalars(self, file):
+        """Names of the variables whose one axis is the time of the states."""
+        return [
+            name
+            for name, item in file.items()
+            if name != "time"
+            and item.ndim == 1
+            and [scale.name for scale in item.dims[0].values()] == ["/time"]
+        ]
 
 
 def open_record(path: Path) -> TruthRecord:

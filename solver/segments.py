@@ -13,6 +13,7 @@ from __future__ import annotations
 import json
 from collections.abc import Mapping, Sequence
 from pathlib import Path
+from typing import Any, Protocol
 
 import h5py
 import numpy as np
@@ -20,7 +21,6 @@ import numpy as np
 from .config import differing_keys
 from .errors import RunFolderError
 from .files import add_time, add_variable, new_file, open_file
-from .oceans.barotropic import Barotropic
 from .settings import OutputSettings
 from .streams import Recorder, Stream, add_axes
 
@@ -37,6 +37,21 @@ def reached_step(folder: Path, member: int) -> int:
     return _step_of(paths[-1]) if paths else 0
 
 
+class Resumable(Protocol):
+    """What a run depends on besides its state and the time."""
+
+    def arrays(self) -> dict[str, np.ndarray]:
+        """Numbers to keep, by name."""
+
+    def streams(self) -> dict[str, np.random.Generator]:
+        """Random streams to keep, by name."""
+
+    def restore(
+        self, arrays: Mapping[str, np.ndarray], streams: Mapping[str, dict]
+    ) -> None:
+        """Take back the arrays, and the states of the streams' bit generators."""
+
+
 class MemberFiles:
     """The files of one member: reads its checkpoint, adds segments.
 
@@ -50,7 +65,7 @@ class MemberFiles:
         What is recorded.
     output : OutputSettings
         The axes of the streams.
-    ocean : Barotropic
+    ocean : ocean
         Names the coordinates.
     table : mapping
         The config of the run, in SI.
@@ -67,7 +82,7 @@ class MemberFiles:
         *,
         streams: Sequence[Stream],
         output: OutputSettings,
-        ocean: Barotropic,
+        ocean: Any,
         table: Mapping[str, object],
         title: str,
         total: int,
@@ -90,15 +105,15 @@ class MemberFiles:
         paths = _segments(self.folder)
         return paths[-1] if paths else None
 
-    def restore(self, z: np.ndarray, rng: np.random.Generator) -> int:
+    def restore(self, z: np.ndarray, random: Resumable) -> int:
         """Load the last checkpoint, if there is one, in place.
 
         Parameters
         ----------
         z : ndarray, shape (size,)
             Gets the state.
-        rng : numpy.random.Generator
-            Gets the state of the stirring's stream.
+        random : Resumable
+            Gets back what it held.
 
         Returns
         -------
@@ -119,7 +134,10 @@ class MemberFiles:
             self._check_config(json.loads(file.attrs["config_json"]))
             group = file["checkpoint"]
             z[:] = group["state"][:]
-            rng.bit_generator.state = json.loads(group.attrs["stirring_stream"])
+            arrays = {
+                array.attrs["name"]: array[...] for array in group["random"].values()
+            }
+            random.restore(arrays, json.loads(group.attrs["streams"]))
             return int(group.attrs["step"])
 
     def _check_config(self, made: dict) -> None:
@@ -139,7 +157,7 @@ class MemberFiles:
         step: int,
         recorder: Recorder,
         z: np.ndarray,
-        rng: np.random.Generator,
+        random: Resumable,
     ) -> None:
         """Write a segment: the records so far, and a checkpoint.
 
@@ -151,8 +169,8 @@ class MemberFiles:
             Holds the records; emptied.
         z : ndarray, shape (size,)
             The state.
-        rng : numpy.random.Generator
-            The stirring's stream.
+        random : Resumable
+            What else the run depends on.
 
         Raises
         ------
@@ -171,8 +189,17 @@ class MemberFiles:
             group = file.create_group("checkpoint", track_order=True)
             group.create_dataset("state", data=z)
             group.attrs["step"] = step
-            # Its integers have 128 bits, more than an HDF5 integer holds.
-            group.attrs["stirring_stream"] = json.dumps(rng.bit_generator.state)
+            held = group.create_group("random", track_order=True)
+            for number, (name, values) in enumerate(random.arrays().items()):
+                # Users name forcings; a name of theirs may mean a path to HDF5.
+                array = held.create_dataset(f"array-{number:03d}", data=values)
+                array.attrs["name"] = name
+            streams = {
+                name: generator.bit_generator.state
+                for name, generator in random.streams().items()
+            }
+            # Text: their integers have 128 bits, more than an HDF5 integer holds.
+            group.attrs["streams"] = json.dumps(streams)
         recorder.clear()
         self.write_index()
 

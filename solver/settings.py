@@ -7,8 +7,13 @@ import re
 from dataclasses import dataclass
 
 from .config import setting
-from .forcing import Stirring, Wave
+from .exponential import SCHEMES
+from .forcing import Wave, Wind
+from .initial import INITIAL_KINDS, InitialSettings, RestSettings
 from .oceans.barotropic import BarotropicSettings
+from .oceans.two_layer_waves import TwoLayerSettings
+from .stirring import Stirring
+from .time_functions import GustBand, break_times
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -17,8 +22,9 @@ class GridSettings:
 
     space: str = setting(
         default="periodic",
-        choices=("periodic",),
-        doc="the space: periodic in x and y",
+        choices=("periodic", "channel", "basin"),
+        doc="the space: periodic in x and y; a channel, periodic in x between walls "
+        "in y; or a basin between four walls. Walls are free of stress",
     )
     points: tuple[int, int] = setting(
         minimum=8, maximum=8192, doc="grid points in x and y; even numbers"
@@ -38,27 +44,6 @@ class GridSettings:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class RestSettings:
-    """Start from rest."""
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class NoiseSettings:
-    """Start from random phases and amplitudes on a band of wavenumbers."""
-
-    energy: float = setting(unit="m2 s-2", above=0, doc="energy of the initial state")
-    band: tuple[float, float] = setting(
-        minimum=0,
-        doc="smallest and largest total wavenumber excited, in waves per box",
-    )
-
-    def problems(self):
-        """Rules that go across keys."""
-        if self.band[0] > self.band[1]:
-            yield f"band = {list(self.band)} runs downwards; give the smaller first"
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
 class TimeSettings:
     """Steps, spin-up and length of a truth run."""
 
@@ -72,6 +57,13 @@ class TimeSettings:
         default=1000.0,
         above=0,
         doc="energy beyond which the run counts as blown up",
+    )
+    scheme: str = setting(
+        default=SCHEMES[0],
+        choices=SCHEMES,
+        doc="how a step is made, both of order four and exact for the linear part: "
+        "exponential differencing is the better one where damping is much faster "
+        "than the step",
     )
 
     def problems(self):
@@ -126,20 +118,21 @@ class TruthConfig:
         default=1, minimum=0, doc="entropy of every random stream of the study"
     )
     grid: GridSettings = setting(doc="the box and its grid")
-    ocean: BarotropicSettings = setting(
-        kinds={"barotropic": BarotropicSettings}, doc="the flow that is run"
+    ocean: BarotropicSettings | TwoLayerSettings = setting(
+        kinds={"barotropic": BarotropicSettings, "two_layer": TwoLayerSettings},
+        doc="the flow that is run",
     )
-    forcing: dict[str, Wave] = setting(
+    forcing: dict[str, Wave | Wind | GustBand] = setting(
         default=dict,
-        kinds={"wave": Wave},
-        doc="steady sources of vorticity, each under a name of its own",
+        kinds={"wave": Wave, "wind": Wind, "gusts": GustBand},
+        doc="what drives the flow, each under a name of its own",
     )
     stirring: Stirring | None = setting(
         default=None, doc="random forcing, white in time; absent: none"
     )
-    initial: NoiseSettings | RestSettings = setting(
+    initial: InitialSettings = setting(
         default=RestSettings,
-        kinds={"rest": RestSettings, "noise": NoiseSettings},
+        kinds=INITIAL_KINDS,
         doc="the state that the run starts from",
     )
     time: TimeSettings = setting(doc="steps, spin-up and length")
@@ -167,6 +160,16 @@ class TruthConfig:
                     f"{where} = {interval:.6g} s must be a whole number of steps of "
                     f"{step:.6g} s; try {nearest:.6g} s"
                 )
+        for name, pattern in self.forcing.items():
+            behaviour = getattr(pattern, "time", None)
+            for key, when in break_times(behaviour).items():
+                if not _divides(step, when):
+                    # Inside a step a jump would cost the scheme its order.
+                    yield (
+                        f"[forcing.{name}.time] {key} = {when:.6g} s must be a whole "
+                        f"number of steps of {step:.6g} s; try "
+                        f"{round(when / step) * step:.6g} s"
+                    )
 
 
 def _divides(step: float, interval: float) -> bool:

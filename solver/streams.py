@@ -4,12 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import h5py
 import numpy as np
 
 from .files import add_scale, add_time, add_variable
-from .oceans.barotropic import Barotropic
+from .random_forcing import RandomForcing
 from .settings import OutputSettings
 
 
@@ -58,30 +59,30 @@ class Stream:
     sample: Callable[[float, np.ndarray], Mapping[str, object]]
 
 
-BUDGET = {
-    "energy": ("m2 s-2", "domain-mean energy"),
-    "enstrophy": ("s-2", "domain-mean potential enstrophy"),
-    "work": ("m2 s-3", "energy fed by the steady forcing"),
-    "dissipation": ("m2 s-3", "energy lost to friction (negative)"),
-}
-
-
-def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[Stream]:
+def streams_of(
+    output: OutputSettings,
+    ocean: Any,
+    step: float,
+    random: RandomForcing | None = None,
+) -> list[Stream]:
     """List the streams that a config asks for.
 
     Parameters
     ----------
     output : OutputSettings
         Intervals [s].
-    ocean : Barotropic
+    ocean : ocean
         The ocean.
     step : float
         Time step [s].
+    random : RandomForcing, optional
+        What it feeds is recorded with the budget.
 
     Returns
     -------
     list of Stream
     """
+    fed = {} if random is None else random.fed_units()
     state = Stream(
         time="time",
         every=round(output.state_every / step),
@@ -96,10 +97,14 @@ def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[S
                 name: Variable(
                     dimensions=(), shape=(), units=units, long_name=long_name
                 )
-                for name, (units, long_name) in BUDGET.items()
+                for name, (units, long_name) in {**ocean.budget_units, **fed}.items()
             },
         },
-        sample=lambda t, z: {"state": z.copy(), **ocean.budget(t, z)},
+        sample=lambda t, z: {
+            "state": z.copy(),
+            **ocean.budget(t, z),
+            **({} if random is None else random.fed_so_far()),
+        },
     )
     streams = [state]
     if output.resolved is not None:
@@ -121,7 +126,6 @@ def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[S
         )
     if output.fields_every is not None:
         nx, ny = ocean.space.points
-        units = {"streamfunction": "m2 s-1", "vorticity": "s-1"}
         streams.append(
             Stream(
                 time="fields_time",
@@ -134,7 +138,7 @@ def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[S
                         long_name=name,
                         dtype="float32",
                     )
-                    for name, unit in units.items()
+                    for name, unit in ocean.field_units.items()
                 },
                 sample=lambda t, z: ocean.fields(z),
             )
@@ -142,12 +146,12 @@ def streams_of(output: OutputSettings, ocean: Barotropic, step: float) -> list[S
     return streams
 
 
-def low_coordinates(ocean: Barotropic, up_to: float) -> np.ndarray:
+def low_coordinates(ocean: Any, up_to: float) -> np.ndarray:
     """Indices of the coordinates of total wavenumber at most `up_to`."""
     return np.flatnonzero(np.hypot(*ocean.waves.T) <= up_to + 1e-9)
 
 
-def add_axes(group: h5py.Group, output: OutputSettings, ocean: Barotropic) -> None:
+def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
     """Add the axes behind time, and what is known of them.
 
     Parameters
@@ -156,7 +160,7 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Barotropic) -> No
         Where to.
     output : OutputSettings
         Which streams there are.
-    ocean : Barotropic
+    ocean : ocean
         Names the coordinates.
     """
     axes = {"coordinate": np.arange(ocean.size)}

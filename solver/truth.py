@@ -6,19 +6,19 @@ import logging
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
+from .build import build_ocean, build_with
 from .config import as_table
-from .errors import Blowup, DataError, RunFolderError
-from .forcing import StirringNoise, band_members, pattern_source
+from .errors import Blowup, RunFolderError
+from .exponential import stepper_of
+from .initial import starting_state
 from .integrate import guard, integrate
-from .oceans.barotropic import Barotropic
-from .randomness import stream
+from .random_forcing import RandomForcing, random_forcing
 from .segments import MemberFiles
-from .settings import NoiseSettings, TruthConfig
-from .spaces.periodic import Periodic
-from .stepping import IntegratingFactorRK4
+from .settings import TruthConfig
 from .streams import Recorder, Stream, streams_of
 
 log = logging.getLogger(__name__)
@@ -35,64 +35,34 @@ TRUTH_SECTIONS = (
 )
 
 
-def build_ocean(config: TruthConfig) -> Barotropic:
-    """Build the ocean that a config describes.
-
-    Raises
-    ------
-    DataError
-        If a forcing pattern does not fit the grid.
-    """
-    space = Periodic(config.grid.points, config.grid.lengths)
-    source = np.zeros(space.n_modes, dtype=complex)
-    for name, wave in config.forcing.items():
-        try:
-            source += pattern_source(space, wave)
-        except DataError as error:
-            message = f"[forcing.{name}] {error}"
-            raise DataError(message) from error
-    return Barotropic(config.ocean, space, source)
-
-
-def initial_state(config: TruthConfig, ocean: Barotropic, member: int) -> np.ndarray:
+def initial_state(config: TruthConfig, ocean: Any, member: int) -> np.ndarray:
     """State at time zero, shape (size,).
 
     Raises
     ------
     DataError
-        If no mode lies in the band.
+        If it does not fit the ocean or its grid, or a file cannot be used.
     """
-    modes = np.zeros(ocean.space.n_modes, dtype=complex)
-    if isinstance(config.initial, NoiseSettings):
-        try:
-            where = band_members(ocean.space, config.initial.band)
-        except DataError as error:
-            message = f"[initial] {error}"
-            raise DataError(message) from error
-        rng = stream(config.seed, member, "initial state")
-        modes[where] = rng.standard_normal(2 * where.sum()).view(complex)
-        energy = np.vdot(modes, modes).real / 2
-        modes *= np.sqrt(config.initial.energy / energy)
-    return modes.view(float)
+    return starting_state(config.initial, ocean, seed=config.seed, member=member)
 
 
-def stirring_noise(config: TruthConfig, ocean: Barotropic) -> StirringNoise | None:
-    """Build the stirring of a config, if it has any.
+def random_forcing_of(config: TruthConfig, ocean: Any, member: int) -> RandomForcing:
+    """Build the gusts and the stirring of a member, at the start of their streams.
 
     Raises
     ------
     DataError
-        If no mode lies in the band.
+        If a pattern or a band does not fit the space.
     """
-    if config.stirring is None:
-        return None
-    try:
-        return StirringNoise(
-            ocean.space, config.stirring, ocean.damping, config.time.step
-        )
-    except DataError as error:
-        message = f"[stirring] {error}"
-        raise DataError(message) from error
+    return random_forcing(
+        config.forcing,
+        config.stirring,
+        ocean,
+        lambda forcing: build_with(config, forcing),
+        step=config.time.step,
+        seed=config.seed,
+        member=member,
+    )
 
 
 def truth_table(config: TruthConfig) -> dict[str, object]:
@@ -121,8 +91,10 @@ class Plan:
     streams: list[Stream]
 
 
-def plan_of(config: TruthConfig, ocean: Barotropic) -> Plan:
-    """Count the steps of a run."""
+def plan_of(
+    config: TruthConfig, ocean: Any, random: RandomForcing | None = None
+) -> Plan:
+    """Count the steps of a run; what random forcing feeds is recorded as well."""
     step = config.time.step
     every = round(config.output.state_every / step)
     if config.output.checkpoint_every is not None:
@@ -135,7 +107,7 @@ def plan_of(config: TruthConfig, ocean: Barotropic) -> Plan:
         spin_up=spin_up,
         total=spin_up + round(config.time.duration / step),
         segment=segment,
-        streams=streams_of(config.output, ocean, step),
+        streams=streams_of(config.output, ocean, step, random),
     )
 
 
@@ -177,9 +149,9 @@ def run_member(
         If the run blows up. The segments written so far remain.
     """
     ocean = build_ocean(config)
-    plan = plan_of(config, ocean)
-    noise = stirring_noise(config, ocean)
-    rng = stream(config.seed, member, "stirring")
+    random = random_forcing_of(config, ocean, member)
+    plan = plan_of(config, ocean, random)
+    stepper = stepper_of(config.time.scheme, ocean, config.time.step)
     z = initial_state(config, ocean, member)
     files = MemberFiles(
         folder,
@@ -191,7 +163,7 @@ def run_member(
         title=config.name,
         total=plan.total,
     )
-    first_step = files.restore(z, rng)
+    first_step = files.restore(z, random)
     step_length = config.time.step
     if first_step > plan.total:
         message = (
@@ -208,12 +180,13 @@ def run_member(
         recorder.record(0, 0.0, z)
     log.info("member %d: step %d of %d", member, first_step, plan.total)
     advance = integrate(
-        IntegratingFactorRK4(ocean, step_length),
+        stepper,
         z,
         first_step=first_step,
         last_step=plan.total,
         energy_bound=config.time.energy_bound,
-        stir=None if noise is None else lambda state: noise.add(state, rng),
+        push=random.push,
+        stir=random.stir,
     )
     try:
         # A state on its way out overflows before it is caught: say so once, well.
@@ -224,7 +197,7 @@ def run_member(
                 if step % plan.segment == 0 or step == plan.total or stopping:
                     # A checkpoint is a promise that the run can go on from it.
                     guard(z, step, step_length, config.time.energy_bound)
-                    files.add(step, recorder, z, rng)
+                    files.add(step, recorder, z, random)
                     progress(step)
                 if stopping:
                     break

@@ -199,7 +199,7 @@ def test_check_runs_nothing(tmp_path, capsys, monkeypatch):
     assert list(tmp_path.iterdir()) == []
     assert main(["check", "--reference"]) == 0
     reference = capsys.readouterr().out
-    for key in ("hyperviscosity", "state_every", "variance_tolerance"):
+    for key in ("hyperviscosity_time", "state_every", "variance_tolerance"):
         assert key in reference
 
 

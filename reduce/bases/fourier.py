@@ -40,8 +40,8 @@ def fourier_basis(
 
     Notes
     -----
-    The two parts of a wave are marked as a rotating pair only where the wave
-    varies in x: the oceans here are statistically homogeneous in x, but a
+    The two parts of a wave are marked as a rotating pair only where the wave has
+    two and varies in x: the oceans here are statistically homogeneous in x, but a
     forcing that varies in y tells sine from cosine in the waves that do not.
     """
     waves = model.waves
@@ -63,7 +63,8 @@ def fourier_basis(
         variance=scaled,
     )
     # A wave's rank is that of its two parts together.
-    wave_variance = scaled + scaled[model.partners]
+    alone = model.partners < 0
+    wave_variance = scaled + np.where(alone, 0.0, scaled[model.partners])
     order = np.lexsort((np.arange(size), -wave_variance))
     return (
         everything.take(np.flatnonzero(kept)),
@@ -116,8 +117,8 @@ def kept_coordinates(settings: FourierSettings, waves: np.ndarray) -> np.ndarray
     if kept.all() or not kept.any():
         message = (
             f"[resolved] keeps {'every' if kept.all() else 'no'} wave of the "
-            f"{len(waves) // 2} on this grid (up to {largest} in x and y); change "
-            "up_to or waves, or the grid"
+            f"{len(np.unique(waves, axis=0))} on this grid (up to {largest} in x and "
+            "y); change up_to or waves, or the grid"
         )
         raise DataError(message)
     return kept

@@ -7,9 +7,8 @@ from typing import Any
 
 import numpy as np
 
-from eddyshed.solver.oceans.barotropic import Barotropic
+from eddyshed.solver.build import build_ocean
 from eddyshed.solver.record import TruthRecord
-from eddyshed.solver.truth import build_ocean
 
 from ..estimate import Estimate
 from ..noise import NoiseFit
@@ -29,7 +28,7 @@ class Evidence:
     ----------
     study : Study
         The study.
-    ocean : Barotropic
+    ocean : ocean
         The model that made the truth.
     record : TruthRecord
         The truth.
@@ -52,7 +51,7 @@ class Evidence:
     """
 
     study: Study
-    ocean: Barotropic
+    ocean: Any
     record: TruthRecord
     split: Split
     noise: NoiseFit

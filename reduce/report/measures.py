@@ -127,8 +127,7 @@ def batch_states(record: TruthRecord) -> np.ndarray:
 
 def eastward_profile(ocean, z: np.ndarray) -> np.ndarray:
     """Eastward velocity averaged along x [m s-1], shape (ny,)."""
-    space = ocean.space
-    u = space.to_grid(-1j * space.ky * ocean.streamfunction(z))
+    u, _ = ocean.space.velocity(ocean.streamfunction(z))
     return u.mean(axis=1)
 
 

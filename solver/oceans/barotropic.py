@@ -2,184 +2,200 @@
 
 The equation, for the streamfunction psi with ``u = -psi_y``, ``v = psi_x``:
 
-    q_t + J(psi, q) + beta psi_x = S - friction,   q = lap psi - psi / Ld^2
+    q_t + J(psi, q + h) + U (lap psi + h)_x + beta psi_x = S - friction,
+    q = lap psi - psi / Ld^2,   h = coriolis * height / depth
 
 where S is the vorticity source of the forcing (the curl of the wind stress
-per unit depth and density) and the friction, linear drag, viscosity and
-hyperviscosity, acts on the relative vorticity ``lap psi``. See Pedlosky,
-Geophysical Fluid Dynamics (1987), chapters 3 and 4.
+per unit depth and density), h the topography, U a uniform current that is
+imposed, and the friction, linear drag, viscosity and hyperviscosity, acts on
+the relative vorticity ``lap psi``. See Pedlosky, Geophysical Fluid Dynamics
+(1987), chapters 3 and 4.
+
+U carries no stretching ``psi / Ld^2``: what it would carry is undone by the
+tilt of the surface that balances U itself.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
-from dataclasses import dataclass
 
 import numpy as np
 
-from ..config import setting
-from ..spaces.periodic import Periodic
+from ..errors import DataError
+from .barotropic_scales import scales_of_flow, scales_of_settings
+from .barotropic_settings import BarotropicSettings, friction
 
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class BarotropicSettings:
-    """Parameters of the barotropic ocean, in SI units."""
-
-    beta: float = setting(
-        unit="m-1 s-1",
-        default=0.0,
-        doc="northward gradient of the Coriolis parameter",
-    )
-    deformation_radius: float = setting(
-        unit="m",
-        default=math.inf,
-        above=0,
-        infinite=True,
-        doc='radius of deformation Ld; "inf" for a rigid lid',
-    )
-    drag: float = setting(
-        unit="s-1", default=0.0, minimum=0, doc="linear drag on the vorticity"
-    )
-    viscosity: float = setting(
-        unit="m2 s-1", default=0.0, minimum=0, doc="lateral viscosity"
-    )
-    hyperviscosity: float = setting(
-        unit="m8 s-1",
-        default=0.0,
-        minimum=0,
-        doc="coefficient of the eighth derivative: damps vorticity at the rate "
-        "hyperviscosity * wavenumber^8",
-    )
+__all__ = ["Barotropic", "BarotropicSettings"]
 
 
 class Barotropic:
-    """Barotropic ocean in a doubly periodic box, ``dz/dt = F + A z + B(z, z)``.
+    """Barotropic ocean, ``dz/dt = F + A z + B(z, z)``.
 
     Parameters
     ----------
     settings : BarotropicSettings
-        Physical parameters.
-    space : Periodic
+        Physical parameters; the topography's shapes are not looked at.
+    space : Periodic, Channel or Basin
         The box and its modes.
-    source : ndarray of complex, shape (n_modes,), optional
-        Coefficients of the vorticity source S [s-2]; none by default.
+    source : ndarray, shape (n_real,), optional
+        Vorticity source S, in the space [s-2]; none by default.
+    topography : ndarray, shape (n_real,), optional
+        The field h, in the space [s-1]; a flat bottom by default.
 
     Attributes
     ----------
     size : int
-        Number of real coordinates, two for each complex mode.
-    exponents : ndarray of complex, shape (n_modes,)
-        The linear operator, which is diagonal and all of it treated exactly in
-        time: beta term and friction [s-1].
+        Number of real coordinates.
+    damping : ndarray, shape (size,)
+        Rate at which friction damps each coordinate [s-1].
     energy_conserving : bool
         B does no work: ``inner(z, B(z, z)) = 0``.
 
+    Raises
+    ------
+    DataError
+        If a mean current is imposed across walls.
+
     Notes
     -----
-    The coordinates z are the real and imaginary parts, interleaved, of
-    ``c_k = sqrt(2 (K^2 + 1/Ld^2)) psi_k``. They are orthonormal in the energy
-    inner product: the domain-mean energy
-    ``<|grad psi|^2 + psi^2/Ld^2> / 2`` [m2 s-2] is ``z.z / 2``, and z has the
-    unit of a velocity. As a flow, the real part of c_k is the amplitude of
-    ``cos(k.x)`` and the imaginary part that of ``-sin(k.x)``.
+    The coordinates z are those of the space, of the streamfunction, times the
+    root of ``norm * (K^2 + 1/Ld^2)``. They are orthonormal in the energy
+    inner product: the domain-mean energy ``<|grad psi|^2 + psi^2/Ld^2> / 2``
+    [m2 s-2] is ``z.z / 2``, and z has the unit of a velocity.
+
+    Friction, and in spaces that are periodic in x also the waves due to beta
+    and to the mean current, belong to one wave each and are treated exactly
+    in time. In a basin beta couples all modes of one wavenumber in y; it is
+    left to the explicit part, as it is not stiff there: the fastest basin
+    mode turns by ``beta / (2 K)`` with K the smallest wavenumber. Topography
+    is explicit everywhere: it couples all modes.
+
+    Between walls psi vanishes at the walls, also the part of it that does not
+    vary in x, so a channel has no net transport.
     """
 
     energy_conserving = True
     unit = "m s-1"
+    prognostic = ("streamfunction",)
 
     def __init__(
         self,
         settings: BarotropicSettings,
-        space: Periodic,
+        space,
         source: np.ndarray | None = None,
+        topography: np.ndarray | None = None,
     ):
+        if settings.mean_current != 0 and not space.x_is_periodic:
+            message = (
+                f"[ocean] mean_current = {settings.mean_current:.6g} m s-1 would pass "
+                'through walls; leave it out, or take [grid] space = "periodic" or '
+                '"channel"'
+            )
+            raise DataError(message)
         self.settings = settings
         self.space = space
-        self.size = 2 * space.n_modes
+        self.size = space.n_real
         k2 = space.k_squared
-        stiffness = k2 + settings.deformation_radius**-2
-        self._to_psi = 1 / np.sqrt(2 * stiffness)
-        # d(psi_k)/dt = (J_k - S_k) / stiffness, in the coordinates c_k:
-        self._from_vorticity = np.sqrt(2 / stiffness)
-        friction = (
-            settings.drag + settings.viscosity * k2 + settings.hyperviscosity * k2**4
-        )
-        self.exponents = (1j * settings.beta * space.kx - friction * k2) / stiffness
-        self.source = (
-            np.zeros(space.n_modes, dtype=complex)
-            if source is None
-            else np.array(source, dtype=complex)
-        )
+        self._stiffness = k2 + settings.deformation_radius**-2
+        self._to_psi = 1 / np.sqrt(space.norm * self._stiffness)
+        # d(psi)/dt = (J(psi, q + h) - S) / stiffness, in these coordinates:
+        self._from_vorticity = np.sqrt(space.norm / self._stiffness)
+        self._to_vorticity = -k2
+        self.damping = friction(settings, space) * k2 / self._stiffness
+        self._frequency = None
+        # Where it is not a rotation, the beta term stays in the explicit part.
+        self._beta = 0.0 if space.x_is_periodic else settings.beta
+        if space.x_is_periodic:
+            gradient = settings.beta - settings.mean_current * k2
+            self._frequency = gradient * space.wavenumber_x / self._stiffness
+        self.source = np.zeros(self.size) if source is None else np.array(source)
+        self.topography = None if topography is None else np.array(topography)
         self._forcing = -self._from_vorticity * self.source
+        self._pushed = np.zeros(self.size)
+        if topography is not None and settings.mean_current != 0:
+            gradient = space.ddx(self.topography)
+            self._pushed = settings.mean_current * self._from_vorticity * gradient
 
     def streamfunction(self, z: np.ndarray) -> np.ndarray:
-        """Coefficients of the streamfunction [m2 s-1], shape (..., n_modes)."""
-        return _as_modes(z) * self._to_psi
+        """Streamfunction in the space [m2 s-1], shape (..., n_real)."""
+        return np.multiply(z, self._to_psi)
 
     def coordinates(self, psi: np.ndarray) -> np.ndarray:
         """Coordinates of a streamfunction, shape (..., size); inverse of the above."""
-        return _as_real(psi / self._to_psi)
+        return np.divide(psi, self._to_psi)
 
     @property
     def waves(self) -> np.ndarray:
         """Integer wavenumbers (x, y) of each coordinate, shape (size, 2)."""
-        return np.repeat(self.space.waves, 2, axis=0)
+        return self.space.waves
 
     @property
     def partners(self) -> np.ndarray:
-        """Index of the other part, cosine or sine, of the same wave, shape (size,)."""
-        return np.arange(self.size) ^ 1
+        """Index of the other part of the same wave, or -1, shape (size,)."""
+        return self.space.partners
 
     @property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: part and integer wavenumbers."""
-        return tuple(
-            f"{part} {k},{m}" for k, m in self.space.waves for part in ("cos", "sin")
-        )
+        return self.space.labels
 
     def forcing(self, t: float) -> np.ndarray:
         """F [m s-2], shape (size,)."""
-        return _as_real(self._forcing.copy())
+        return self._forcing + self._pushed
 
     def linear(self, z: np.ndarray) -> np.ndarray:
         """A z [m s-2], shape (..., size)."""
-        return _as_real(_as_modes(z) * self.exponents)
+        result = self.linear_function(lambda rate: rate)(z)
+        coupling = self._coupling(z)
+        return result if coupling is None else result + coupling
 
     def bilinear(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """B(u, w), symmetric, shape (..., size), over all leading axes."""
         u, w = np.broadcast_arrays(u, w)
-        psi_u, psi_w = self.streamfunction(u), self.streamfunction(w)
-        shape = psi_u.shape
-        result = np.empty((math.prod(shape[:-1]), shape[-1]), dtype=complex)
-        pairs = zip(
-            psi_u.reshape(result.shape), psi_w.reshape(result.shape), strict=True
-        )
-        for row, (a, b) in enumerate(pairs):
-            result[row] = self.space.advection(a, b)
-        return _as_real((result * self._from_vorticity).reshape(shape))
+        flat = (-1, self.size)
+        psi_u, psi_w = (self.streamfunction(v).reshape(flat) for v in (u, w))
+        pairs = zip(psi_u, psi_w, strict=True)
+        rows = [self.space.advection(a, b) for a, b in pairs]
+        return np.reshape(rows, u.shape) * self._from_vorticity
 
     def inner(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
 
     @property
-    def damping(self) -> np.ndarray:
-        """Linear damping rate of each mode [s-1], shape (n_modes,)."""
-        return -self.exponents.real
-
-    @property
     def fastest_frequency(self) -> float:
-        """Largest angular frequency of a linear wave [s-1]."""
-        return float(np.abs(self.exponents.imag).max())
+        """Largest angular frequency of a linear wave [s-1].
+
+        With topography an upper bound: the greatest slope of h adds to it.
+        """
+        if self._frequency is not None:
+            fastest = float(np.abs(self._frequency).max())
+        else:
+            fastest = self._fastest_basin_mode()
+        if self.topography is not None:
+            slope = np.hypot(*self.space.velocity(self.topography)).max()
+            fastest += float(slope / math.sqrt(self._stiffness.min()))
+        return fastest
+
+    def linear_function(
+        self, function: Callable[[np.ndarray], np.ndarray]
+    ) -> Callable[[np.ndarray], np.ndarray]:
+        """Return ``z -> function(L) z`` for the part L of A treated exactly.
+
+        Parameters
+        ----------
+        function : callable
+            Entire function of complex rates [s-1], real on the real axis.
+        """
+        return self.space.linear_function(self.damping, self._frequency, function)
 
     def exact_flow(self, interval: float) -> Callable[[np.ndarray], np.ndarray]:
-        """Return the function ``z -> exp(A interval) z``."""
-        factor = np.exp(self.exponents * interval)
-        return lambda z: (z.view(complex) * factor).view(float)
+        """Return the function ``z -> exp(L interval) z``."""
+        return self.space.flow(self.damping, self._frequency, interval)
 
     def explicit(self, t: float, z: np.ndarray) -> np.ndarray:
-        """F + B(z, z): what is left when A is treated exactly.
+        """F, B(z, z) and the part of A that is not treated exactly.
 
         Parameters
         ----------
@@ -191,14 +207,24 @@ class Barotropic:
         -------
         ndarray, shape (size,)
         """
-        result = self.space.advection(z.view(complex) * self._to_psi)
+        psi = z * self._to_psi
+        if self.topography is None:
+            result = self.space.advection(psi)
+        else:
+            vorticity = self._to_vorticity * psi
+            vorticity += self.topography
+            result = self.space.jacobian(psi, vorticity)
+        if self._beta:
+            psi *= self._beta
+            result += self.space.ddx(psi)
         result *= self._from_vorticity
         result += self._forcing
-        return result.view(float)
+        result += self._pushed
+        return result
 
     def tendency(self, t: float, z: np.ndarray) -> np.ndarray:
         """dz/dt [m s-2], shape (..., size): the sum of the three parts."""
-        result = self.linear(z)
+        result = self.linear_function(lambda rate: rate)(z)
         states = np.ascontiguousarray(z, dtype=float).reshape(-1, self.size)
         rates = result.reshape(-1, self.size)
         for i, state in enumerate(states):
@@ -206,7 +232,7 @@ class Barotropic:
         return result
 
     def budget(self, t: float, z: np.ndarray) -> dict[str, float]:
-        """Energy, enstrophy and the sources and sinks of energy.
+        """Energy and potential enstrophy, with their sources and sinks.
 
         Parameters
         ----------
@@ -217,22 +243,54 @@ class Barotropic:
         Returns
         -------
         dict
-            ``energy`` [m2 s-2], ``enstrophy`` [s-2], ``work`` of the steady
-            forcing and ``dissipation`` (negative) [m2 s-3].
+            As `budget_units` says. Those in m2 s-3 sum to the rate of change of
+            the energy, those in s-3 to that of the enstrophy.
         """
-        modes = _as_modes(z)
-        power = modes.real**2 + modes.imag**2
-        k2 = self.space.k_squared
-        stiffness = k2 + self.settings.deformation_radius**-2
-        return {
+        power, weighted = z * z, self._stiffness * z
+        found = {
             "energy": float(power.sum() / 2),
-            "enstrophy": float((power * stiffness).sum() / 2),
-            "work": float(np.vdot(self._forcing, modes).real),
-            "dissipation": float((power * self.exponents.real).sum()),
+            "enstrophy": float(weighted @ z / 2),
+            "work": float(self._forcing @ z),
+            "dissipation": -float(self.damping @ power),
+            "enstrophy_work": float(self._forcing @ weighted),
+            "enstrophy_dissipation": -float((self.damping * z) @ weighted),
         }
+        if self._has_form_drag:
+            found["form_drag"] = float(self._pushed @ z)
+            found["enstrophy_form_drag"] = float(self._pushed @ weighted)
+        if self._is_coupled:
+            found["enstrophy_exchange"] = float(self._coupling(z) @ weighted)
+        return found
+
+    @property
+    def budget_units(self) -> dict[str, tuple[str, str]]:
+        """Units and long name of what `budget` returns."""
+        units = {
+            "energy": ("m2 s-2", "domain-mean energy"),
+            "enstrophy": ("s-2", "domain-mean potential enstrophy"),
+            "work": ("m2 s-3", "energy fed by the forcing"),
+            "dissipation": ("m2 s-3", "energy lost to friction (negative)"),
+            "enstrophy_work": ("s-3", "enstrophy fed by the forcing"),
+            "enstrophy_dissipation": ("s-3", "enstrophy lost to friction (negative)"),
+        }
+        if self._has_form_drag:
+            units["form_drag"] = (
+                "m2 s-3",
+                "energy that the mean current loses to pressure on topography",
+            )
+            units["enstrophy_form_drag"] = (
+                "s-3",
+                "enstrophy made by the mean current over topography",
+            )
+        if self._is_coupled:
+            units["enstrophy_exchange"] = (
+                "s-3",
+                "enstrophy made by beta and topography",
+            )
+        return units
 
     def fields(self, z: np.ndarray) -> dict[str, np.ndarray]:
-        """Streamfunction [m2 s-1] and relative vorticity [s-1] on the grid.
+        """Streamfunction and relative vorticity on the grid.
 
         Parameters
         ----------
@@ -241,56 +299,62 @@ class Barotropic:
         Returns
         -------
         dict of ndarray, shape (ny, nx)
+            Names and units as `field_units` says.
         """
         psi = self.streamfunction(z)
         return {
             "streamfunction": self.space.to_grid(psi),
-            "vorticity": self.space.to_grid(-self.space.k_squared * psi),
+            "vorticity": self.space.to_grid(self._to_vorticity * psi),
         }
+
+    @property
+    def field_units(self) -> dict[str, str]:
+        """Unit of each field."""
+        return {"streamfunction": "m2 s-1", "vorticity": "s-1"}
 
     def largest_speed(self, z: np.ndarray) -> float:
         """Largest of |u|/dx + |v|/dy on the grid [s-1], for the CFL number."""
-        psi = self.streamfunction(z)
+        u, v = self.space.velocity(self.streamfunction(z))
         (nx, ny), (lx, ly) = self.space.points, self.space.lengths
-        u = self.space.to_grid(-1j * self.space.ky * psi)
-        v = self.space.to_grid(1j * self.space.kx * psi)
         return float(np.max(np.abs(u) * (nx / lx) + np.abs(v) * (ny / ly)))
 
     def scales(self, z: np.ndarray | None = None) -> Iterable[tuple[str, float, str]]:
         """Derived scales as (name, value, unit), the flow's own if `z` is given."""
-        k2 = self.space.k_squared
-        damping = self.damping
-        spacing = max(
-            length / n
-            for length, n in zip(self.space.lengths, self.space.points, strict=True)
-        )
-        yield "grid spacing", spacing, "m"
-        yield "shortest wavelength kept", 2 * np.pi / math.sqrt(k2.max()), "m"
-        yield "deformation radius", self.settings.deformation_radius, "m"
-        if damping.max() > 0:
-            yield "shortest damping time", 1 / damping.max(), "s"
-        if damping.min() > 0:
-            yield "longest damping time", 1 / damping.min(), "s"
-        if self.fastest_frequency > 0:
-            period = 2 * np.pi / self.fastest_frequency
-            yield "shortest Rossby wave period", period, "s"
+        yield from scales_of_settings(self)
         if z is not None:
-            energy = float(z @ z) / 2
-            enstrophy = float((self.space.k_squared.repeat(2) * z * z).sum() / 2)
-            speed = math.sqrt(2 * energy)
-            yield "rms speed", speed, "m s-1"
-            if self.settings.beta > 0:
-                rhines = 2 * np.pi * math.sqrt(speed / self.settings.beta)
-                yield "Rhines wavelength", rhines, "m"
-            if enstrophy > 0:
-                yield "eddy turnover time", 2 * np.pi / math.sqrt(2 * enstrophy), "s"
+            yield from scales_of_flow(self, z)
 
+    @property
+    def _has_form_drag(self):
+        """Whether the mean current feels topography."""
+        return self.topography is not None and self.settings.mean_current != 0
 
-def _as_modes(z):
-    """Real coordinates (..., size) as complex ones (..., size / 2)."""
-    return np.ascontiguousarray(z, dtype=float).view(complex)
+    @property
+    def _is_coupled(self):
+        """Whether a part of A is not treated exactly."""
+        return self.topography is not None or self._beta != 0
 
+    def _coupling(self, z):
+        """Part of A z that is not treated exactly, None if there is none."""
+        if not self._is_coupled:
+            return None
+        psi = self.streamfunction(z)
+        result = np.zeros(psi.shape)
+        if self.topography is not None:
+            rows = [
+                self.space.jacobian(row, self.topography)
+                for row in psi.reshape(-1, self.size)
+            ]
+            result += np.reshape(rows, psi.shape)
+        if self._beta:
+            result += self._beta * self.space.ddx(psi)
+        return result * self._from_vorticity
 
-def _as_real(modes):
-    """Complex coordinates (..., size / 2) as real ones (..., size)."""
-    return np.ascontiguousarray(modes).view(float)
+    def _fastest_basin_mode(self):
+        """Largest frequency of the basin's Rossby modes, as truncated [s-1]."""
+        # Those of one half wave in y: any other wavenumber there is stiffer.
+        first = np.flatnonzero(self.space.waves[:, 1] == 1)
+        units = np.eye(self.size)[first]
+        matrix = self._beta * self.space.ddx(units * self._to_psi)[:, first]
+        matrix *= self._from_vorticity[first]
+        return float(np.abs(np.linalg.eigvalsh(1j * matrix)).max())

@@ -33,7 +33,7 @@ lengths = ["1800 km", "1800 km"]
 kind = "barotropic"
 beta = "1e-11 m-1 s-1"
 drag = "0.005 1/d"
-hyperviscosity = "2e32 m8/s"
+hyperviscosity_time = "6.7 d"
 [forcing.trades]
 kind = "wave"
 amplitude = "4e-12 s-2"

@@ -10,12 +10,13 @@ import h5py
 import numpy as np
 import pytest
 
+from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.errors import Blowup, DataError, RunFolderError
 from eddyshed.solver.record import open_record
 from eddyshed.solver.segments import member_paths
 from eddyshed.solver.settings import TruthConfig
-from eddyshed.solver.truth import build_ocean, run_member
+from eddyshed.solver.truth import run_member
 
 TINY = """
 name = "tiny"
@@ -27,7 +28,7 @@ lengths = ["1000 km", "1000 km"]
 kind = "barotropic"
 beta = "2e-11 m-1 s-1"
 drag = "0.01 1/d"
-hyperviscosity = "2e30 m8/s"
+hyperviscosity_time = "6 d"
 [forcing.wind]
 kind = "wave"
 amplitude = "5e-12 s-2"

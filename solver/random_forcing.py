@@ -1,0 +1,203 @@
+"""All random forcing of one run: gusts and white stirring, and what they fed.
+
+None of it is part of F. Gusts push the state during a step, stirring kicks it
+between steps. The energy that each feeds is summed up step by step, because no
+record of the state could give it: the state and the noise are correlated.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+
+from .diagnostics import FED
+from .driven import is_random, pattern_of
+from .errors import DataError
+from .gusts import GustProcess
+from .randomness import stream
+from .stirring import Stirring, StirringNoise, band_coordinates
+from .time_functions import GustBand
+
+
+@dataclass(slots=True, kw_only=True)
+class RandomForcing:
+    """Random forcing of a run, with all that a checkpoint must hold of it.
+
+    Attributes
+    ----------
+    step : float
+        Time step [s].
+    gusts : dict of str to GustProcess
+        By name of the forcing.
+    stirring : StirringNoise or None
+        White stirring, if there is any.
+    stirring_rng : numpy.random.Generator
+        Its stream.
+    fed : dict of str to float
+        Energy fed by ``gusts`` and by ``stirring`` since the start of the run
+        [m2 s-2]; only those that there are.
+    """
+
+    step: float
+    gusts: dict[str, GustProcess]
+    stirring: StirringNoise | None
+    stirring_rng: np.random.Generator
+    fed: dict[str, float] = field(init=False)
+    _before: np.ndarray | None = field(init=False, default=None)
+    _push: np.ndarray | None = field(init=False, default=None)
+
+    def __post_init__(self):
+        acting = {"gusts": bool(self.gusts), "stirring": self.stirring is not None}
+        self.fed = {name: 0.0 for name, acts in acting.items() if acts}
+
+    def push(self, z: np.ndarray) -> np.ndarray | None:
+        """Mean tendency of all gusts over the step that is about to be made.
+
+        Parameters
+        ----------
+        z : ndarray, shape (size,)
+            The state at its start.
+
+        Returns
+        -------
+        ndarray, shape (size,), or None
+            None if there are no gusts.
+        """
+        if not self.gusts:
+            return None
+        self._before = z.copy()
+        self._push = np.zeros(len(z))
+        for gust in self.gusts.values():
+            gust.add_push(self._push)
+        return self._push
+
+    def stir(self, z: np.ndarray) -> None:
+        """Count what the gusts fed over the step just made, then kick the state.
+
+        Parameters
+        ----------
+        z : ndarray, shape (size,)
+            The state at the end of the step; changed in place.
+        """
+        if self._push is not None:
+            # The push is constant, so its work is push . (integral of z): the
+            # trapezoidal rule is of order two, like the gusts themselves.
+            middle = self._before + z
+            self.fed["gusts"] += self.step / 2 * float(self._push @ middle)
+        if self.stirring is not None:
+            self.fed["stirring"] += self.stirring.add(z, self.stirring_rng)
+
+    def fed_units(self) -> dict[str, tuple[str, str]]:
+        """Units and long names of what :meth:`fed_so_far` returns."""
+        return {
+            f"energy{FED}{name}": ("m2 s-2", f"energy fed by {name} since the start")
+            for name in self.fed
+        }
+
+    def fed_so_far(self) -> dict[str, float]:
+        """Energy fed since the start of the run [m2 s-2], for the record."""
+        return {f"energy{FED}{name}": value for name, value in self.fed.items()}
+
+    def arrays(self) -> dict[str, np.ndarray]:
+        """All numbers that go into a checkpoint, by name."""
+        found = {f"gust {name}": gust.value for name, gust in self.gusts.items()}
+        found |= {f"fed {name}": np.array(value) for name, value in self.fed.items()}
+        return found
+
+    def streams(self) -> dict[str, np.random.Generator]:
+        """All random streams that go into a checkpoint, by name."""
+        found = {f"gust {name}": gust.rng for name, gust in self.gusts.items()}
+        return found | {"stirring": self.stirring_rng}
+
+    def restore(
+        self, arrays: Mapping[str, np.ndarray], streams: Mapping[str, dict]
+    ) -> None:
+        """Go on from a checkpoint.
+
+        Parameters
+        ----------
+        arrays : mapping of str to ndarray
+            As :meth:`arrays` gave them.
+        streams : mapping of str to dict
+            State of the bit generator of each of :meth:`streams`.
+        """
+        for name, gust in self.gusts.items():
+            gust.value = np.array(arrays[f"gust {name}"])
+        self.fed = {name: float(arrays[f"fed {name}"]) for name in self.fed}
+        for name, generator in self.streams().items():
+            generator.bit_generator.state = streams[name]
+
+
+def random_forcing(
+    forcing: Mapping[str, Any],
+    stirring: Stirring | None,
+    ocean: Any,
+    build: Callable[[Mapping[str, Any]], Any],
+    *,
+    step: float,
+    seed: int,
+    member: int,
+) -> RandomForcing:
+    """Build all random forcing of a run, at the start of its streams.
+
+    Parameters
+    ----------
+    forcing : mapping of str to section
+        All patterns by name; those that are not gusts are left out.
+    stirring : Stirring or None
+        White stirring.
+    ocean : ocean
+        Its coordinates are stirred.
+    build : callable
+        ``build(patterns)`` makes the ocean with some of the patterns.
+    step : float
+        Time step [s].
+    seed, member : int
+        Choose the streams; each forcing has one of its own.
+
+    Returns
+    -------
+    RandomForcing
+
+    Raises
+    ------
+    DataError
+        If a band or a pattern does not fit the space.
+    """
+    chosen = {name: p for name, p in forcing.items() if is_random(p)}
+    without = build({}) if chosen else None
+    gusts = {}
+    for name, section in chosen.items():
+        where = None
+        if isinstance(section, GustBand):
+            try:
+                where = band_coordinates(ocean.waves, section.band)
+            except DataError as error:
+                message = f"[forcing.{name}] {error}"
+                raise DataError(message) from error
+            # z.z is the mean square velocity: shared equally by the coordinates.
+            each = section.acceleration / np.sqrt(len(where))
+            patterns = np.full(len(where), each)
+            decorrelation = section.decorrelation
+        else:
+            pattern = pattern_of(build({name: section}), without)
+            patterns = section.time.deviation * pattern[np.newaxis]
+            decorrelation = section.time.decorrelation
+        rng = stream(seed, member, f"gusts {name}")
+        gusts[name] = GustProcess(patterns, decorrelation, step, rng, where)
+    noise = None
+    if stirring is not None:
+        try:
+            noise = StirringNoise(ocean, stirring, step)
+        except DataError as error:
+            message = f"[stirring] {error}"
+            raise DataError(message) from error
+    return RandomForcing(
+        step=step,
+        gusts=gusts,
+        stirring=noise,
+        stirring_rng=stream(seed, member, "stirring"),
+    )
