@@ -36,7 +36,7 @@ class Driven(Quadratic):
 def ocean():
     rng = np.random.default_rng(2)
     space = Periodic((12, 8), (6.0, 4.0))
-    source = rng.standard_normal(2 * space.n_modes).view(complex)
+    source = rng.standard_normal(space.n_real)
     settings = BarotropicSettings(beta=2.0, deformation_radius=0.7, drag=0.3)
     return Barotropic(settings, space, source)
 
