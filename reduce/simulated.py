@@ -100,5 +100,5 @@ def load(path: Path, stamp: str) -> Simulated | None:
                 ),
                 cost=float(file.attrs["cost"]),
             )
-    except DataError:
+    except (DataError, OSError, KeyError, RuntimeError):  # what h5py may raise
         return None

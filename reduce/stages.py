@@ -8,12 +8,14 @@ import numpy as np
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
+from eddyshed.solver.driven import is_random
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.segments import reached_step
+from eddyshed.solver.time_functions import Steady
 from eddyshed.solver.truth import (
     initial_state,
     plan_of,
@@ -40,14 +42,35 @@ from .study import Interrupted, Stage, Study, fingerprint_of
 log = logging.getLogger(__name__)
 
 
-def preflight(config: StudyConfig) -> None:
+def preflight(config: StudyConfig, command: str) -> None:
     """Refuse now what would fail only after the truth was run.
+
+    Parameters
+    ----------
+    config : StudyConfig
+        The config.
+    command : str
+        The command that was given: a truth run may do what a reduction of it
+        cannot.
 
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid.
+        If a pattern, a band or the basis does not fit the grid, or a reduction
+        is asked for under a forcing that varies.
     """
+    varying = [
+        name
+        for name, pattern in config.forcing.items()
+        if not is_random(pattern) and not isinstance(pattern.time, Steady)
+    ]
+    if varying and command not in ("truth", "check"):
+        message = (
+            f"[forcing.{varying[0]}] varies in time, and the reduced models are made "
+            "for a steady forcing; make it steady, or run only the truth: eddyshed "
+            "truth"
+        )
+        raise DataError(message)
     ocean = build_ocean(config)
     initial_state(config, ocean, 0)
     random_forcing_of(config, ocean, 0)

@@ -191,7 +191,14 @@ def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
         if name not in file:
             message = f"{path}: has no part {name!r}"
             raise DataError(message)
-        return unpack(file[name], cls)
+        try:
+            return unpack(file[name], cls)
+        except (OSError, KeyError, RuntimeError, ValueError) as error:
+            message = (
+                f"{path}: part {name!r} cannot be read ({error}); remove the file and "
+                "run the study again"
+            )
+            raise DataError(message) from error
 
 
 def write_json(path: Path, stamp: str, content: dict[str, Any]) -> None:
@@ -209,13 +216,19 @@ def read_json(path: Path) -> dict[str, Any]:
     Raises
     ------
     DataError
-        If it is missing or not JSON.
+        If it is missing or not an object in JSON.
     """
     try:
-        return json.loads(path.read_text(encoding="utf-8"))
+        found = json.loads(path.read_text(encoding="utf-8"))
+        problem = None if isinstance(found, dict) else "not an object"
     except (OSError, ValueError) as error:
-        message = f"{path}: cannot be read ({error}); remove it and run the study again"
-        raise DataError(message) from error
+        problem = error
+    if problem is not None:
+        message = (
+            f"{path}: cannot be read ({problem}); remove it and run the study again"
+        )
+        raise DataError(message)
+    return found
 
 
 def read_fingerprint(path: Path) -> str:

@@ -363,3 +363,12 @@ def test_a_closed_pipe_is_no_error():
         check=False,
     )
     assert "Traceback" not in result.stderr
+
+
+def test_a_reduction_under_varying_forcing_is_refused(tmp_path, capsys):
+    season = 'forcing.trades.time={kind="seasonal", period="360 d", amplitude=0.2}'
+    arguments = [str(TINY), "--runs", str(tmp_path), "--set", season]
+    assert main(["reduce", *arguments]) == 2
+    assert "[forcing.trades] varies in time" in capsys.readouterr().err
+    assert not list(tmp_path.rglob("*.h5"))
+    assert main(["check", *arguments[:1], *arguments[3:]]) == 0
