@@ -8,11 +8,14 @@ from typing import Any
 from .driven import driven_ocean
 from .forcing import vorticity_source
 from .oceans.barotropic import Barotropic, BarotropicSettings
+from .oceans.boussinesq import Boussinesq
+from .oceans.boussinesq_waves import BoussinesqSettings
 from .oceans.two_layer import TwoLayer, TwoLayerSettings
 from .settings import GridSettings, TruthConfig
 from .spaces.basin import Basin
 from .spaces.channel import Channel
 from .spaces.periodic import Periodic
+from .surface_buoyancy import SurfaceBuoyancy, buoyancy_source
 from .topography import heights
 
 SPACES: dict[str, Callable[..., Any]] = {
@@ -41,10 +44,27 @@ def _two_layer(settings, space, patterns):
     return TwoLayer(settings, space, vorticity_source(space, patterns))
 
 
+def _boussinesq(settings, space, patterns):
+    """Boussinesq slice, with sources of vorticity and of buoyancy."""
+    heating = {
+        name: pattern
+        for name, pattern in patterns.items()
+        if isinstance(pattern, SurfaceBuoyancy)
+    }
+    rest = {name: patterns[name] for name in patterns if name not in heating}
+    return Boussinesq(
+        settings,
+        space,
+        vorticity_source(space, rest),
+        buoyancy_source(space, heating),
+    )
+
+
 # For each class of settings ``build(settings, space, patterns)``.
 OCEANS: dict[type, Callable[..., Any]] = {
     BarotropicSettings: _barotropic,
     TwoLayerSettings: _two_layer,
+    BoussinesqSettings: _boussinesq,
 }
 
 

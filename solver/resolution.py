@@ -38,6 +38,10 @@ def unresolved_lengths(scales: Iterable[Scale]) -> Iterator[str]:
     table = {name: value for name, value, unit in scales if unit == "m"}
     kept = table.pop("shortest wavelength kept")
     table.pop("grid spacing", None)
+    # The boundary layer of a basin is as wide as the widest of its balances.
+    layers = sorted((n for n in table if n.endswith("layer width")), key=table.get)
+    for name in layers[:-1]:
+        table.pop(name)
     for name, value in table.items():
         wave = "wavelength" in name
         least = kept * (WAVELENGTHS_KEPT if wave else LENGTHS_KEPT)

@@ -11,8 +11,10 @@ from .exponential import SCHEMES
 from .forcing import Wave, Wind
 from .initial import INITIAL_KINDS, InitialSettings, RestSettings
 from .oceans.barotropic import BarotropicSettings
+from .oceans.boussinesq_waves import BoussinesqSettings
 from .oceans.two_layer_waves import TwoLayerSettings
 from .stirring import Stirring
+from .surface_buoyancy import SurfaceBuoyancy
 from .time_functions import GustBand, break_times
 
 
@@ -118,13 +120,22 @@ class TruthConfig:
         default=1, minimum=0, doc="entropy of every random stream of the study"
     )
     grid: GridSettings = setting(doc="the box and its grid")
-    ocean: BarotropicSettings | TwoLayerSettings = setting(
-        kinds={"barotropic": BarotropicSettings, "two_layer": TwoLayerSettings},
+    ocean: BarotropicSettings | TwoLayerSettings | BoussinesqSettings = setting(
+        kinds={
+            "barotropic": BarotropicSettings,
+            "two_layer": TwoLayerSettings,
+            "boussinesq": BoussinesqSettings,
+        },
         doc="the flow that is run",
     )
-    forcing: dict[str, Wave | Wind | GustBand] = setting(
+    forcing: dict[str, Wave | Wind | SurfaceBuoyancy | GustBand] = setting(
         default=dict,
-        kinds={"wave": Wave, "wind": Wind, "gusts": GustBand},
+        kinds={
+            "wave": Wave,
+            "wind": Wind,
+            "surface_buoyancy": SurfaceBuoyancy,
+            "gusts": GustBand,
+        },
         doc="what drives the flow, each under a name of its own",
     )
     stirring: Stirring | None = setting(
@@ -160,7 +171,19 @@ class TruthConfig:
                     f"{where} = {interval:.6g} s must be a whole number of steps of "
                     f"{step:.6g} s; try {nearest:.6g} s"
                 )
+        is_slice = isinstance(self.ocean, BoussinesqSettings)
         for name, pattern in self.forcing.items():
+            if is_slice and isinstance(pattern, Wind):
+                yield (
+                    f"[forcing.{name}] a wind drives a layer seen from above, not the "
+                    'vertical slice of [ocean] kind = "boussinesq"; use kind = "wave" '
+                    'or "surface_buoyancy"'
+                )
+            if not is_slice and isinstance(pattern, SurfaceBuoyancy):
+                yield (
+                    f'[forcing.{name}] only [ocean] kind = "boussinesq" has buoyancy '
+                    'to heat; use kind = "wave" or "wind"'
+                )
             behaviour = getattr(pattern, "time", None)
             for key, when in break_times(behaviour).items():
                 if not _divides(step, when):

@@ -188,7 +188,13 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
     if output.fields_every is not None:
         x, y = ocean.space.grid_axes
         add_scale(group, "x", x, units="m", long_name="distance eastward", axis="X")
-        add_scale(group, "y", y, units="m", long_name="distance northward", axis="Y")
+        # The slice says that its second direction is the vertical.
+        if getattr(ocean, "directions", ("x", "y"))[1] == "z":
+            add_scale(group, "y", y, units="m", long_name="height", axis="Z")
+        else:
+            add_scale(
+                group, "y", y, units="m", long_name="distance northward", axis="Y"
+            )
 
 
 class Recorder:

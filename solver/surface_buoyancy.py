@@ -15,6 +15,7 @@ the source is exact in every mode kept.
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -99,3 +100,33 @@ def surface_source(space, pattern: SurfaceBuoyancy) -> np.ndarray:
         2 * np.pi * pattern.waves / space.lengths[0] * x[np.newaxis, :] + pattern.phase
     )
     return space.to_modes(pattern.flux / pattern.depth * profile[:, np.newaxis] * along)
+
+
+def buoyancy_source(space, patterns: Mapping[str, SurfaceBuoyancy]) -> np.ndarray:
+    """Buoyancy source of all surface patterns together.
+
+    Parameters
+    ----------
+    space : Channel
+        Any space, if there are no patterns.
+    patterns : mapping of str to SurfaceBuoyancy
+        By name.
+
+    Returns
+    -------
+    ndarray, shape (n_real,)
+        Source [m s-3].
+
+    Raises
+    ------
+    DataError
+        If a pattern does not fit the space.
+    """
+    source = np.zeros(space.n_real)
+    for name, pattern in patterns.items():
+        try:
+            source += surface_source(space, pattern)
+        except DataError as error:
+            message = f"[forcing.{name}] {error}"
+            raise DataError(message) from error
+    return source

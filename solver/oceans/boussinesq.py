@@ -50,6 +50,8 @@ class Boussinesq:
     ----------
     size : int
         Number of real coordinates.
+    directions : tuple of str
+        What the space's two directions are: x and z.
     prognostic : tuple of str
         Fields that are stepped: streamfunction, buoyancy, and cross_velocity
         with rotation.
@@ -157,7 +159,7 @@ class Boussinesq:
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: field, part and integer wavenumbers in x, z."""
         return tuple(
-            f"{field} {label}"
+            f"{field} {label.replace('y', 'z')}"
             for field in ("psi", "b", "v")[: self.n_fields]
             for label in self.space.labels
         )

@@ -1,4 +1,4 @@
-"""Varying and random forcing in every ocean and space: budget, contract, resumption."""
+"""Forcing in time and starts from files, in every ocean and space."""
 
 import h5py
 import numpy as np
@@ -8,6 +8,7 @@ from eddyshed.reduce.contract import check_model
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.diagnostics import budget_of, spectral_flux
+from eddyshed.solver.initial import FieldSettings, starting_state
 from eddyshed.solver.record import open_record
 from eddyshed.solver.settings import TruthConfig
 from eddyshed.solver.truth import run_member
@@ -43,7 +44,7 @@ band = [1, 3]
 [time]
 step = "0.05 d"
 spin_up = "0 d"
-duration = "20 d"
+duration = "10 d"
 [output]
 state_every = "0.1 d"
 checkpoint_every = "5 d"
@@ -55,11 +56,17 @@ LAYERS = (
     'deformation_radius = "60 km"\nupper_current = "0.1 m/s"\n'
     'upper_depth = "800 m"\nlower_depth = "3200 m"\nviscosity = "200 m2/s"'
 )
+# The same box as a slice: a thousand kilometres across and deep, in slow motion.
+SLICE = (
+    'kind = "boussinesq"\nbuoyancy_gradient = "1e-12 s-2"\n'
+    'viscosity = "500 m2/s"\ndiffusivity = "500 m2/s"'
+)
 OCEANS = [
     (space, ocean)
     for ocean, spaces in (
         (VISCOUS, ("periodic", "channel", "basin")),
         (LAYERS, ("periodic", "channel")),
+        (SLICE, ("periodic", "channel")),
     )
     for space in spaces
 ]
@@ -83,6 +90,22 @@ def test_model_with_varying_forcing_keeps_its_promises(space, ocean):
     # Half a season apart the factors are 1.5 and 0.5.
     ratio = model.forcing(0.0) @ model.forcing(season / 2) / 3
     assert ratio == pytest.approx(model.forcing(season / 2) @ model.forcing(season / 2))
+
+
+def test_heating_through_the_surface_may_have_a_season():
+    # The season of a buoyancy source works on the buoyancy alone.
+    text = ALL.replace(
+        'kind = "wave"\namplitude = "2e-11 s-2"\nwaves = [1, 2]',
+        'kind = "surface_buoyancy"\nflux = "1e-9 m2/s3"\nwaves = 1\ndepth = "200 km"',
+    ).format(space="channel", ocean=SLICE)
+    config = parse_config(text, TruthConfig, "all.toml").config
+    model = build_ocean(config)
+    check_model(model)
+    start, half = model.forcing(0.0), model.forcing(5 * 86400.0)
+    np.testing.assert_allclose(start, 3 * half, rtol=1e-12)
+    assert half.any()
+    z = np.random.default_rng(3).standard_normal(model.size)
+    assert model.budget(0.0, z)["work"] == pytest.approx(start @ z, rel=1e-12)
 
 
 @everywhere
@@ -116,3 +139,17 @@ def test_advection_carries_no_energy_out_of_the_last_shell(space, ocean):
     # Round-off of a sum over all coordinates.
     assert abs(flux[-1]) < 1e-13 * np.abs(z * model.bilinear(z, z)).sum()
     assert np.abs(flux).max() > 1e-4 * np.abs(z * model.bilinear(z, z)).sum()
+
+
+@everywhere
+def test_a_start_from_the_fields_of_a_state_is_that_state(space, ocean, tmp_path):
+    config = config_of(space, ocean)
+    model = build_ocean(config)
+    z = starting_state(config.initial, model, seed=1, member=0)
+    path = tmp_path / "fields.h5"
+    with h5py.File(path, "w") as file:
+        for name, values in model.fields(z).items():
+            file[name] = values
+    again = starting_state(FieldSettings(path=str(path)), model, seed=1, member=0)
+    # Round-off of one transform there and one back.
+    np.testing.assert_allclose(again, z, atol=1e-12 * np.linalg.norm(z))
