@@ -25,9 +25,9 @@ from collections.abc import Callable, Iterable
 import numpy as np
 
 from ..block_functions import block_function
-from ..errors import DataError
+from .boussinesq_budget import budget_of_state, units_of_budget
 from .boussinesq_scales import scales_of_flow, scales_of_settings
-from .boussinesq_waves import BoussinesqSettings, linear_blocks
+from .boussinesq_waves import BoussinesqSettings, check_space, linear_blocks
 
 NAMES = ("streamfunction", "buoyancy", "cross_velocity")
 
@@ -90,7 +90,7 @@ class Boussinesq:
         source: np.ndarray | None = None,
         buoyancy_source: np.ndarray | None = None,
     ):
-        _check_space(settings, space)
+        check_space(settings, space)
         self.settings = settings
         self.space = space
         self.n_fields = settings.n_fields
@@ -292,54 +292,12 @@ class Boussinesq:
             As `budget_units` says. Those in m2 s-3 sum to the rate of change of
             the energy, those in s-3 to that of the enstrophy.
         """
-        settings = self.settings
-        k_squared, forcing = self.space.k_squared, self.forcing(t)
-        power = z * z
-        loss = (self.damping * power).reshape(self.n_fields, -1).sum(axis=-1)
-        flow, pushed = self._stacked(z)[0], self._stacked(forcing)[0]
-        exchange = self._stacked(self.linear(z))[0] - self._blocks[:, 0, 0] * flow
-        flux = self.heat_flux(z)
-        found = {
-            "energy": float(power.sum() / 2),
-            "kinetic_energy": float(power.sum() / 2 - self._potential_energy(power)),
-            "enstrophy": float((k_squared * flow**2).sum() / 2),
-            "work": float(forcing @ z),
-            "lifting": flux,
-            "stratification": -settings.buoyancy_gradient / settings.weight**2 * flux,
-            "viscous_dissipation": -float(loss.sum() - loss[1]),
-            "diffusive_dissipation": -float(loss[1]),
-            "enstrophy_work": float((k_squared * flow * pushed).sum()),
-            "enstrophy_exchange": float((k_squared * flow * exchange).sum()),
-            "enstrophy_dissipation": float(
-                (k_squared * self._blocks[:, 0, 0] * flow**2).sum()
-            ),
-        }
-        if settings.diffusivity > 0 and settings.buoyancy_gradient != 0:
-            found["nusselt_number"] = self.nusselt_number(z)
-        return found
+        return budget_of_state(self, t, z)
 
     @property
     def budget_units(self) -> dict[str, tuple[str, str]]:
         """Units and long name of what `budget` returns."""
-        names = {
-            "energy": ("m2 s-2", "domain-mean energy"),
-            "kinetic_energy": ("m2 s-2", "kinetic part of the energy"),
-            "enstrophy": ("s-2", "domain-mean enstrophy"),
-            "work": ("m2 s-3", "energy fed by the forcing"),
-            "lifting": ("m2 s-3", "kinetic energy made by rising buoyancy"),
-            "stratification": (
-                "m2 s-3",
-                "buoyancy part of the energy made by moving the background",
-            ),
-            "viscous_dissipation": ("m2 s-3", "energy lost to viscosity (negative)"),
-            "diffusive_dissipation": ("m2 s-3", "energy lost to diffusion (negative)"),
-            "enstrophy_work": ("s-3", "enstrophy fed by the forcing"),
-            "enstrophy_exchange": ("s-3", "enstrophy made by buoyancy and rotation"),
-            "enstrophy_dissipation": ("s-3", "enstrophy lost to viscosity (negative)"),
-        }
-        if self.settings.diffusivity > 0 and self.settings.buoyancy_gradient != 0:
-            names["nusselt_number"] = ("1", "Nusselt number")
-        return names
+        return units_of_budget(self.settings)
 
     def fields(self, z: np.ndarray) -> dict[str, np.ndarray]:
         """Fields on the grid, rows upwards.
@@ -375,10 +333,6 @@ class Boussinesq:
         yield from scales_of_settings(self.settings, self.space, self._k, self._m)
         if z is not None:
             yield from scales_of_flow(self.settings, self.space, self.budget(0.0, z))
-
-    def _potential_energy(self, power):
-        """Buoyancy part of the energy, from the squares of the coordinates."""
-        return self._stacked(power)[1].sum() / 2
 
     def _stacked(self, z):
         """View coordinates (..., size) as fields (..., n_fields, n_real)."""
@@ -425,21 +379,3 @@ class Boussinesq:
                 result[i] /= 2
         result *= self._from_advection
         return result.ravel()
-
-
-def _check_space(settings, space):
-    """Refuse a space that the equations do not fit."""
-    if not space.x_is_periodic:
-        message = (
-            '[grid] space: the Boussinesq slice must be periodic in x; give "periodic" '
-            'or "channel"'
-        )
-        raise DataError(message)
-    if settings.n_fields == 3 and not space.y_is_periodic:
-        message = (
-            f"[ocean] coriolis = {settings.coriolis:.6g} s-1 does not fit walls above "
-            "and below: between slippery walls the velocity through the slice is a "
-            "cosine series, which this space does not hold; give coriolis = 0 or "
-            '[grid] space = "periodic"'
-        )
-        raise DataError(message)

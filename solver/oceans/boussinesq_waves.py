@@ -23,6 +23,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..config import setting
+from ..errors import DataError
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -76,6 +77,35 @@ class BoussinesqSettings:
     def n_fields(self) -> int:
         """Number of fields stepped: psi, b and, with rotation, v."""
         return 3 if self.coriolis != 0 else 2
+
+
+def check_space(settings: BoussinesqSettings, space) -> None:
+    """Refuse a space that the equations do not fit.
+
+    Parameters
+    ----------
+    settings : BoussinesqSettings
+    space : Periodic, Channel or Basin
+
+    Raises
+    ------
+    DataError
+        If it has walls in x, or walls above and below with rotation.
+    """
+    if not space.x_is_periodic:
+        message = (
+            '[grid] space: the Boussinesq slice must be periodic in x; give "periodic" '
+            'or "channel"'
+        )
+        raise DataError(message)
+    if settings.n_fields == 3 and not space.y_is_periodic:
+        message = (
+            f"[ocean] coriolis = {settings.coriolis:.6g} s-1 does not fit walls above "
+            "and below: between slippery walls the velocity through the slice is a "
+            "cosine series, which this space does not hold; give coriolis = 0 or "
+            '[grid] space = "periodic"'
+        )
+        raise DataError(message)
 
 
 def linear_blocks(
