@@ -95,10 +95,11 @@ class StirringNoise:
     -----
     Energy is fed at equal mean rate to every coordinate of the band. Each
     increment has the variance that a damped oscillator driven by white noise
-    gathers over a step, ``s^2 (1 - exp(-2 g h)) / (2 g)``, so a linear run is
-    an exact sample of the continuous process (Gardiner, Handbook of
-    Stochastic Methods, chapter 4); with advection the scheme is of weak order
-    one in the step.
+    gathers over a step, ``s^2 (1 - exp(-2 g h)) / (2 g)``. Where the linear
+    operator does no more than damp and turn single waves, a linear run is
+    thereby an exact sample of the continuous process (Gardiner, Handbook of
+    Stochastic Methods, chapter 4); where it couples coordinates, and with
+    advection, the scheme is of weak order one in the step.
     """
 
     def __init__(self, ocean: Coordinates, stirring: Stirring, step: float):
