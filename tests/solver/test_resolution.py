@@ -5,7 +5,7 @@ import pytest
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config
-from eddyshed.solver.forecast import forecast
+from eddyshed.solver.forecast import forecast_run
 from eddyshed.solver.resolution import (
     LARGEST_COURANT,
     flow_scales,
@@ -130,7 +130,7 @@ def test_courant_limit_is_that_of_the_classical_method():
 
 
 def test_forecast_shows_scales_of_the_flows_and_warns():
-    found = forecast(config_of(), seconds=0.01)
+    found = forecast_run(config_of(), seconds=0.01)
     names = [name for name, *_ in found.scales]
     for flow in ("initial state", "laminar flow"):
         assert f"rms speed ({flow})" in names
@@ -138,16 +138,16 @@ def test_forecast_shows_scales_of_the_flows_and_warns():
     values = {name: value for name, value, _ in found.scales}
     assert values["rms speed (initial state)"] == pytest.approx(np.sqrt(0.02))
     assert not [text for text in found.warnings if "advection allows" in text]
-    hasty = forecast(config_of("time.step=1 d", "initial.energy=1 m2/s2"), seconds=0.01)
+    hasty = forecast_run(config_of("time.step=1 d", "initial.energy=1 m2/s2"), seconds=0.01)
     assert [text for text in hasty.warnings if "advection allows" in text]
     assert [text for text in hasty.warnings if "eddy turnover time" in text]
-    coarse = forecast(config_of("ocean.deformation_radius=12 km"), seconds=0.01)
+    coarse = forecast_run(config_of("ocean.deformation_radius=12 km"), seconds=0.01)
     (text,) = [t for t in coarse.warnings if t.startswith("the deformation radius")]
     # A weak random start is no flow whose scales must be resolved; a laminar one is.
-    weak = forecast(config_of("initial.energy=1e-8 m2/s2"), seconds=0.01)
+    weak = forecast_run(config_of("initial.energy=1e-8 m2/s2"), seconds=0.01)
     assert not [t for t in weak.warnings if "Rhines" in t]
     windless = "forcing.wind.amplitude=1e-16 s-2"
-    calm = forecast(config_of(windless), seconds=0.01)
+    calm = forecast_run(config_of(windless), seconds=0.01)
     assert [t for t in calm.warnings if t.startswith("laminar flow: the Rhines")]
     # Cutoff 10 waves along x and y: shortest wavelength 70.7 km, half of it needed.
     assert "take 2.9 times as many points" in text
