@@ -5,6 +5,8 @@ Each function returns a data URI for the page; see `eddyshed.reduce.canvas`.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from matplotlib.ticker import MaxNLocator
 
@@ -16,96 +18,130 @@ from .canvas import (
     TRUTH,
     VORTICITY,
     WIDTH,
+    closure_style,
     drawn,
-    in_math,
+    letter,
     logarithmic,
     power_of_ten,
     scaled_unit,
 )
+from .measures import Map, Profile, is_stretched
 
-YEAR = 365.25 * DAY
+YEAR, HOUR = 365.25 * DAY, DAY / 24
+WALL = 2.0  # width of the line that stands for a wall, in points
 
 
 def flow(
     *,
-    vorticity: np.ndarray,
-    streamfunction: np.ndarray,
-    levels: np.ndarray,
+    maps: Sequence[Map],
     lengths: tuple[float, float],
-    profile: Estimate,
-    last_profile: np.ndarray,
+    walls: tuple[bool, bool],
+    vertical: str,
+    profile: Profile | None,
 ) -> str:
-    """Map of a state, and eastward velocity by latitude beside it.
+    """One map and a profile beside it, or two maps.
 
     Parameters
     ----------
-    vorticity, streamfunction : ndarray, shape (ny, nx)
-        [s-1] and [m2 s-1], on one grid.
-    levels : ndarray
-        Contours of the streamfunction.
+    maps : sequence of Map
     lengths : tuple of float
         Size of the box [m].
-    profile : Estimate, shape (n,)
-        Time mean at equally spaced latitudes from the southern edge [m s-1].
-    last_profile : ndarray, shape (n,)
-        The same of the state on the map.
+    walls : tuple of bool
+        Whether walls bound it in the first and in the second direction.
+    vertical : str
+        Name of the second direction.
+    profile : Profile or None
     """
-    lx, ly = (length / 1e3 for length in lengths)
-    exponent = power_of_ten(vorticity)
-    bound = np.max(np.abs(vorticity), initial=0.0) / 10.0**exponent or 1.0
-    ny, nx = vorticity.shape
+    scale, name = (1e3, "km") if max(lengths) >= 5e3 else (1.0, "m")
+    shape = lengths[1] / lengths[0]
+    stretched = is_stretched(lengths)
 
     def draw(figure):
-        left, right = figure.subplots(1, 2, sharey=True, width_ratios=(2.6, 1))
-        # A grid point is the centre of its pixel.
-        half_x, half_y = lx / nx / 2, ly / ny / 2
-        image = left.imshow(
-            vorticity / 10.0**exponent,
-            origin="lower",
-            extent=(-half_x, lx - half_x, -half_y, ly - half_y),
-            cmap=VORTICITY,
-            vmin=-bound,
-            vmax=bound,
-        )
-        if len(levels):
-            x, y = np.arange(nx) * (lx / nx), np.arange(ny) * (ly / ny)
-            # One colour makes negative contours dashed.
-            left.contour(
-                x, y, streamfunction, levels=levels, colors=TRUTH, linewidths=0.55
+        count = len(maps) + (profile is not None)
+        ratios = (2.6, 1) if profile is not None else (1,) * count
+        axes = figure.subplots(
+            1, count, sharey=True, width_ratios=ratios, squeeze=False
+        )[0]
+        for index, shown in enumerate(maps):
+            _draw_map(figure, axes[index], shown, scale, walls, stretched)
+            axes[index].set(
+                xlabel=f"x [{name}]", title=f"{letter(index)} {shown.title}".rstrip()
             )
-        left.set(xlabel="x [km]", ylabel="y [km]", title="(a)")
-        left.spines[["top", "right"]].set_visible(True)
-        bar = figure.colorbar(
-            image, ax=left, location="bottom", aspect=32, pad=0.02, shrink=0.9
-        )
-        bar.set_label(f"relative vorticity [{scaled_unit(exponent, 's-1')}]")
-        latitude = np.arange(len(profile.value)) * (ly / len(profile.value))
-        right.axvline(0, color=BAND, linewidth=0.6)
-        if np.isfinite(profile.error).all():
-            right.fill_betweenx(
-                latitude,
-                profile.value - 2 * profile.error,
-                profile.value + 2 * profile.error,
-                color=BAND,
-                linewidth=0,
-            )
-        right.plot(
-            last_profile, latitude, color=HUES[0], dashes=(3, 1.5), linewidth=0.9
-        )
-        right.plot(profile.value, latitude, color=TRUTH)
-        right.xaxis.set_major_locator(MaxNLocator(4))
-        right.set(xlabel=f"u [{in_math('m s-1')}]", title="(b)")
+        axes[0].set_ylabel(f"{vertical} [{name}]")
+        if profile is not None:
+            _draw_profile(axes[-1], profile, scale)
+            axes[-1].set_title(letter(count - 1))
 
-    height = float(np.clip(0.65 * WIDTH * ly / lx + 1.25, 2.4, 7.5))
+    width = (0.65 if profile is not None else 0.42) * WIDTH
+    height = 3.1 if stretched else float(np.clip(width * shape + 1.25, 2.4, 7.5))
     return drawn(height, draw, layout="compressed")
+
+
+def _draw_map(figure, axes, shown, scale, walls, stretched):
+    """Draw a map with its contours and its colour bar."""
+    exponent = power_of_ten(shown.field)
+    bound = np.max(np.abs(shown.field), initial=0.0) / 10.0**exponent or 1.0
+    x, y = shown.x / scale, shown.y / scale
+    # A grid point is the centre of its pixel.
+    half_x, half_y = (x[1] - x[0]) / 2, (y[1] - y[0]) / 2
+    image = axes.imshow(
+        shown.field / 10.0**exponent,
+        origin="lower",
+        extent=(x[0] - half_x, x[-1] + half_x, y[0] - half_y, y[-1] + half_y),
+        cmap=VORTICITY,
+        vmin=-bound,
+        vmax=bound,
+        aspect="auto" if stretched else "equal",
+    )
+    if len(shown.levels):
+        # One colour makes negative contours dashed.
+        axes.contour(
+            x,
+            y,
+            shown.streamfunction,
+            levels=shown.levels,
+            colors=TRUTH,
+            linewidths=0.55,
+        )
+    axes.spines[["top", "right"]].set_visible(True)
+    for walled, sides in zip(
+        walls, (["left", "right"], ["bottom", "top"]), strict=True
+    ):
+        if walled:
+            axes.spines[sides].set_linewidth(WALL)
+    bar = figure.colorbar(
+        image, ax=axes, location="bottom", aspect=32, pad=0.02, shrink=0.9
+    )
+    bar.ax.xaxis.set_major_locator(MaxNLocator(5))
+    bar.set_label(f"{shown.name} [{scaled_unit(exponent, shown.units)}]")
+
+
+def _draw_profile(axes, profile, scale):
+    """Draw a profile: its time mean with a band, and the last one."""
+    y, mean = profile.y / scale, profile.mean
+    exponent = power_of_ten([*mean.value, *profile.last])
+    factor = 10.0**-exponent
+    axes.axvline(0, color=BAND, linewidth=0.6)
+    if np.isfinite(mean.error).all():
+        axes.fill_betweenx(
+            y,
+            (mean.value - 2 * mean.error) * factor,
+            (mean.value + 2 * mean.error) * factor,
+            color=BAND,
+            linewidth=0,
+        )
+    axes.plot(profile.last * factor, y, color=HUES[0], dashes=(3, 1.5), linewidth=0.9)
+    axes.plot(mean.value * factor, y, color=TRUTH)
+    axes.xaxis.set_major_locator(MaxNLocator(4))
+    axes.set_xlabel(f"{profile.name} [{scaled_unit(exponent, profile.units)}]")
 
 
 def energy(
     *,
     times: np.ndarray,
     level: tuple[np.ndarray, np.ndarray, np.ndarray],
-    work: np.ndarray,
-    loss: np.ndarray,
+    rate_times: np.ndarray,
+    rates: dict[str, np.ndarray],
 ) -> str:
     """Energy and its budget over time.
 
@@ -115,13 +151,20 @@ def energy(
         Middle of each block of the record [s].
     level : tuple of ndarray, each (block,)
         Mean, least and greatest energy [m2 s-2].
-    work, loss : ndarray, shape (block,)
-        Means of the work and of minus the dissipation [m2 s-3].
+    rate_times : ndarray, shape (block,)
+        Middle of each block of the rates [s].
+    rates : dict of ndarray, each (block,)
+        Means of each source (positive) and sink [m2 s-3], by name.
     """
-    scale, name = (YEAR, "yr") if times[-1] > 3 * YEAR else (DAY, "d")
+    scale, name = next(
+        (size, symbol)
+        for size, symbol in ((YEAR, "yr"), (DAY, "d"), (HOUR, "h"))
+        if times[-1] > 3 * size or symbol == "h"
+    )
     t = times / scale
     mean, low, high = level
-    first, second = power_of_ten(high), power_of_ten([*work, *loss])
+    first = power_of_ten(high)
+    second = power_of_ten(np.concatenate([np.zeros(1), *rates.values()]))
 
     def draw(figure):
         top, bottom = figure.subplots(2, 1, sharex=True)
@@ -132,28 +175,25 @@ def energy(
         top.set_ylabel(f"energy\n[{scaled_unit(first, 'm2 s-2')}]")
         top.set_title("(a)")
         top.set_ylim(bottom=0)
-        bottom.plot(
-            t,
-            work / 10.0**second,
-            color=HUES[0],
-            linewidth=0.8,
-            label="work of forcing",
-        )
-        bottom.plot(
-            t,
-            loss / 10.0**second,
-            color=HUES[1],
-            linewidth=1.0,
-            dashes=(2.5, 1.2),
-            label="loss to friction",
-        )
+        bottom.axhline(0, color=BAND, linewidth=0.6)
+        for index, (label, rate) in enumerate(rates.items()):
+            style = closure_style(index)
+            bottom.plot(
+                rate_times / scale,
+                rate / 10.0**second,
+                color=style["color"],
+                linewidth=0.9,
+                label=label,
+                **({"dashes": style["dashes"]} if index else {}),
+            )
         bottom.set_ylabel(f"power\n[{scaled_unit(second, 'm2 s-3')}]")
         bottom.set_xlabel(f"time since the start of the record [{name}]")
         bottom.set_title("(b)")
-        bottom.legend(loc="upper right", bbox_to_anchor=(1, 1.22), ncols=2)
+        if rates:
+            figure.legend(loc="outside lower left", ncols=3, columnspacing=1.2)
         figure.align_ylabels()
 
-    return drawn(3.6, draw)
+    return drawn(3.6 + 0.25 * -(-len(rates) // 3), draw)
 
 
 def spectrum(*, resolved: Estimate, unresolved: Estimate) -> str:

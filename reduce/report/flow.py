@@ -4,138 +4,156 @@ from __future__ import annotations
 
 import numpy as np
 
+from eddyshed.solver.config import as_table
+from eddyshed.solver.diagnostics import Budget, budget_of
 from eddyshed.solver.quantities import format_quantity
 
 from ..estimate import Estimate
 from .evidence import Evidence
-from .markup import Note, number, paragraphs, section, span, unbroken, unit
-from .measures import (
-    EnergyBudget,
-    batch_states,
-    block_ranges,
-    eastward_profile,
-    energy_budget,
-    of_batches,
-    refined,
+from .flow_fields import last_state
+from .markup import (
+    Note,
+    listed,
+    number,
+    paragraphs,
+    section,
+    span,
+    text,
+    unbroken,
+    unit,
 )
+from .measures import block_ranges, energy_rates
 
 DAY = 86400.0
-MAP_POINTS = 192  # of the map, by Fourier series from what the grid holds
-CONTOURS = 12  # of the streamfunction, about
 BLOCKS = 400  # of a series: as many as a column of print can show
+OCEANS = {
+    "barotropic": "one layer of quasi-geostrophic flow on a beta plane",
+    "two_layer": "two layers of quasi-geostrophic flow on a beta plane, the eddies of "
+    "a current that is imposed",
+    "boussinesq": "a vertical slice of a Boussinesq fluid",
+}
+SPACES = {
+    "periodic": "that repeats in both directions",
+    "channel": "that repeats along x between walls in the south and the north",
+    "basin": "between walls on all four sides",
+}
+SLICES = {
+    "periodic": "that repeats along x and upwards",
+    "channel": "that repeats along x between walls below and above",
+}
 
 
 def flow(note: Note, evidence: Evidence) -> str:
     """What the ocean looks like and what it lives on."""
-    budget_series = evidence.record.read_budget()
-    budget = energy_budget(evidence.record.times, budget_series)
-    speed = np.sqrt(2 * budget.energy.value)
-    error = budget.energy.error / speed if speed else budget.energy.error
+    record = evidence.record
+    series, units = record.read_budget(), record.budget_units()
+    budget = budget_of(record.times, series, units)
     return section(
         "The flow",
         paragraphs(
-            f"The root-mean-square speed is {number(float(speed), float(error))} "
-            f"{unit('m s-1')} (from the mean energy)."
+            f"The ocean is {text(in_words(evidence))}. {_speed(evidence, series)}"
         ),
-        _map(note, evidence),
-        _energy_figure(note, evidence, budget_series),
+        last_state(note, evidence),
+        _energy_figure(note, evidence, series, units),
         _budget_table(note, evidence, budget),
     )
 
 
-def _map(note, evidence):
-    """Map of the last state and the jets."""
-    ocean, record = evidence.ocean, evidence.record
-    last = record.read(len(record.times) - 1, len(record.times))[0]
-    fields = ocean.fields(last)
-    psi = refined(fields["streamfunction"], MAP_POINTS)
-    interval = round_number(float(np.ptp(psi)) / CONTOURS)
-    levels = (
-        interval * np.arange(np.ceil(psi.min() / interval), psi.max() / interval)
-        if interval
-        else np.empty(0)
+def in_words(evidence: Evidence) -> str:
+    """Ocean and space, such as ``a vertical slice ..., in a box of 4 m by 1 m ...``."""
+    config, directions = evidence.study.config, _directions(evidence.ocean)
+    kind = as_table(config)["ocean"]["kind"]
+    sides = " by ".join(
+        f"{format_quantity(side, 'm')} in {name}"
+        for side, name in zip(config.grid.lengths, directions, strict=True)
     )
-    parts = np.array([_profile(ocean, z) for z in batch_states(record)])
-    profile = of_batches(parts, _profile(ocean, evidence.split.mean))
-    strongest = int(np.abs(profile.value).argmax())
-    _, ly = evidence.study.config.grid.lengths
-    where = format_quantity(round(strongest * ly / len(profile.value), -3), "m")
-    when = span(float(record.times[-1] - record.times[0]))
-    return note.figure(
-        lambda figures: figures.flow(
-            vorticity=refined(fields["vorticity"], MAP_POINTS),
-            streamfunction=psi,
-            levels=levels,
-            lengths=evidence.study.config.grid.lengths,
-            profile=profile,
-            last_profile=_profile(ocean, last),
-        ),
-        alt="Left, a map of relative vorticity in kilometres with contours of the "
-        "streamfunction; right, eastward velocity averaged along x, by latitude. The "
-        f"strongest time-mean jet, {profile.value[strongest]:+.2g} ± "
-        f"{profile.error[strongest]:.1g} m/s, lies at y = {where}.",
-        caption=f"(a) Relative vorticity of the last recorded state, {when} into the "
-        "record: orange, which prints light, turns anticlockwise (above zero), blue "
-        "clockwise. Contours: streamfunction, every "
-        f"{interval:g}&nbsp;{unit('m2 s-1')}, dashed below zero. (b) Eastward "
-        "velocity averaged along x: time mean (black, with two standard errors to "
-        f"either side from {len(parts)} batch means) and that of the state in (a) "
-        "(dashed).",
-    )
+    spaces = SLICES if directions[1] == "z" else SPACES
+    return f"{OCEANS[kind]}, in a box of {sides} {spaces[config.grid.space]}"
 
 
-def _profile(ocean, z):
-    """Eastward velocity by latitude, at as many points as the map has."""
-    return refined(eastward_profile(ocean, z)[:, np.newaxis], MAP_POINTS)[:, 0]
+def _directions(ocean):
+    """What the two directions of the box are called."""
+    return getattr(ocean, "directions", ("x", "y"))
 
 
-def _energy_figure(note, evidence, series):
+def _speed(evidence, series):
+    """Sentence on the speed, from the mean of the kinetic energy."""
+    kinetic, words = series["energy"], "The root-mean-square speed is"
+    if "kinetic_energy" in series:
+        kinetic = series["kinetic_energy"]
+    elif "potential_energy" in series:
+        kinetic = kinetic - series["potential_energy"]
+        words = "The root-mean-square speed of the eddies, both layers by mass, is"
+    elif np.isfinite(evidence.ocean.settings.deformation_radius):
+        words = "The root of twice the energy, the tilt of the surface included, is"
+    times = evidence.record.times
+    mean = budget_of(times, {"energy": kinetic}, {"energy": "m2 s-2"}).level
+    speed = float(np.sqrt(2 * max(mean.value, 0.0)))
+    error = mean.error / speed if speed else mean.error
+    return f"{words} {number(speed, error)} {unit('m s-1')} (from the mean over time)."
+
+
+def _energy_figure(note, evidence, series, units):
     """Energy and its budget over time."""
     record = evidence.record
     since = record.times - record.times[0]
     middle, *_ = block_ranges(since, BLOCKS)
     level = block_ranges(series["energy"], BLOCKS)
-    work, *_ = block_ranges(series["work"], BLOCKS)
-    loss, *_ = block_ranges(-series["dissipation"], BLOCKS)
+    rates = energy_rates(record.times, series, units)
+    between, *_ = block_ranges((since[1:] + since[:-1]) / 2, BLOCKS)
+    drawn = {
+        name.replace("_", " "): block_ranges(values, BLOCKS)[0]
+        for name, values in rates.items()
+    }
     block = span(len(since) * record.step / len(middle))
     return note.figure(
-        lambda figures: figures.energy(times=middle, level=level, work=work, loss=loss),
-        alt="Two time series: energy above; below, the work of the forcing and the "
-        "loss to friction.",
+        lambda figures: figures.energy(
+            times=middle, level=level, rate_times=between, rates=drawn
+        ),
+        alt="Two time series: energy above; below, what feeds and drains it: "
+        f"{listed(list(drawn)) or 'nothing'}.",
         caption="(a) Energy, averaged over the domain, in blocks of about "
-        f"{block}: mean (line), least and greatest value (grey). (b) Work of the "
-        "steady forcing and loss to friction, means of the same blocks.",
+        f"{block}: mean (line), least and greatest value (grey). (b) What feeds the "
+        "energy (above zero) and what drains it (below), means of such blocks; the "
+        "names are those of the table below.",
     )
 
 
-def _budget_table(note, evidence, budget: EnergyBudget):
+def _budget_table(note, evidence, budget: Budget):
     """The mean budget with its errors."""
     stirring = evidence.study.config.stirring
-    energy, power = unit("m2 s-2"), unit("m2 s-3")
-    rows = [
-        [f"energy [{energy}]", number(*_floats(budget.energy))],
-        [f"work of the steady forcing [{power}]", number(*_floats(budget.work))],
-        [f"dissipation [{power}]", number(*_floats(budget.dissipation))],
-        [f"change, end against start [{power}]", number(*_floats(budget.change))],
-        [f"residual [{power}]", number(*_floats(budget.residual))],
+    names = evidence.ocean.budget_units
+    rates = [f"rates [{unit(budget.rate_units)}]"]
+    for name, mean in budget.terms.items():
+        _, meaning = names.get(name, ("", f"energy fed by {name}"))
+        meaning = meaning.removesuffix(" (negative)")
+        label = text(f"{name.replace('_', ' ')}: {meaning}")
+        rates.append([label, number(mean.value, mean.error)])
+    change, residual = budget.change, budget.residual
+    rates += [
+        ["change, end against start", number(change.value, change.error)],
+        ["residual", number(residual.value, residual.error)],
     ]
-    if stirring is None:
-        after = (
-            "The residual, change less work less dissipation, is what the sampled "
-            "record fails to account for: zero but for the interval of the record "
-            f"({span(evidence.record.step)}) and the errors of the "
-            "time step."
-        )
-    else:
-        after = (
-            "The residual, change less work less dissipation, is what the stirring "
-            f"fed; the config asks for {number(stirring.energy_rate, 0.0)} {power}."
+    level = [
+        f"level [{unit(budget.units)}]",
+        [
+            text(names["energy"][1]),
+            number(budget.level.value, budget.level.error),
+        ],
+    ]
+    asked = ""
+    if stirring is not None:
+        asked = (
+            " The config asks the stirring for "
+            f"{number(stirring.energy_rate, 0.0)} {unit(budget.rate_units)}."
         )
     return note.table(
         ["mean over the record", "value"],
-        [rows],
+        [level, rates],
         caption=f"Energy budget. Standard errors from {budget.batches} batch means. "
-        f"{after}",
+        "The residual, change less all sources and sinks, is what the sampled record "
+        "fails to account for: zero but for the interval of the record "
+        f"({span(evidence.record.step)}) and the errors of the time step.{asked}",
     )
 
 
@@ -188,19 +206,6 @@ def split(note: Note, evidence: Evidence) -> str:
             "correlation function up to where it falls below 0.05.",
         ),
     )
-
-
-def round_number(value: float) -> float:
-    """The largest of 1, 2 or 5 times a power of ten that is not above a value."""
-    if value <= 0:
-        return 0.0
-    power = 10.0 ** np.floor(np.log10(value))
-    return float(power * max(step for step in (1, 2, 5) if step * power <= value))
-
-
-def _floats(estimate: Estimate) -> tuple[float, float]:
-    """Value and error of a single estimate."""
-    return float(estimate.value), float(estimate.error)
 
 
 def _sum(shares: Estimate) -> str:

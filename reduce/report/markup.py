@@ -163,10 +163,10 @@ def unit(si: str) -> str:
 
 
 def span(seconds: float) -> str:
-    """A length of time to three figures, in years, days or hours, as HTML."""
-    for symbol in ("yr", "d", "h"):
+    """A length of time to three figures, in years, days, hours, minutes or seconds."""
+    for symbol in ("yr", "d", "h", "min", "s"):
         size = float(UNITS[symbol][0])
-        if seconds >= (3 if symbol == "yr" else 1) * size or symbol == "h":
+        if seconds >= (3 if symbol == "yr" else 1) * size or symbol == "s":
             break
     return f"{float(f'{seconds / size:.3g}'):g}&nbsp;{symbol}"
 

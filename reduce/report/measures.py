@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from eddyshed.solver.diagnostics import FED, LEVELS
 from eddyshed.solver.record import TruthRecord
 
 from ..estimate import Estimate
@@ -14,30 +15,57 @@ BATCHES = 20  # batch means: common practice, the error is then known to a sixth
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class EnergyBudget:
-    """Mean energy and the mean of the terms that change it.
+class Map:
+    """A field over the box, with contours of the streamfunction.
 
     Attributes
     ----------
-    energy : Estimate, shape ()
-        [m2 s-2]
-    change : Estimate, shape ()
-        Energy at the end less that at the start, over the length [m2 s-3].
-    work, dissipation : Estimate, shape ()
-        Fed by the steady forcing, lost to friction (negative) [m2 s-3].
-    residual : Estimate, shape ()
-        Change less work less dissipation [m2 s-3]: what stirring fed, and the
-        error of integrating over the sampled record.
-    batches : int
-        Stretches of the record that the errors come from.
+    name, units : str
+        Of the field.
+    title : str
+        Which layer; empty if there is one only.
+    field, streamfunction : ndarray, shape (ny, nx)
+        [units] and [m2 s-1], on one grid.
+    x, y : ndarray, shapes (nx,), (ny,)
+        Grid coordinates [m].
+    levels : ndarray, shape (level,)
+        Contours of the streamfunction.
+    interval : float
+        Between contours [m2 s-1]; zero if there are none.
     """
 
-    energy: Estimate
-    change: Estimate
-    work: Estimate
-    dissipation: Estimate
-    residual: Estimate
-    batches: int
+    name: str
+    units: str
+    title: str
+    field: np.ndarray
+    streamfunction: np.ndarray
+    x: np.ndarray
+    y: np.ndarray
+    levels: np.ndarray
+    interval: float
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Profile:
+    """A quantity averaged along x.
+
+    Attributes
+    ----------
+    name, units : str
+        Of the quantity.
+    y : ndarray, shape (ny,)
+        Distance from the origin, across [m].
+    mean : Estimate, shape (ny,)
+        Time mean.
+    last : ndarray, shape (ny,)
+        The same of the last state.
+    """
+
+    name: str
+    units: str
+    y: np.ndarray
+    mean: Estimate
+    last: np.ndarray
 
 
 def batch_edges(count: int) -> np.ndarray:
@@ -70,48 +98,39 @@ def of_batches(values: np.ndarray, whole: np.ndarray) -> Estimate:
     return Estimate(whole, values.std(axis=0, ddof=1) / np.sqrt(count))
 
 
-def energy_budget(times: np.ndarray, terms: dict[str, np.ndarray]) -> EnergyBudget:
-    """Energy budget of a record.
+def energy_rates(
+    times: np.ndarray, series: dict[str, np.ndarray], units: dict[str, str]
+) -> dict[str, np.ndarray]:
+    """What fed or drained the energy in each interval of a record, for drawing.
 
     Parameters
     ----------
     times : ndarray, shape (n_time,)
-        Equally spaced [s].
-    terms : dict of ndarray, each (n_time,)
-        ``energy``, ``work`` and ``dissipation``.
+        Increasing [s].
+    series : dict of ndarray, each (n_time,)
+        As recorded; see `eddyshed.solver.diagnostics.budget_of`.
+    units : dict of str
+        Of each.
 
     Returns
     -------
-    EnergyBudget
-
-    Notes
-    -----
-    Rates are integrated by the trapezoidal rule, over the record for the
-    values and over each batch for the errors.
+    dict of ndarray, each (n_time - 1,)
+        Mean rates [m2 s-3] by the names that `budget_of` gives them; those that
+        are zero throughout are left out.
     """
-    edges = batch_edges(len(times) - 1)
-    length = times[-1] - times[0]
-    spans = np.diff(times[edges])
-
-    def mean(series):
-        middle = (series[1:] + series[:-1]) / 2 * np.diff(times)
-        parts = np.add.reduceat(middle, edges[:-1])
-        return parts / spans, middle.sum() / length
-
-    energy = terms["energy"]
-    change = np.diff(energy[edges]) / spans, (energy[-1] - energy[0]) / length
-    work, dissipation = mean(terms["work"]), mean(terms["dissipation"])
-    residual = tuple(
-        c - w - d for c, w, d in zip(change, work, dissipation, strict=True)
-    )
-    return EnergyBudget(
-        energy=of_batches(*mean(energy)),
-        change=of_batches(*change),
-        work=of_batches(*work),
-        dissipation=of_batches(*dissipation),
-        residual=of_batches(*residual),
-        batches=len(edges) - 1,
-    )
+    level_units, rate_units = LEVELS["energy"]
+    prefix = "energy" + FED
+    rates = {
+        name: (values[1:] + values[:-1]) / 2
+        for name, values in series.items()
+        if units[name] == rate_units
+    }
+    rates |= {
+        name.removeprefix(prefix): np.diff(values) / np.diff(times)
+        for name, values in series.items()
+        if name.startswith(prefix) and units[name] == level_units
+    }
+    return {name: values for name, values in rates.items() if np.any(values)}
 
 
 def batch_states(record: TruthRecord) -> np.ndarray:
@@ -125,35 +144,59 @@ def batch_states(record: TruthRecord) -> np.ndarray:
     return means / np.diff(edges)[:, np.newaxis]
 
 
-def eastward_profile(ocean, z: np.ndarray) -> np.ndarray:
-    """Eastward velocity averaged along x [m s-1], shape (ny,)."""
-    u, _ = ocean.space.velocity(ocean.streamfunction(z))
+def eastward_profile(space, psi: np.ndarray) -> np.ndarray:
+    """Velocity along x, averaged along x [m s-1], of a streamfunction, shape (ny,)."""
+    u, _ = space.velocity(psi)
     return u.mean(axis=1)
 
 
-def refined(field: np.ndarray, least: int) -> np.ndarray:
-    """A periodic field on a finer grid, by its Fourier series.
+class Finer:
+    """Shows the fields of a space on a finer grid, by the functions they are sums of.
 
     Parameters
     ----------
-    field : ndarray, shape (ny, nx)
-        Without waves of two grid points, which no truth here has.
+    space : Periodic, Channel or Basin
     least : int
-        Points that the longer axis has at least in the result.
+        Points that the longer axis has at least.
 
-    Returns
-    -------
-    ndarray, shape (factor * ny, factor * nx)
-        Every `factor`-th point is one of the field.
+    Attributes
+    ----------
+    space : Periodic, Channel or Basin
+        The same box with a whole multiple of the points.
     """
-    factor = max(1, -(-least // max(field.shape)))
-    ny, nx = field.shape
-    padded = np.zeros((factor * ny, factor * nx // 2 + 1), dtype=complex)
-    spectrum = np.fft.rfft2(field)
-    half = ny // 2
-    padded[:half, : nx // 2 + 1] = spectrum[:half]
-    padded[-half:, : nx // 2 + 1] = spectrum[half:]
-    return np.fft.irfft2(padded, s=(factor * ny, factor * nx)) * factor**2
+
+    def __init__(self, space, least: int):
+        factor = max(1, -(-least // max(space.points)))
+        points = tuple(factor * count for count in space.points)
+        self.space = type(space)(points, space.lengths)
+        self._coarse = space
+        place = {label: i for i, label in enumerate(self.space.labels)}
+        self._places = np.array([place[label] for label in space.labels])
+
+    def modes(self, f: np.ndarray) -> np.ndarray:
+        """Vector of a field, shape (n_real,), as one of the finer space."""
+        result = np.zeros(self.space.n_real)
+        result[self._places] = f
+        return result
+
+    def field(self, field: np.ndarray) -> np.ndarray:
+        """A field on the coarse grid, as `fields` of an ocean gives it, on the finer.
+
+        Parameters
+        ----------
+        field : ndarray, shape (ny, nx)
+            A sum of the modes that the coarse space keeps.
+
+        Returns
+        -------
+        ndarray, shape (factor * ny, factor * nx)
+        """
+        return self.space.to_grid(self.modes(self._coarse.to_modes(field)))
+
+
+def is_stretched(lengths: tuple[float, float]) -> bool:
+    """Whether a map of a box is not drawn to scale: a long one would be a line."""
+    return not 0.4 <= lengths[1] / lengths[0] <= 2.5
 
 
 def block_ranges(series: np.ndarray, most: int) -> tuple[np.ndarray, ...]:

@@ -13,14 +13,13 @@ from types import ModuleType
 from eddyshed.solver.config import as_table, differing_keys, parse_config
 from eddyshed.solver.errors import ConfigError
 from eddyshed.solver.files import replacing
-from eddyshed.solver.quantities import format_quantity
 
 from ..scores import SAMPLING
 from ..settings import StudyConfig
 from ..stages import STAGES
 from ..study import Study, fingerprint_of
 from .evidence import Evidence, gather
-from .flow import flow, split
+from .flow import flow, in_words, split
 from .markup import (
     Note,
     listed,
@@ -35,7 +34,6 @@ from .markup import (
 from .models import models
 from .noise import noise
 
-OCEANS = {"barotropic": "one layer of quasi-geostrophic flow on a beta plane"}
 CAUTION = (
     "This is a toy ocean in an invented setting, not a forecast of any place. Before "
     "results like these inform a decision they need the judgement of a qualified "
@@ -123,18 +121,15 @@ def render(evidence: Evidence, stamp: str, drawing: ModuleType | None) -> str:
 def opening(evidence: Evidence) -> str:
     """What was done, in a paragraph."""
     config, resolved = evidence.study.config, evidence.split.resolved
-    kind = as_table(config)["ocean"]["kind"]
     times = evidence.truth.integral_time
     slowest = int(times.value.argmax())
     ratio = evidence.length / float(times.value[slowest])
     known = number(
         ratio, ratio * float(times.error[slowest]) / float(times.value[slowest])
     )
-    sides = " by ".join(format_quantity(side, "m") for side in config.grid.lengths)
     points = " × ".join(str(count) for count in config.grid.points)
     return paragraphs(
-        f"A {text(kind)} ocean ({text(OCEANS.get(kind, kind))}), in a box of {sides} "
-        f"that repeats in both directions, on {points} grid points, was run for "
+        f"This is {text(in_words(evidence))}, on {points} grid points; it was run for "
         f"{span(evidence.length)} after a spin-up of {span(config.time.spin_up)}: "
         f"{known} correlation times of its slowest resolved mode, "
         f"{text(resolved.labels[slowest])}. Of its "

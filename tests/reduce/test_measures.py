@@ -6,17 +6,19 @@ from itertools import pairwise
 import numpy as np
 import pytest
 
-from eddyshed.reduce.report.flow import round_number
+from eddyshed.reduce.report.flow_fields import round_number
 from eddyshed.reduce.report.measures import (
+    Finer,
     batch_edges,
     batch_states,
     block_ranges,
     eastward_profile,
-    energy_budget,
+    energy_rates,
     of_batches,
-    refined,
 )
-from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
+from eddyshed.solver.diagnostics import budget_of
+from eddyshed.solver.spaces.basin import Basin
+from eddyshed.solver.spaces.channel import Channel
 from eddyshed.solver.spaces.periodic import Periodic
 
 
@@ -77,53 +79,58 @@ def _parts(count):
     return [slice(a, b) for a, b in pairwise(batch_edges(count))]
 
 
-class TestEnergyBudget:
-    def test_closes_for_an_oscillator_that_is_driven_and_damped(self):
-        """E' = work + dissipation, integrated by the trapezoid to second order."""
-        errors = []
-        for count in (2001, 4001):
-            t = np.linspace(0, 30, count)
-            energy = 2 + np.sin(t)
-            work, dissipation = 3 + np.cos(t), -3 + 0 * t
-            terms = {"energy": energy, "work": work, "dissipation": dissipation}
-            found = energy_budget(t, terms)
-            errors.append(abs(float(found.residual.value)))
-            change = np.sin(30) / 30
-            assert float(found.change.value) == pytest.approx(change, rel=1e-12)
-            assert float(found.dissipation.value) == pytest.approx(-3, rel=1e-12)
-            assert float(found.dissipation.error) < 1e-12  # rounding alone
-            # Trapezoid: dt^2 / 12 times the change of the slope over the length.
-            assert float(found.work.value) == pytest.approx(3 + change, abs=1e-5)
-            assert found.batches == 20
-        assert errors[0] / errors[1] == pytest.approx(4, rel=0.02)
-
-    def test_what_is_not_accounted_for_stays(self):
-        t = np.linspace(0, 30, 2001)
-        terms = {"energy": 1 + t, "work": 0 * t, "dissipation": 0 * t - 0.25}
-        found = energy_budget(t, terms)
-        assert float(found.residual.value) == pytest.approx(1.25, rel=1e-12)
+class TestRates:
+    def test_their_means_are_the_terms_of_the_budget(self, rng):
+        t = np.cumsum(rng.uniform(1, 2, 61))
+        series = {
+            "energy": rng.uniform(1, 2, 61),
+            "work": rng.uniform(0, 1, 61),
+            "drag": rng.uniform(-1, 0, 61),
+            "idle": np.zeros(61),
+            "energy_fed_by_gusts": np.cumsum(rng.uniform(0, 1, 61)),
+            "enstrophy": rng.uniform(1, 2, 61),
+        }
+        units = dict.fromkeys(series, "m2 s-3")
+        units |= {"energy": "m2 s-2", "energy_fed_by_gusts": "m2 s-2"}
+        units["enstrophy"] = "s-2"
+        found = energy_rates(t, series, units)
+        terms = budget_of(t, series, units).terms
+        assert set(found) == set(terms) - {"idle"} == {"work", "drag", "gusts"}
+        for name, rate in found.items():
+            mean = np.average(rate, weights=np.diff(t))
+            assert mean == pytest.approx(terms[name].value, rel=1e-12)  # rounding
 
 
 class TestFlow:
     def test_eastward_velocity_of_a_plane_wave(self):
         """``u = -psi_y`` (Pedlosky 1987, ch. 3); a wave along x has no mean."""
         space = Periodic((16, 24), (1e6, 2e6))
-        ocean = Barotropic(BarotropicSettings(), space)
         x, y = space.grid_axes
         m = 2 * np.pi * 3 / 2e6
         psi = 5e3 * np.cos(m * y)[:, None] + 1e3 * np.cos(4 * np.pi * x / 1e6)
-        found = eastward_profile(ocean, ocean.coordinates(space.to_modes(psi)))
+        found = eastward_profile(space, space.to_modes(psi))
         np.testing.assert_allclose(found, 5e3 * m * np.sin(m * y), atol=1e-12)
 
-    def test_a_finer_grid_shows_the_same_waves(self):
-        def field(ny, nx):
-            x, y = (2 * np.pi * np.arange(n) / n for n in (nx, ny))
-            return np.cos(3 * x - 2 * y[:, None]) + np.sin(4 * y)[:, None]
+    @pytest.mark.parametrize("kind", [Periodic, Channel, Basin])
+    def test_a_finer_grid_shows_the_same_functions(self, kind):
+        """Sines between walls, waves where the box repeats, as written down here."""
+        lengths = np.array([3.0, 2.0])
 
-        found = refined(field(12, 10), 50)
-        assert found.shape == (60, 50)
-        np.testing.assert_allclose(found, field(60, 50), atol=1e-13)
-        np.testing.assert_array_equal(found.shape, refined(found, 30).shape)
+        def field(space):
+            x, y = space.grid_axes
+            y = y[:, None]
+            along = (1 if kind is Basin else 2) * np.pi * x / lengths[0]
+            up = (2 if kind is Periodic else 1) * np.pi * y / lengths[1]
+            mixed = 0 if kind is Basin else np.cos(along) * np.sin(3 * up)
+            return np.sin(3 * along) * np.sin(2 * up) + mixed
+
+        space = kind((12, 10), tuple(lengths))
+        finer = Finer(space, 50)
+        assert finer.space.points == (60, 50)
+        # Rounding of a few transforms.
+        np.testing.assert_allclose(
+            finer.field(field(space)), field(finer.space), atol=1e-13
+        )
 
     def test_blocks_hold_every_sample_once(self, rng):
         series = rng.standard_normal(1003)

@@ -6,18 +6,21 @@ import dataclasses
 import re
 import sys
 from html.parser import HTMLParser
+from types import SimpleNamespace
 from xml.etree import ElementTree
 
 import numpy as np
 import pytest
 
 from eddyshed.reduce.report.evidence import gather
-from eddyshed.reduce.report.markup import number, page, span, text, unit
+from eddyshed.reduce.report.flow import flow
+from eddyshed.reduce.report.markup import Note, number, page, span, text, unit
 from eddyshed.reduce.report.page import figures_module, render, write_report
 from eddyshed.reduce.settings import StudyConfig
 from eddyshed.reduce.stages import STAGES
 from eddyshed.reduce.store import read_fingerprint, read_json
 from eddyshed.reduce.study import Study, bring_up_to_date, fingerprint_of, is_fresh
+from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.errors import DataError
 
@@ -207,12 +210,125 @@ class TestPage:
         assert again == html
 
 
+def flow_of(grid, ocean, folder, extra=""):
+    """What the section on the flow needs, from a run of thirty short steps."""
+    document = parse_config(
+        f"""
+name = "flow"
+[grid]
+{grid}
+[ocean]
+{ocean}
+{extra}
+[initial]
+kind = "noise"
+energy = "1e-4 m2/s2"
+band = [1, 3]
+[time]
+step = "10 s"
+spin_up = "0 s"
+duration = "300 s"
+[output]
+state_every = "10 s"
+[resolved]
+kind = "eof"
+modes = 1
+""",
+        StudyConfig,
+        "flow.toml",
+    )
+    study = Study(document=document, folder=folder, quiet=True)
+    bring_up_to_date(study, STAGES, "truth")
+    record = study.record()
+    return SimpleNamespace(
+        study=study,
+        ocean=build_ocean(document.config),
+        record=record,
+        split=SimpleNamespace(mean=record.read(0, len(record.times)).mean(axis=0)),
+    )
+
+
+SEA = 'points = [12, 16]\nlengths = ["1000 km", "1500 km"]'
+SLICE = 'points = [16, 8]\nlengths = ["4 m", "1 m"]'
+LAYER = 'kind = "barotropic"\nbeta = "1e-11 m-1 s-1"\ndrag = "0.01 1/d"'
+LAYERS = """kind = "two_layer"
+upper_depth = "1 km"
+lower_depth = "3 km"
+deformation_radius = "100 km"
+upper_current = "0.1 m/s"
+drag = "0.01 1/d\""""
+FLUID = """kind = "boussinesq"
+buoyancy_gradient = "1e-6 s-2"
+viscosity = "1e-5 m2/s"
+diffusivity = "1e-6 m2/s\""""
+GUSTS = """[forcing.gusts]
+kind = "wave"
+amplitude = "1e-13 s-2"
+waves = [1, 1]
+[forcing.gusts.time]
+kind = "gusts"
+decorrelation = "100 s\""""
+
+
+class TestFlow:
+    """Every ocean in every space it fits, drawn and in words."""
+
+    @pytest.mark.parametrize(
+        ("kind", "space", "shown"),
+        [
+            (LAYER, "periodic", ["repeats in both directions", "Eastward velocity"]),
+            (
+                LAYER,
+                "channel",
+                ["walls in the south", "Eastward velocity", "Thick lines"],
+            ),
+            (LAYER, "basin", ["walls on all four", "(b) Streamfunction, mean over"]),
+            (LAYERS, "periodic", ["two layers", "(a) Upper and (b) lower layer"]),
+            (LAYERS, "channel", ["two layers", "(a) Upper and (b) lower", "walls"]),
+            (FLUID, "periodic", ["slice", "upwards", "(b) Buoyancy"]),
+            (FLUID, "channel", ["slice", "walls below and above", "(a) Buoyancy"]),
+        ],
+        ids=[
+            "one layer, periodic",
+            "one layer, channel",
+            "one layer, basin",
+            "two layers, periodic",
+            "two layers, channel",
+            "slice, periodic",
+            "slice, channel",
+        ],
+    )
+    def test_shows_every_ocean(self, kind, space, shown, tmp_path):
+        grid = f'space = "{space}"\n{SLICE if kind is FLUID else SEA}'
+        evidence = flow_of(grid, kind, tmp_path / "flow", extra=GUSTS)
+        html = flow(Note(drawing=figures_module()), evidence)
+        walk = Walk(html)
+        pictures = walk.tags("img")
+        assert walk.open == []
+        assert len(pictures) == 2
+        found = re.sub(r"\s+", " ", re.sub(r"<[^>]*>", "", html))
+        for part in shown:
+            assert part in found
+        assert ("against z" in pictures[0]["alt"]) == (kind is FLUID)
+        # Every source and sink that the ocean names, and what the gusts fed.
+        names = evidence.ocean.budget_units.items()
+        terms = [name for name, (units, _) in names if units == "m2 s-3"]
+        assert len(terms) >= 2
+        table = found[found.index("Energy budget") :].replace("&#x27;", "'")
+        for name in [*terms, "gusts"]:
+            assert f"{name.replace('_', ' ')}: " in table
+        # Beside them the gusts, the energy, its change and the residual.
+        assert html.count('scope="row"') == len(terms) + 4
+        assert ("Thick lines are walls" in found) == (space != "periodic")
+        assert ("not to the scale" in found) == (kind is FLUID)
+
+
 class TestContent:
     def test_opens_with_what_was_done_and_a_caution(self, html):
         found = words(html)
         start = found[:1500]
-        assert "box of 1800 km by 1800 km" in start
-        assert "16 × 16 grid points, was run for 8.22 yr" in start  # 3002 d
+        assert "1800 km in x by 1800 km in y" in start
+        assert "16 × 16 grid points; it was run for 8.22 yr" in start  # 3002 d
         assert re.search(r"\d ± \d+(\.\d+)? correlation times of its slowest", start)
         assert "not a forecast of any place" in start
         assert "the judgement of a qualified professional" in start

@@ -138,7 +138,9 @@ def test_forecast_shows_scales_of_the_flows_and_warns():
     values = {name: value for name, value, _ in found.scales}
     assert values["rms speed (initial state)"] == pytest.approx(np.sqrt(0.02))
     assert not [text for text in found.warnings if "advection allows" in text]
-    hasty = forecast_run(config_of("time.step=1 d", "initial.energy=1 m2/s2"), seconds=0.01)
+    hasty = forecast_run(
+        config_of("time.step=1 d", "initial.energy=1 m2/s2"), seconds=0.01
+    )
     assert [text for text in hasty.warnings if "advection allows" in text]
     assert [text for text in hasty.warnings if "eddy turnover time" in text]
     coarse = forecast_run(config_of("ocean.deformation_radius=12 km"), seconds=0.01)
