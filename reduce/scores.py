@@ -223,9 +223,10 @@ def judge(scores: list[Score], labels: tuple[str, ...]) -> Verdict:
     at five percent (Holm 1979, Scand. J. Statist. 6:65). *Close*: every mean,
     variance and distribution lies within tolerance. *Off*: one of them is
     beyond its tolerance by more than two standard errors. *Undecided*:
-    neither; longer records would tell. Integral times are scored and counted
-    but not asked of a close closure: one that gets the slow modes' memory
-    wrong can still serve for their climate.
+    none of these, or an error is not known because a mode keeps its memory for
+    longer than the record can tell; longer records would. Integral times are
+    scored and counted but not asked of a close closure: one that gets the slow
+    modes' memory wrong can still serve for their climate.
     """
     sampling = np.concatenate([s.sampling for s in scores])
     close = np.concatenate([s.close for s in scores])
@@ -236,7 +237,14 @@ def judge(scores: list[Score], labels: tuple[str, ...]) -> Verdict:
         "within_tolerance": int(close.sum()),
         "count": len(sampling),
     }
-    if sampling.mean() >= 0.9 and p_values.min() > 0.05 / len(p_values):
+    unknown = [s for s in asked if not np.all(np.isfinite(s.difference.error))]
+    if unknown:
+        word, reason = "undecided", _furthest(asked, labels)
+        reason += (
+            ", with an error that is not known: a mode keeps its memory for longer "
+            "than the record can tell"
+        )
+    elif sampling.mean() >= 0.9 and p_values.min() > 0.05 / len(p_values):
         word, reason = "indistinguishable", _furthest(scores, labels)
         wide = [s for s in asked if np.any(s.difference.error > s.tolerance / 2)]
         if wide:

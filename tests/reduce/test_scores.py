@@ -283,3 +283,22 @@ def test_constant_series_have_no_summary():
     series[:, :, 1] = 3.0
     with pytest.raises(DataError, match="mode 1 is constant"):
         summarise(series, STEP, np.random.default_rng(1))
+
+
+def test_an_unknown_error_is_no_praise():
+    # Whatever the values, a difference of unknown error cannot be called small.
+    unknown = Estimate(np.array([0.01]), np.array([np.inf]))
+    scores = [
+        Score(
+            quantity=quantity,
+            difference=unknown,
+            sampling=np.array([True]),
+            tolerance=0.25,
+            close=np.array([True]),
+            p_value=np.array([1.0]),
+        )
+        for quantity in ("mean", "variance", "integral time", "distribution")
+    ]
+    verdict = judge(scores, ("slow",))
+    assert verdict.word == "undecided"
+    assert "not known" in verdict.reason
