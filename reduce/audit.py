@@ -13,10 +13,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .resampling import moments
 from .settings import AuditSettings
 from .split import Split
-from .statistics import Estimate, integral_time
+from .statistics.correlation import Estimate, integral_time
+from .statistics.resampling import moments
 
 CONFIDENCE = 1.96  # standard errors to either side: a two-sided 95 % interval
 

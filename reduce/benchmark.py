@@ -18,7 +18,7 @@ from .settings import BenchmarkSettings, StudyConfig
 from .simulated import Simulated
 from .simulation import simulate, step_rule
 from .split import Split
-from .statistics import correlation_function
+from .statistics.correlation import correlation_function
 from .store import plain
 
 LAGS = 120  # of the correlation functions that are kept for the report

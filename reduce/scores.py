@@ -14,9 +14,9 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.special import erfc
 
-from .resampling import kolmogorov_smirnov, moments, wasserstein
 from .settings import BenchmarkSettings
-from .statistics import Estimate, integral_time
+from .statistics.correlation import Estimate, integral_time
+from .statistics.resampling import kolmogorov_smirnov, moments, wasserstein
 
 SAMPLING = 2.0  # standard errors within which two numbers agree
 QUANTITIES = ("mean", "variance", "integral time", "distribution")

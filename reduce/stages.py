@@ -29,13 +29,13 @@ from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
-from .noise import NoiseFit, fit_ornstein_uhlenbeck, window_rule
+from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
 from .settings import FourierSettings, StudyConfig
 from .simulated import load, save
 from .split import Split, split_truth, unresolved_series
-from .statistics import integral_time
+from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Interrupted, Stage, Study, fingerprint_of
 

@@ -35,7 +35,7 @@ def pair(value: float | None, error: float | None, *, scale: float = 1.0) -> str
         return "unknown"
     if error == 0:
         return f"{value / scale:.3g}"
-    from .statistics import Estimate
+    from .statistics.correlation import Estimate
 
     return format(Estimate(value / scale, error / scale))
 

@@ -8,7 +8,7 @@ import numpy as np
 
 from ..contract import Model
 from ..coupling import coupling
-from ..noise import NoiseFit
+from ..noise.fit import NoiseFit
 from ..operators import Operators
 from ..split import Split
 

@@ -20,9 +20,9 @@ import numpy as np
 
 from eddyshed.solver.errors import DataError
 
-from ..noise import fit_ornstein_uhlenbeck, window_rule
+from ..noise.fit import fit_ornstein_uhlenbeck, window_rule
 from ..reduced import ReducedModel
-from ..statistics import integral_time
+from ..statistics.correlation import integral_time
 from .data import ClosureData
 
 LAG_TIMES = 3  # lag of the instrument, in correlation times of the coupling

@@ -10,12 +10,12 @@ import numpy as np
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.record import TruthRecord
 
-from ..estimate import Estimate
-from ..noise import NoiseFit
+from ..noise.fit import NoiseFit
 from ..scores import Summary
 from ..simulated import load
 from ..split import Split
 from ..stages import read_noise, read_split, simulation_stamp
+from ..statistics.estimate import Estimate
 from ..store import read_json
 from ..study import Study
 

@@ -10,7 +10,7 @@ from collections.abc import Sequence
 import numpy as np
 from matplotlib.ticker import MaxNLocator
 
-from ..estimate import Estimate
+from ..statistics.estimate import Estimate
 from .canvas import (
     BAND,
     DAY,

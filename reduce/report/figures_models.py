@@ -9,7 +9,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from ..estimate import Estimate
+from ..statistics.estimate import Estimate
 from .canvas import (
     BAND,
     DAY,

@@ -8,7 +8,7 @@ from eddyshed.solver.config import as_table
 from eddyshed.solver.diagnostics import Budget, budget_of
 from eddyshed.solver.quantities import format_quantity
 
-from ..estimate import Estimate
+from ..statistics.estimate import Estimate
 from .evidence import Evidence
 from .flow_fields import last_state
 from .markup import (

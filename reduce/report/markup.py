@@ -16,7 +16,7 @@ from types import ModuleType
 
 from eddyshed.solver.quantities import UNITS
 
-from ..estimate import Estimate
+from ..statistics.estimate import Estimate
 
 STYLE = """\
 :root { color-scheme: light; }

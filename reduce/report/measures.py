@@ -9,7 +9,7 @@ import numpy as np
 from eddyshed.solver.diagnostics import FED, LEVELS
 from eddyshed.solver.record import TruthRecord
 
-from ..estimate import Estimate
+from ..statistics.estimate import Estimate
 
 BATCHES = 20  # batch means: common practice, the error is then known to a sixth
 

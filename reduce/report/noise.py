@@ -6,8 +6,8 @@ import dataclasses
 
 import numpy as np
 
-from ..estimate import Estimate
 from ..split import unresolved_series
+from ..statistics.estimate import Estimate
 from .curves import (
     BARTLETT,
     Correlation,

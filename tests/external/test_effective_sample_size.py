@@ -13,13 +13,13 @@ Ornstein-Uhlenbeck process sampled once a step:
 import numpy as np
 import pytest
 
-from eddyshed.reduce.noise import OrnsteinUhlenbeck
-from eddyshed.reduce.resampling import moments
-from eddyshed.reduce.statistics import (
+from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck
+from eddyshed.reduce.statistics.correlation import (
     correlation_function,
     effective_size,
     integral_time,
 )
+from eddyshed.reduce.statistics.resampling import moments
 
 PHI = 0.9
 # The integral time ends where the correlation is 0.05: of an exponential, and

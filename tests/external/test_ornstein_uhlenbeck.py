@@ -8,8 +8,8 @@ import numpy as np
 import pytest
 from scipy import integrate
 
-from eddyshed.reduce.noise import OrnsteinUhlenbeck, fit_ornstein_uhlenbeck
-from eddyshed.reduce.statistics import correlation_function
+from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck, fit_ornstein_uhlenbeck
+from eddyshed.reduce.statistics.correlation import correlation_function
 
 PRINTED = 1e-11  # twelve digits are printed of numbers of order one
 

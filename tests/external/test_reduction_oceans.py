@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 
 from eddyshed.reduce.contract import check_model
-from eddyshed.reduce.noise import fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.settings import StudyConfig
 from eddyshed.reduce.split import split_truth, unresolved_series

@@ -10,7 +10,7 @@ from scipy import stats
 from splits import resolved_only
 
 from eddyshed.reduce.audit import CONFIDENCE, audit, decide, detrended
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.settings import AuditSettings
 from eddyshed.solver.errors import DataError
 

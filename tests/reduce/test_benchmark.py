@@ -15,11 +15,11 @@ from eddyshed.reduce.benchmark import (
     truth_side,
 )
 from eddyshed.reduce.closures import CLOSURES
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.reduced import ReducedModel
 from eddyshed.reduce.settings import BenchmarkSettings
 from eddyshed.reduce.simulated import Simulated, load, save
-from eddyshed.reduce.statistics import correlation_function
+from eddyshed.reduce.statistics.correlation import correlation_function
 from eddyshed.solver.errors import DataError
 
 STEP, SEED = 0.5, 5

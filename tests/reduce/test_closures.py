@@ -11,12 +11,12 @@ from toys import Quadratic, orthonormal_vectors, random_model, random_weights
 from eddyshed.reduce.closures import CLOSURES, closure
 from eddyshed.reduce.closures.data import ClosureData
 from eddyshed.reduce.contract import tendency
-from eddyshed.reduce.noise import fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.reduced import compiled_drift
-from eddyshed.reduce.resampling import moments
 from eddyshed.reduce.simulation import simulate, step_rule
+from eddyshed.reduce.statistics.resampling import moments
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.randomness import stream
 

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from scipy import signal, stats
 
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.report.curves import (
     density,
     large_lag_error,

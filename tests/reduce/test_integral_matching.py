@@ -7,15 +7,15 @@ from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from scipy import linalg, stats
 
-from eddyshed.reduce import series as series_module
-from eddyshed.reduce.integral_matching import match_units, windowed_rate
-from eddyshed.reduce.lag_integrals import (
+from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck, fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.integral_matching import match_units, windowed_rate
+from eddyshed.reduce.noise.lag_integrals import (
     bartlett_kernels,
     jackknife_error,
     matrix_means,
     unit_means,
 )
-from eddyshed.reduce.noise import OrnsteinUhlenbeck, fit_ornstein_uhlenbeck
+from eddyshed.reduce.statistics import series as series_module
 
 
 def waves(decays, frequencies, variance=1.0):

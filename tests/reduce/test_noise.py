@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from scipy import linalg, stats
 
-from eddyshed.reduce.noise import (
+from eddyshed.reduce.noise.fit import (
     OrnsteinUhlenbeck,
     fit_ornstein_uhlenbeck,
     window_rule,

@@ -6,7 +6,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import linalg
 
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.solver.errors import DataError
 
 ROUND_OFF = 1e-11  # of numbers of order 1 to 100 in matrices of condition < 1000

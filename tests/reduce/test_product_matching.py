@@ -4,8 +4,8 @@ import numpy as np
 import pytest
 from scipy import signal, stats
 
-from eddyshed.reduce.noise import fit_ornstein_uhlenbeck
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.solver.errors import DataError
 
 STEP = 0.1
@@ -323,7 +323,7 @@ def test_blocks_do_not_matter(monkeypatch):
     # Many waves are worked on in blocks that fit the memory; here one at a time.
     series = waves(1.0, 1.5, 1000, 19, number=4)
     whole = fitted(series, 4.0)
-    monkeypatch.setattr("eddyshed.reduce.series.WORKING_MEMORY", 1)
+    monkeypatch.setattr("eddyshed.reduce.statistics.series.WORKING_MEMORY", 1)
     single = fitted(series, 4.0)
     for name in ("decay", "frequency", "variance", "double_window_decay"):
         one, other = getattr(whole, name), getattr(single, name)

@@ -398,7 +398,7 @@ class TestContent:
         assert closures[2]["name"] in scores
 
     def test_serves_a_study_that_resolves_every_mode(self, evidence):
-        from eddyshed.reduce.noise import fit_ornstein_uhlenbeck
+        from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 
         nothing = np.empty((1, len(evidence.split.x), 0))
         whole = dataclasses.replace(

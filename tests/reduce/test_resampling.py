@@ -2,15 +2,15 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from eddyshed.reduce.blocks import Blocks, resampled_means
-from eddyshed.reduce.noise import OrnsteinUhlenbeck
-from eddyshed.reduce.resampling import (
+from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck
+from eddyshed.reduce.statistics.blocks import Blocks, resampled_means
+from eddyshed.reduce.statistics.correlation import correlation_scales
+from eddyshed.reduce.statistics.resampling import (
     central_moments,
     kolmogorov_smirnov,
     moments,
     wasserstein,
 )
-from eddyshed.reduce.statistics import correlation_scales
 from eddyshed.solver.errors import DataError
 
 

@@ -4,8 +4,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from eddyshed.reduce.estimate import Estimate
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.scores import (
     QUANTITIES,
     SAMPLING,
@@ -16,6 +15,7 @@ from eddyshed.reduce.scores import (
     summarise,
 )
 from eddyshed.reduce.settings import BenchmarkSettings
+from eddyshed.reduce.statistics.estimate import Estimate
 from eddyshed.solver.errors import DataError
 
 STEP = 0.25

@@ -8,9 +8,9 @@ from hypothesis.extra import numpy as hnp
 from scipy import linalg
 from statsmodels.tsa.stattools import acovf
 
-from eddyshed.reduce import series as series_module
-from eddyshed.reduce.noise import OrnsteinUhlenbeck
-from eddyshed.reduce.statistics import (
+from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck
+from eddyshed.reduce.statistics import series as series_module
+from eddyshed.reduce.statistics.correlation import (
     Estimate,
     autocovariance,
     correlation_function,

@@ -14,9 +14,9 @@ from toys import coloured_model, orthonormal_vectors, random_model
 
 from eddyshed.reduce.audit import Finding
 from eddyshed.reduce.bases.basis import Basis
-from eddyshed.reduce.noise import NoiseFit, fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.fit import NoiseFit, fit_ornstein_uhlenbeck
+from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import Operators, galerkin
-from eddyshed.reduce.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.reduced import ReducedModel
 from eddyshed.reduce.report.markup import page
 from eddyshed.reduce.split import Split

@@ -25,7 +25,7 @@ from scipy import fft
 
 from eddyshed.solver.errors import DataError
 
-from .series import mode_blocks
+from ..statistics.series import mode_blocks
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -1,7 +1,7 @@
 """The Ornstein-Uhlenbeck process: what follows exactly from its two matrices.
 
 Knows the mathematics of the process and nothing of data; fits of it to
-series are in :mod:`eddyshed.reduce.noise`.
+series are in :mod:`eddyshed.reduce.noise.fit`.
 """
 
 from __future__ import annotations

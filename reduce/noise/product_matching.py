@@ -10,7 +10,7 @@ function. An Ornstein-Uhlenbeck pair of rate ``g + i w`` has
     int_0^T conj(rho) rho' dt / int_0^T |rho|^2 dt = -g - i w (as T -> oo),
 
 so the first gives g and the imaginary part of the second w. The numerics of
-:func:`eddyshed.reduce.noise.fit_ornstein_uhlenbeck` for noise that acts through
+:func:`eddyshed.reduce.noise.fit.fit_ornstein_uhlenbeck` for noise that acts through
 its products.
 """
 
@@ -19,8 +19,8 @@ from __future__ import annotations
 import numpy as np
 from scipy import fft
 
+from ..statistics.series import mode_blocks
 from .integral_matching import Replicates, replicates_of_units
-from .series import mode_blocks
 
 HALVINGS = 60  # of the interval that holds a rate: to the last bit
 SLOWEST = 1e-3  # e-folding times of |rho|^2 in a window, below which g is not known

@@ -15,7 +15,7 @@ import numpy as np
 from scipy import stats
 from scipy.sparse import csr_array
 
-from .statistics import correlation_scales
+from .correlation import correlation_scales
 
 BLOCK_TIMES = 8  # a block lasts at least so many integral times
 MOST_BLOCKS = 1000  # longer blocks rather than more: 2 % error of the error

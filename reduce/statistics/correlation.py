@@ -1,10 +1,11 @@
-"""Statistics of stationary time series, each with its standard error.
+"""Covariances, times and effective sizes of stationary time series.
 
-Knows nothing but numbers in time: series are as :mod:`eddyshed.reduce.series`
-has them. The record is all members together, its length
-``T = members * times * step``.
+Knows nothing but numbers in time: series are as
+:mod:`eddyshed.reduce.statistics.series` has them. The record is all members
+together, its length ``T = members * times * step``.
 
-Distributions and resampled errors are in :mod:`eddyshed.reduce.resampling`.
+Distributions and resampled errors are in
+:mod:`eddyshed.reduce.statistics.resampling`.
 """
 
 from __future__ import annotations

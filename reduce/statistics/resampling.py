@@ -1,7 +1,7 @@
 """Moments and distributions of time series, with errors by resampling.
 
-Series are as in :mod:`eddyshed.reduce.series`, and blocks of them are drawn
-as :mod:`eddyshed.reduce.blocks` says.
+Series are as in :mod:`eddyshed.reduce.statistics.series`, and blocks of them are drawn
+as :mod:`eddyshed.reduce.statistics.blocks` says.
 """
 
 from __future__ import annotations
@@ -14,9 +14,9 @@ from scipy import integrate, special, stats
 from eddyshed.solver.errors import DataError
 
 from .blocks import Blocks, resampled_means
+from .correlation import correlation_scales
 from .estimate import Estimate
 from .series import checked_series, checked_step
-from .statistics import correlation_scales
 
 THRESHOLDS = 32  # values at which resampled distributions are compared
 
@@ -102,7 +102,7 @@ def moments(
     -----
     Neither the finite number of blocks nor the correlation across their edges
     shows in the scatter of the resampled records. It is widened by what they
-    are known to hide; see `eddyshed.reduce.blocks.Blocks`.
+    are known to hide; see `eddyshed.reduce.statistics.blocks.Blocks`.
 
     Measured on 4000 Ornstein-Uhlenbeck series each, of 30, 100 and 300
     integral times, 1.96 errors hold the true mean in 93, 94 and 95 %, the

@@ -2,7 +2,7 @@
 
 The process has ``P = rate^-1 C``, with P the integral of its lag covariance
 over lags from zero (a Green-Kubo integral), so that ``rate = C P^-1``. The
-numerics of :func:`eddyshed.reduce.noise.fit_ornstein_uhlenbeck`.
+numerics of :func:`eddyshed.reduce.noise.fit.fit_ornstein_uhlenbeck`.
 """
 
 from __future__ import annotations

@@ -20,13 +20,13 @@ import numpy as np
 
 from eddyshed.solver.errors import DataError
 
-from .estimate import Estimate
-from .fit_notes import notes_on
+from ..statistics.estimate import Estimate
+from ..statistics.series import checked_series, checked_step
 from .integral_matching import Replicates, match_matrix, match_units
 from .lag_integrals import jackknife_error, units_of
+from .notes import notes_on
 from .ornstein_uhlenbeck import OrnsteinUhlenbeck
 from .product_matching import match_products
-from .series import checked_series, checked_step
 
 __all__ = ["NoiseFit", "OrnsteinUhlenbeck", "fit_ornstein_uhlenbeck", "window_rule"]
 
@@ -109,7 +109,7 @@ def window_rule(times: np.ndarray, variances: np.ndarray, step: float) -> float:
     Parameters
     ----------
     times : array_like, shape (mode,)
-        Integral times [s]; see `eddyshed.reduce.statistics.integral_time`.
+        Integral times [s]; see `eddyshed.reduce.statistics.correlation.integral_time`.
     variances : array_like, shape (mode,)
         Weights of the mean: what carries the energy sets the window.
     step : float

@@ -1,0 +1,1 @@
+"""Ornstein-Uhlenbeck noise: the process, and its fits to time series."""

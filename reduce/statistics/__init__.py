@@ -1,0 +1,1 @@
+"""Statistics of stationary time series, each with its standard error."""
