@@ -149,16 +149,6 @@ class ReducedModel:
         return len(self.y_forcing)
 
 
-def linear_growth(model: ReducedModel) -> float:
-    """Growth rate of the fastest mode of ``dx/dt = x_from_x x`` [s-1].
-
-    Where x has no quadratic terms and y does not feel it, a positive rate
-    means that every member grows without bound. Otherwise it says only what
-    happens near the mean state.
-    """
-    return float(np.linalg.eigvals(model.x_from_x).real.max())
-
-
 def column_product(
     matrix: np.ndarray | sparse.csr_array, columns: np.ndarray
 ) -> np.ndarray:

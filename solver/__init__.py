@@ -8,20 +8,30 @@ from importlib import import_module
 
 _PUBLIC = {
     "as_table": "config",
-    "build_ocean": "truth",
+    "build_ocean": "build",
+    "budget_of": "diagnostics",
     "forecast_run": "forecast",
+    "gyres": "diagnostics",
+    "isotropic_spectrum": "diagnostics",
     "open_record": "record",
     "parse_config": "config",
     "parse_quantity": "quantities",
     "read_config": "config",
     "run_member": "truth",
+    "spectral_flux": "diagnostics",
     "stream": "randomness",
+    "zonal_spectrum": "diagnostics",
     "Barotropic": "oceans.barotropic",
+    "Basin": "spaces.basin",
+    "Boussinesq": "oceans.boussinesq",
+    "Channel": "spaces.channel",
     "EddyshedError": "errors",
+    "ExponentialDifferencingRK4": "exponential",
     "IntegratingFactorRK4": "stepping",
     "Periodic": "spaces.periodic",
     "TruthConfig": "settings",
     "TruthRecord": "record",
+    "TwoLayer": "oceans.two_layer",
 }
 __all__ = list(_PUBLIC)
 

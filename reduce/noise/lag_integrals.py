@@ -157,7 +157,8 @@ def unit_means(
                 turned = _batch_sums(wide_imag * real - wide * imag, edges)
                 integral[window][:, unit] = same + 1j * turned
     return Means(
-        square=_left_out(square, edges, 1), integral=_left_out(integral, edges, 1)
+        square=left_out(square, np.diff(edges), 1),
+        integral=left_out(integral, np.diff(edges), 1),
     )
 
 
@@ -182,7 +183,8 @@ def matrix_means(series: np.ndarray, kernels: np.ndarray, batches: int) -> Means
                 some = wide.reshape(len(rows), -1)[:, part]
                 integral[window, batch, block] = some @ flat[:, part].T
     return Means(
-        square=_left_out(square, edges, 0), integral=_left_out(integral, edges, 1)
+        square=left_out(square, np.diff(edges), 0),
+        integral=left_out(integral, np.diff(edges), 1),
     )
 
 
@@ -240,10 +242,24 @@ def _batch_sums(product: np.ndarray, edges: np.ndarray) -> np.ndarray:
     return np.add.reduceat(product.reshape(len(product), -1), edges[:-1], axis=1).T
 
 
-def _left_out(sums: np.ndarray, edges: np.ndarray, axis: int) -> np.ndarray:
-    """Means over all batches, then over all but each one, along an axis of sums."""
+def left_out(sums: np.ndarray, counts: np.ndarray, axis: int) -> np.ndarray:
+    """Means over all batches, then over all but each one.
+
+    Parameters
+    ----------
+    sums : ndarray
+        Sums over each batch, along `axis`.
+    counts : ndarray of int, shape (batch,)
+        Number of terms in each.
+    axis : int
+
+    Returns
+    -------
+    ndarray
+        One longer than `sums` along `axis`.
+    """
     sums = np.moveaxis(sums, axis, 0)
-    counts = np.diff(edges).reshape(-1, *(1,) * (sums.ndim - 1))
-    total, count = sums.sum(axis=0), edges[-1]
+    counts = counts.reshape(-1, *(1,) * (sums.ndim - 1))
+    total, count = sums.sum(axis=0), counts.sum()
     means = np.concatenate([total[None] / count, (total - sums) / (count - counts)])
     return np.moveaxis(means, 0, axis)

@@ -21,6 +21,7 @@ from scipy import fft
 
 from ..statistics.series import mode_blocks
 from .integral_matching import Replicates, replicates_of_units
+from .lag_integrals import left_out
 
 HALVINGS = 60  # of the interval that holds a rate: to the last bit
 SLOWEST = 1e-3  # e-folding times of |rho|^2 in a window, below which g is not known
@@ -111,16 +112,7 @@ def _lag_covariances(parts, lags, batches):
             (own.imag**2).sum(axis=(1, 2)),
         )
     counts = np.diff(edges) * members
-    return _left_out(sums, counts, 0), _left_out(squares, counts, 1)
-
-
-def _left_out(sums, counts, axis):
-    """Means over all batches, then over all but each one."""
-    sums = np.moveaxis(sums, axis, 0)
-    counts = counts.reshape(-1, *(1,) * (sums.ndim - 1))
-    total = sums.sum(axis=0)
-    others = (total - sums) / (counts.sum() - counts)
-    return np.moveaxis(np.concatenate([total[None] / counts.sum(), others]), 0, axis)
+    return left_out(sums, counts, 0), left_out(squares, counts, 1)
 
 
 def _rates(covariance, step, record):

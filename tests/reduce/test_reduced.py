@@ -13,7 +13,6 @@ from eddyshed.reduce.reduced import (
     as_operator,
     column_product,
     compiled_drift,
-    linear_growth,
 )
 from eddyshed.solver.errors import DataError
 
@@ -152,17 +151,6 @@ def test_coupling_of_a_projected_model_conserves_energy(rng):
     # Round-off of a hundred products.
     assert np.all(np.abs(work) < 1e-13 * size)
     assert np.all(np.abs((x * dx).sum(axis=0)) > 1e-3 * size)
-
-
-def test_linear_growth_is_the_largest_real_part():
-    """Eigenvalues of [[a, -b], [b, a]] are a + i b and a - i b."""
-    model = ReducedModel(
-        name="spiral",
-        x_forcing=np.zeros(3),
-        x_from_x=[[-0.2, -3, 0], [3, -0.2, 0], [5, 0, -1]],
-        x_from_xx=np.zeros((3, 3, 3)),
-    )
-    assert linear_growth(model) == pytest.approx(-0.2, abs=1e-14)
 
 
 def test_fields_left_out_are_zeros_of_the_right_shape():
