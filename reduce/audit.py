@@ -121,7 +121,7 @@ def audit(
         The thresholds.
     split : Split
         The divided truth.
-    coupling : ndarray, shape (n_time, nx)
+    coupling : ndarray, shape (member, time, nx)
         What the unresolved modes do to the resolved ones: their full tendency
         less that of the truncated model [state unit s-1].
     rng : numpy.random.Generator
@@ -136,11 +136,11 @@ def audit(
     DataError
         If a resolved mode or its coupling is constant.
     """
-    time_x = integral_time(split.x[np.newaxis], split.step)
+    time_x = integral_time(split.x, split.step)
     unexplained = detrended(coupling, split.x)
-    time_r = integral_time(unexplained[np.newaxis], split.step)
-    shape = moments(unexplained[np.newaxis], split.step, rng=rng)
-    length = len(split.x) * split.step
+    time_r = integral_time(unexplained, split.step)
+    shape = moments(unexplained, split.step, rng=rng)
+    length = split.length
     ratio = time_x.value / time_r.value
     separation = Estimate(
         ratio,
@@ -211,15 +211,18 @@ def detrended(coupling: np.ndarray, x: np.ndarray) -> np.ndarray:
 
     Parameters
     ----------
-    coupling, x : ndarray, shape (n_time, nx)
+    coupling, x : ndarray, shape (member, time, nx)
 
     Returns
     -------
-    ndarray, shape (n_time, nx)
+    ndarray, shape (member, time, nx)
     """
-    anomalies = coupling - coupling.mean(axis=0)
-    centred = x - x.mean(axis=0)
-    slope, *_ = np.linalg.lstsq(centred, anomalies, rcond=None)
+    anomalies = coupling - coupling.mean(axis=(0, 1))
+    centred = x - x.mean(axis=(0, 1))
+    modes = x.shape[-1]
+    slope, *_ = np.linalg.lstsq(
+        centred.reshape(-1, modes), anomalies.reshape(-1, modes), rcond=None
+    )
     return anomalies - centred @ slope
 
 

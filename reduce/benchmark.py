@@ -36,7 +36,7 @@ class TruthSide:
     ----------
     split : Split
         The divided truth.
-    series : ndarray, shape (1, time, mode)
+    series : ndarray, shape (member, time, mode)
         Resolved coordinates, not centred.
     step : float
         Sampling interval [s].
@@ -77,7 +77,7 @@ def truth_side(split: Split, seed: int) -> TruthSide:
     DataError
         If a resolved mode is constant or the truth too short.
     """
-    series = (split.fine_x + split.resolved_mean)[np.newaxis]
+    series = split.fine_x + split.resolved_mean
     step = split.fine_step
     summary = summarise(series, step, stream(seed, 0, "truth statistics"))
     longest = 3 * summary.integral_time.value.max() / step
@@ -119,22 +119,23 @@ def run_closure(
     split, interval, seed = truth.split, truth.step, config.seed
     members = config.benchmark.members
     step, every = step_rule(model, np.sqrt(split.resolved.variance), interval=interval)
-    duration = member_duration(config.benchmark, len(split.x) * split.step)
+    duration = member_duration(config.benchmark, split.length)
     spin_up = SPIN_UP_TIMES * float(truth.summary.integral_time.value.max())
     skip = int(np.ceil(spin_up / interval))
     n_steps = (skip + int(np.ceil(duration / interval))) * every
+    states = split.x.reshape(-1, split.x.shape[-1])
     starts = stream(seed, 0, f"starts of {model.name}").integers(
-        len(split.x), size=members
+        len(states), size=members
     )
     before = time.process_time()
     trajectory = simulate(
         model,
-        split.x[starts],
+        states[starts],
         step=step,
         n_steps=n_steps,
         every=every,
         streams=[stream(seed, k, f"noise of {model.name}") for k in range(members)],
-        bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=1).max()),
+        bound=LOST_BOUND * float(np.linalg.norm(states, axis=1).max()),
         progress=progress,
     )
     seconds = time.process_time() - before

@@ -20,7 +20,7 @@ def coupling(split: Split, operators: Operators) -> np.ndarray:
 
     Returns
     -------
-    ndarray, shape (n_time, nx)
+    ndarray, shape (member, time, nx)
         The full resolved tendency less that of the truncated equation, so it
         holds what is in no mode at all as well [state unit s-1].
     """
@@ -28,9 +28,15 @@ def coupling(split: Split, operators: Operators) -> np.ndarray:
     truncated = (
         operators.F1
         + x @ operators.A11.T
-        + np.einsum("ijk,tj,tk->ti", operators.B111, x, x, optimize=True)
+        + np.einsum("ijk,...j,...k->...i", operators.B111, x, x, optimize=True)
     )
     return split.tendency - truncated
+
+
+def covariance(u: np.ndarray, v: np.ndarray) -> np.ndarray:
+    """Mean product of two series, shape (n, m), of shapes (member, time, n or m)."""
+    members, times, _ = u.shape
+    return np.einsum("mti,mtj->ij", u, v, optimize=True) / (members * times)
 
 
 def coupling_sizes(
@@ -41,7 +47,7 @@ def coupling_sizes(
     Parameters
     ----------
     operators : Operators
-    x, y : ndarray, shapes (n_time, nx), (n_time, ny)
+    x, y : ndarray, shapes (member, time, nx), (member, time, ny)
         Resolved and unresolved coordinates; at most 2000 records, spread over
         all, are used.
 
@@ -51,6 +57,7 @@ def coupling_sizes(
         Root mean square of ``A12 y + 2 B112(x, y)`` and of ``B122(y, y)`` less
         its mean [state unit s-1].
     """
+    x, y = np.concatenate(x), np.concatenate(y)
     every = -(-len(x) // SAMPLE)
     x, y = x[::every], y[::every]
     linear = y @ operators.A12.T

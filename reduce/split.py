@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from eddyshed.solver.record import TruthRecord
+from eddyshed.solver.record import TruthRecord, walk
 
 from .bases.basis import Basis
 from .bases.eof import eof_basis
@@ -27,13 +28,13 @@ class Split:
         The two subspaces.
     resolved_mean : ndarray, shape (nx,)
         Mean of the resolved coordinates, which `x` is centred on.
-    x : ndarray, shape (n_time, nx)
+    x : ndarray, shape (member, time, nx)
         Resolved coordinates, less their mean [state unit].
-    tendency : ndarray, shape (n_time, nx)
+    tendency : ndarray, shape (member, time, nx)
         Full tendency of the resolved coordinates [state unit s-1].
     step : float
         Interval between records [s].
-    fine_x : ndarray, shape (n_fine, nx)
+    fine_x : ndarray, shape (member, fine_time, nx)
         Resolved coordinates at the interval of the fine stream, less the same
         mean; `x` itself where the stream does not hold them.
     fine_step : float
@@ -64,8 +65,16 @@ class Split:
         )
         return tuple(float(part / self.total_variance) for part in parts)
 
+    @property
+    def length(self) -> float:
+        """Length of the truth, all members together [s]."""
+        members, times, _ = self.x.shape
+        return members * times * self.step
 
-def split_truth(config: StudyConfig, model: Model, record: TruthRecord) -> Split:
+
+def split_truth(
+    config: StudyConfig, model: Model, records: Sequence[TruthRecord]
+) -> Split:
     """Divide a truth.
 
     Parameters
@@ -74,8 +83,9 @@ def split_truth(config: StudyConfig, model: Model, record: TruthRecord) -> Split
         Sections ``[resolved]`` and ``[unresolved]``.
     model : Model
         The equation that made the truth.
-    record : TruthRecord
-        The truth, read in stretches of at most 64 MB.
+    records : sequence of TruthRecord
+        The members of the truth, of equal length, read in stretches of at most
+        64 MB.
 
     Returns
     -------
@@ -86,11 +96,11 @@ def split_truth(config: StudyConfig, model: Model, record: TruthRecord) -> Split
     DataError
         If the basis cannot be made from this truth.
     """
-    mean, variance = _moments(record)
+    mean, variance = _moments(records)
     if isinstance(config.resolved, FourierSettings):
         resolved, remainder = fourier_basis(config.resolved, model, variance)
     else:
-        resolved, remainder = eof_basis(config.resolved, model, record, mean)
+        resolved, remainder = eof_basis(config.resolved, model, records, mean)
     unresolved = _enough(remainder, config.unresolved.variance)
     weights = metric(model)
     if weights.ndim == 1:
@@ -99,16 +109,17 @@ def split_truth(config: StudyConfig, model: Model, record: TruthRecord) -> Split
         total = float(resolved.variance.sum() + remainder.variance.sum())
     kept = float(resolved.variance.sum() + unresolved.variance.sum())
     dual = dual_vectors(model, resolved.vectors)
-    x = np.empty((len(record.times), resolved.n_modes))
+    x = np.empty((len(records), len(records[0].times), resolved.n_modes))
     rate = np.empty_like(x)
-    for where, states in record.chunks():
-        x[where] = (states - mean) @ dual
-        times = record.times[where]
+    for member, where, states in walk(records):
+        x[member, where] = (states - mean) @ dual
+        times = records[member].times[where]
         rates = np.array(
             [tendency(model, t, z) for t, z in zip(times, states, strict=True)]
         )
-        rate[where] = rates @ dual
-    fine_x, fine_step = _fine(record, dual, mean)
+        rate[member, where] = rates @ dual
+    fine_x, fine_step = _fine(records, dual, mean)
+    step = records[0].step
     return Split(
         mean=mean,
         resolved=resolved,
@@ -116,31 +127,33 @@ def split_truth(config: StudyConfig, model: Model, record: TruthRecord) -> Split
         resolved_mean=mean @ dual,
         x=x,
         tendency=rate,
-        step=record.step,
+        step=step,
         fine_x=x if fine_x is None else fine_x,
-        fine_step=record.step if fine_x is None else fine_step,
+        fine_step=step if fine_x is None else fine_step,
         total_variance=total,
         left_out_variance=max(0.0, total - kept),
     )
 
 
-def unresolved_series(split: Split, model: Model, record: TruthRecord) -> np.ndarray:
-    """Unresolved coordinates, less their mean, shape (n_time, ny)."""
+def unresolved_series(
+    split: Split, model: Model, records: Sequence[TruthRecord]
+) -> np.ndarray:
+    """Unresolved coordinates, less their mean, shape (member, time, ny)."""
     dual = dual_vectors(model, split.unresolved.vectors)
-    y = np.empty((len(record.times), split.unresolved.n_modes))
-    for where, states in record.chunks():
-        y[where] = (states - split.mean) @ dual
+    y = np.empty((len(records), len(records[0].times), split.unresolved.n_modes))
+    for member, where, states in walk(records):
+        y[member, where] = (states - split.mean) @ dual
     return y
 
 
-def _moments(record):
-    """Mean and variance of every coordinate, from stretches of the record."""
-    count = len(record.times)
-    mean = np.zeros(record.size)
-    for _, states in record.chunks():
+def _moments(records):
+    """Mean and variance of every coordinate, from stretches of the records."""
+    count = sum(len(record.times) for record in records)
+    mean = np.zeros(records[0].size)
+    for _, _, states in walk(records):
         mean += states.sum(axis=0) / count
-    variance = np.zeros(record.size)
-    for _, states in record.chunks():
+    variance = np.zeros(records[0].size)
+    for _, _, states in walk(records):
         variance += ((states - mean) ** 2).sum(axis=0) / count
     return mean, variance
 
@@ -157,12 +170,14 @@ def _enough(remainder: Basis, share: float) -> Basis:
     return remainder.take(np.arange(count))
 
 
-def _fine(record, dual, mean):
-    """Resolved coordinates from the fine stream, if it holds all they need."""
-    held, times = record.resolved_coordinates, record.resolved_times
-    outside = np.ones(record.size, dtype=bool)
+def _fine(records, dual, mean):
+    """Resolved coordinates from the fine streams, if they hold all they need."""
+    held, times = records[0].resolved_coordinates, records[0].resolved_times
+    outside = np.ones(records[0].size, dtype=bool)
     outside[held] = False
     if len(times) < 2 or np.any(dual[outside]):
         return None, 0.0
-    fine_x = (record.read_resolved() - mean[held]) @ dual[held]
+    fine_x = np.stack(
+        [(record.read_resolved() - mean[held]) @ dual[held] for record in records]
+    )
     return fine_x, float(times[1] - times[0])

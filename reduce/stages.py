@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import logging
 
-import numpy as np
-
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
 from eddyshed.solver.driven import is_random
@@ -28,7 +26,7 @@ from .bases.fourier import kept_coordinates
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
-from .coupling import coupling, coupling_sizes
+from .coupling import coupling, coupling_sizes, covariance
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
@@ -109,9 +107,9 @@ def run_truth(study: Study, stamp: str) -> None:
 
 def run_reduce(study: Study, stamp: str) -> None:
     """Split the truth, project the equation, fit the noise, make the closures."""
-    config, record = study.config, study.record()
+    config, records = study.config, study.records()
     ocean = build_ocean(config)
-    split = split_truth(config, ocean, record)
+    split = split_truth(config, ocean, records)
     shares = ", ".join(f"{100 * share:.3g} %" for share in split.shares)
     log.info(
         "reduce: %d resolved and %d unresolved modes (%s of the variance, the last "
@@ -120,7 +118,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         split.unresolved.n_modes,
         shares,
     )
-    y = unresolved_series(split, ocean, record)
+    y = unresolved_series(split, ocean, records)
     with progress("operators", 1, quiet=study.quiet) as shown:
         operators = galerkin(
             ocean,
@@ -131,8 +129,8 @@ def run_reduce(study: Study, stamp: str) -> None:
         )
     window = config.noise.window
     if window is None:
-        times = integral_time(y[np.newaxis], record.step).value
-        window = window_rule(times, split.unresolved.variance, record.step)
+        times = integral_time(y, split.step).value
+        window = window_rule(times, split.unresolved.variance, split.step)
     linear, quadratic = coupling_sizes(operators, split.x, y)
     log.info(
         "reduce: unresolved modes reach the resolved ones by linear terms of "
@@ -145,8 +143,8 @@ def run_reduce(study: Study, stamp: str) -> None:
     if match == "auto":
         match = "product" if quadratic > linear else "integral"
     noise = fit_ornstein_uhlenbeck(
-        y[np.newaxis],
-        record.step,
+        y,
+        split.step,
         window=window,
         match=match,
         partners=split.unresolved.partners,
@@ -157,8 +155,8 @@ def run_reduce(study: Study, stamp: str) -> None:
         split=split,
         operators=operators,
         noise=noise,
-        covariance_y=y.T @ y / len(y),
-        covariance_xy=split.x.T @ y / len(y),
+        covariance_y=covariance(y, y),
+        covariance_xy=covariance(split.x, y),
         mean_calibration=config.closures.mean_calibration,
     )
     models = {name: closure(name)(data) for name in config.closures.use}

@@ -37,9 +37,9 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
     "Split": {
         "mean": ("coordinate",),
         "resolved_mean": ("resolved_mode",),
-        "x": ("record", "resolved_mode"),
-        "tendency": ("record", "resolved_mode"),
-        "fine_x": ("fine_record", "resolved_mode"),
+        "x": ("member", "record", "resolved_mode"),
+        "tendency": ("member", "record", "resolved_mode"),
+        "fine_x": ("member", "fine_record", "resolved_mode"),
     },
     "Operators": {
         "F1": ("x",),

@@ -68,9 +68,9 @@ class Study:
         """Where the truth runs are."""
         return self.folder / "truth"
 
-    def record(self) -> TruthRecord:
-        """Record of the truth run."""
-        return open_record(member_paths(self.truth_folder, 0)[0])
+    def records(self) -> list[TruthRecord]:
+        """Records of the truth runs, one for each member."""
+        return [open_record(member_paths(self.truth_folder, 0)[0])]
 
     def path(self, name: str) -> Path:
         """File of the study."""

@@ -111,7 +111,7 @@ def stage_table(study: Study, command: str) -> str:
 
 
 def _truth(study):
-    record = study.record()
+    record = study.records()[0]
     length = len(record.times) * record.step
     return (
         f"truth: {len(record.times)} states over {format_quantity(length, 's')} in "

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -97,6 +97,25 @@ class TruthRecord:
             and item.ndim == 1
             and [scale.name for scale in item.dims[0].values()] == ["/time"]
         ]
+
+
+def walk(
+    records: Sequence[TruthRecord],
+) -> Iterator[tuple[int, slice, np.ndarray]]:
+    """Walk through all full states of all members, a stretch at a time.
+
+    Yields
+    ------
+    int
+        The member's place.
+    slice
+        Which of its records.
+    ndarray, shape (n, size)
+        Their states.
+    """
+    for member, record in enumerate(records):
+        for where, states in record.chunks():
+            yield member, where, states
 
 
 def open_record(path: Path) -> TruthRecord:

@@ -39,11 +39,13 @@ def divided(model, states, vectors, nx, *, step=1.0, mean=None):
 
     Returns
     -------
-    Split, ndarray of shape (n_time, ny)
+    Split, ndarray of shape (1, n_time, ny)
+        Of one member.
     """
     mean = states.mean(axis=0) if mean is None else mean
     dual = model.weights @ vectors
     series = (states - mean) @ dual
+    members = series[np.newaxis]
     resolved = basis_of(vectors[:, :nx], series[:, :nx], "slow")
     unresolved = basis_of(vectors[:, nx:], series[:, nx:], "fast")
     total = float(model.inner(states - mean, states - mean).mean())
@@ -52,14 +54,14 @@ def divided(model, states, vectors, nx, *, step=1.0, mean=None):
         resolved=resolved,
         unresolved=unresolved,
         resolved_mean=mean @ dual[:, :nx],
-        x=series[:, :nx],
-        tendency=tendency(model, 0.0, states) @ dual[:, :nx],
+        x=members[..., :nx],
+        tendency=(tendency(model, 0.0, states) @ dual[:, :nx])[np.newaxis],
         step=step,
-        fine_x=series[:, :nx],
+        fine_x=members[..., :nx],
         fine_step=step,
         total_variance=total,
         left_out_variance=total - float(np.mean(series**2, axis=0).sum()),
-    ), series[:, nx:]
+    ), members[..., nx:]
 
 
 def resolved_only(x, *, step=1.0, mean=None, rate=None):
@@ -67,8 +69,8 @@ def resolved_only(x, *, step=1.0, mean=None, rate=None):
 
     Parameters
     ----------
-    x : ndarray, shape (n_time, nx)
-        Departures from the mean.
+    x : ndarray, shape (n_time, nx) or (member, n_time, nx)
+        Departures from the mean; of one member if it has two axes.
     step : float
     mean, rate : ndarray, optional
         Mean of the coordinates and their tendency; zero by default.
@@ -77,16 +79,18 @@ def resolved_only(x, *, step=1.0, mean=None, rate=None):
     -------
     Split
     """
-    size = x.shape[1]
+    size = x.shape[-1]
+    flat = x.reshape(-1, size)
+    x = x if x.ndim == 3 else x[np.newaxis]
     mean = np.zeros(size) if mean is None else mean
-    variance = float(x.var(axis=0).sum())
+    variance = float(flat.var(axis=0).sum())
     return Split(
         mean=mean,
-        resolved=basis_of(np.eye(size), x, "slow"),
-        unresolved=basis_of(np.zeros((size, 0)), x[:, :0], "fast"),
+        resolved=basis_of(np.eye(size), flat, "slow"),
+        unresolved=basis_of(np.zeros((size, 0)), flat[:, :0], "fast"),
         resolved_mean=mean,
         x=x,
-        tendency=np.zeros_like(x) if rate is None else rate,
+        tendency=np.zeros_like(x) if rate is None else rate.reshape(x.shape),
         step=step,
         fine_x=x,
         fine_step=step,

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 from scipy import linalg
 
 from eddyshed.solver.errors import DataError
-from eddyshed.solver.record import TruthRecord
+from eddyshed.solver.record import TruthRecord, walk
 
 from ..contract import Model, metric
 from ..settings import EofSettings
@@ -16,7 +18,10 @@ LARGEST = 8192  # rows of the matrix whose eigenvectors are taken: 512 MB
 
 
 def eof_basis(
-    settings: EofSettings, model: Model, record: TruthRecord, mean: np.ndarray
+    settings: EofSettings,
+    model: Model,
+    records: Sequence[TruthRecord],
+    mean: np.ndarray,
 ) -> tuple[Basis, Basis]:
     """Find the empirical orthogonal functions in the model's inner product.
 
@@ -26,8 +31,8 @@ def eof_basis(
         How many are kept.
     model : Model
         Gives the inner product.
-    record : TruthRecord
-        The truth, read in stretches.
+    records : sequence of TruthRecord
+        The members of the truth, read in stretches.
     mean : ndarray, shape (size,)
         Its mean.
 
@@ -51,7 +56,8 @@ def eof_basis(
     Quart. Appl. Math. 45:561). The covariance is gathered from stretches of
     the record; in the second case all anomalies are held in memory.
     """
-    n_time, size = len(record.times), record.size
+    lengths = [len(record.times) for record in records]
+    n_time, size = sum(lengths), records[0].size
     rank = min(size, n_time - 1)
     if settings.modes >= rank:
         message = (
@@ -77,14 +83,16 @@ def eof_basis(
 
     if size <= n_time:
         covariance = np.zeros((size, size))
-        for _, states in record.chunks():
+        for _, _, states in walk(records):
             anomalies = flat(states)
             covariance += anomalies.T @ anomalies
         variance, vectors = linalg.eigh(covariance / n_time)
     else:
         anomalies = np.empty((n_time, size))
-        for where, states in record.chunks():
-            anomalies[where] = flat(states)
+        start = 0
+        for _, _, states in walk(records):
+            anomalies[start : start + len(states)] = flat(states)
+            start += len(states)
         variance, weights_in_time = linalg.eigh(anomalies @ anomalies.T / n_time)
         vectors = anomalies.T @ weights_in_time
     variance, vectors = variance[::-1][:rank], vectors[:, ::-1][:, :rank]

@@ -59,7 +59,7 @@ def close(data: ClosureData) -> ReducedModel:
         + np.einsum("imn,mn->i", operators.B122, data.covariance_y)
         - noise_mean
     )
-    typical = np.sqrt(np.mean(data.split.tendency**2, axis=0))
+    typical = np.sqrt(np.mean(data.split.tendency**2, axis=(0, 1)))
     shift = float(np.max(np.abs(balanced - derived) / typical))
     notes = list(data.noise.notes)
     if data.mean_calibration:

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..contract import Model
-from ..coupling import coupling
+from ..coupling import coupling, covariance
 from ..noise.fit import NoiseFit
 from ..operators import Operators
 from ..split import Split
@@ -47,10 +47,9 @@ class ClosureData:
     @property
     def covariance_x(self) -> np.ndarray:
         """Covariance of the resolved coordinates, shape (nx, nx)."""
-        x = self.split.x
-        return x.T @ x / len(x)
+        return covariance(self.split.x, self.split.x)
 
     @property
     def coupling(self) -> np.ndarray:
-        """What the unresolved modes do to the resolved ones, shape (n_time, nx)."""
+        """What unresolved modes do to resolved ones, shape (member, time, nx)."""
         return coupling(self.split, self.operators)

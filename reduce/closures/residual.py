@@ -20,6 +20,7 @@ import numpy as np
 
 from eddyshed.solver.errors import DataError
 
+from ..coupling import covariance
 from ..noise.fit import fit_ornstein_uhlenbeck, window_rule
 from ..reduced import ReducedModel
 from ..statistics.correlation import integral_time
@@ -48,18 +49,18 @@ def close(data: ClosureData) -> ReducedModel:
     """
     x, step = data.split.x, data.split.step
     r = data.coupling
-    r = r - r.mean(axis=0)
-    time = float(np.median(integral_time(r[np.newaxis], step).value))
+    r = r - r.mean(axis=(0, 1))
+    time = float(np.median(integral_time(r, step).value))
     lag, condition, damping = _instrumental_fit(
         x, r, max(1, round(LAG_TIMES * time / step))
     )
     noise = r - x @ damping.T
-    noise -= noise.mean(axis=0)
-    spread = noise.var(axis=0)
+    noise -= noise.mean(axis=(0, 1))
+    spread = noise.var(axis=(0, 1))
     fit = fit_ornstein_uhlenbeck(
-        noise[np.newaxis],
+        noise,
         step,
-        window=window_rule(integral_time(noise[np.newaxis], step).value, spread, step),
+        window=window_rule(integral_time(noise, step).value, spread, step),
         structure="full",
     )
     operators = data.operators
@@ -94,11 +95,11 @@ def close(data: ClosureData) -> ReducedModel:
 def _instrumental_fit(x, r, lag):
     """Lag, condition number and L; the lag is halved while ill-conditioned."""
     while True:
-        early = x[: len(x) - lag]
-        lagged = x[lag:].T @ early / len(early)
+        early = x[:, : x.shape[1] - lag]
+        lagged = covariance(x[:, lag:], early)
         condition = float(np.linalg.cond(lagged))
         if condition < CONDITION:
-            cross = r[lag:].T @ early / len(early)
+            cross = covariance(r[:, lag:], early)
             return lag, condition, cross @ np.linalg.inv(lagged)
         if lag == 1:
             message = (

@@ -102,7 +102,7 @@ def unit_correlation(series: np.ndarray, lags: int) -> np.ndarray:
 
     Parameters
     ----------
-    series : ndarray, shape (n_time, 1 or 2)
+    series : ndarray, shape (member, time, 1 or 2)
     lags : int
         Longest lag in samples.
 
@@ -112,7 +112,7 @@ def unit_correlation(series: np.ndarray, lags: int) -> np.ndarray:
         For ``z = y_1 + i y_2`` the real part of ``E[z(t + lag) conj z(t)]``
         is the sum of the two lag covariances.
     """
-    total = autocovariance(series[np.newaxis], lags).sum(axis=1)
+    total = autocovariance(series, lags).sum(axis=1)
     return total / total[0]
 
 

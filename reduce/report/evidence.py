@@ -30,8 +30,8 @@ class Evidence:
         The study.
     ocean : ocean
         The model that made the truth.
-    record : TruthRecord
-        The truth.
+    records : list of TruthRecord
+        The members of the truth.
     split : Split
         The truth divided.
     noise : NoiseFit
@@ -52,7 +52,7 @@ class Evidence:
 
     study: Study
     ocean: Any
-    record: TruthRecord
+    records: list[TruthRecord]
     split: Split
     noise: NoiseFit
     findings: list[dict[str, Any]]
@@ -64,8 +64,13 @@ class Evidence:
 
     @property
     def length(self) -> float:
-        """Length of the truth [s]."""
-        return len(self.record.times) * self.record.step
+        """Length of the truth, all members together [s]."""
+        return self.split.length
+
+    @property
+    def record(self) -> TruthRecord:
+        """First member of the truth, whose flow is shown."""
+        return self.records[0]
 
     @property
     def scored(self) -> list[tuple[int, dict[str, Any]]]:
@@ -109,7 +114,7 @@ def gather(study: Study) -> Evidence:
     return Evidence(
         study=study,
         ocean=build_ocean(study.config),
-        record=study.record(),
+        records=study.records(),
         split=read_split(study),
         noise=read_noise(study),
         findings=read_json(study.path("audit.json"))["findings"],

@@ -46,7 +46,7 @@ def _correlations(note, evidence):
     """Correlation functions of the resolved modes."""
     divided = evidence.split
     labels = divided.resolved.labels
-    error = large_lag_error(divided.fine_x[np.newaxis], divided.fine_step)
+    error = large_lag_error(divided.fine_x, divided.fine_step)
     count = min(PANELS, len(labels))
     shown = []
     for mode in range(count):
@@ -95,13 +95,13 @@ def _distributions(note, evidence):
     ]
     shown = []
     for mode in range(count):
-        reach = REACH * truth[:, mode].std()
+        reach = REACH * truth[:, :, mode].std()
         edges = np.linspace(-reach, reach, BINS + 1)
         shown.append(
             Distribution(
                 label=labels[mode],
                 edges=edges,
-                truth=density(truth[np.newaxis, :, mode], edges),
+                truth=density(truth[:, :, mode], edges),
                 curves={
                     place: density(found[:, :, mode], edges).value
                     for place, found in series.items()

@@ -102,9 +102,9 @@ def _noise_correlations(note, evidence, units):
     fit, whole = evidence.noise, evidence.split
     chosen = np.array([mode for one in units for mode in one])
     part = dataclasses.replace(whole, unresolved=whole.unresolved.take(chosen))
-    series = unresolved_series(part, evidence.ocean, evidence.record)
-    error = large_lag_error(series[np.newaxis], fit.step)
-    lags = min(round(fit.window / fit.step), len(series) - 1)
+    series = unresolved_series(part, evidence.ocean, evidence.records)
+    error = large_lag_error(series, fit.step)
+    lags = min(round(fit.window / fit.step), series.shape[1] - 1)
     fine = 8 * lags + 1
     shown, at = [], 0
     for one in units:
@@ -115,7 +115,7 @@ def _noise_correlations(note, evidence, units):
             Correlation(
                 label=_name(whole.unresolved.labels, one),
                 lags=np.arange(lags + 1) * fit.step,
-                truth=unit_correlation(series[:, columns], lags),
+                truth=unit_correlation(series[..., columns], lags),
                 error=float(error[columns].max()),
                 curves={0: (np.arange(fine) * fit.step / 8, curve)},
                 longest=lags * fit.step,

@@ -169,8 +169,8 @@ def waves(tmp_path_factory):
     assert run_member(config, 0, folder)
     record = open_record(member_paths(folder, 0)[0])
     model = build_ocean(config)
-    split = split_truth(config, model, record)
-    return split, unresolved_series(split, model, record), record.step
+    split = split_truth(config, model, [record])
+    return split, unresolved_series(split, model, [record]), record.step
 
 
 @pytest.mark.parametrize("match", ["integral", "product"])
@@ -180,9 +180,9 @@ def test_stirred_waves_come_back_as_the_noise_that_they_are(waves, match):
     # All that varies: five of the six stirred waves.
     live = basis.variance > 1e-20 * basis.variance[0]
     assert live.sum() == 2 * (STIRRED - 1)
-    basis, y = basis.take(np.flatnonzero(live)), y[:, live]
+    basis, y = basis.take(np.flatnonzero(live)), y[..., live]
     fit = fit_ornstein_uhlenbeck(
-        y[np.newaxis],
+        y,
         step,
         window=8 / DECAY,
         partners=basis.partners,
@@ -220,10 +220,10 @@ def test_the_resolved_wave_is_the_one_that_was_listed(waves):
     # Its tendency is linear: -(g + i w) z, with w = -2 * 5 / 25, about the mean.
     omega = -0.4
     matrix = np.array([[-DECAY, omega], [-omega, -DECAY]])
-    expected = (split.x + split.resolved_mean) @ matrix.T
+    expected = (split.x[0] + split.resolved_mean) @ matrix.T
     # The advection among waves of one K^2 is round-off of its terms.
     np.testing.assert_allclose(
-        split.tendency, expected, atol=1e-12 * np.abs(split.x).max()
+        split.tendency[0], expected, atol=1e-12 * np.abs(split.x).max()
     )
     shares = split.shares
     # One sixth of the variance each, known to sqrt(1 / (g T)) = 3.7 % of itself.

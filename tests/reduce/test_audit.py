@@ -36,7 +36,7 @@ def findings(x, coupling, seed=1, **thresholds):
     found = audit(
         AuditSettings(**thresholds),
         resolved_only(x, step=STEP),
-        coupling,
+        coupling[np.newaxis],
         np.random.default_rng(seed),
     )
     assert [finding.name for finding in found] == list(NAMES)
@@ -179,7 +179,7 @@ def test_what_is_linear_in_the_resolved_state_is_taken_off():
     found = findings(x, coupling)
     for name in NAMES[:3]:
         assert found[name].verdict == "holds"
-    left = detrended(coupling, x)
+    (left,) = detrended(coupling[np.newaxis], x[np.newaxis])
     np.testing.assert_allclose(left.mean(axis=0), 0, atol=1e-12)
     np.testing.assert_allclose(x.T @ left / len(x), 0, atol=1e-12)
     # What is left is the noise, but for a slope that chance gives it: about

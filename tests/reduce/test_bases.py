@@ -95,7 +95,7 @@ def both(found):
 def eofs(record, modes, weights=None):
     model = plain(record.size, weights)
     return eof_basis(
-        EofSettings(modes=modes), model, record, record.states.mean(axis=0)
+        EofSettings(modes=modes), model, [record], record.states.mean(axis=0)
     )
 
 

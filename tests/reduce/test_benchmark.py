@@ -76,7 +76,7 @@ def run(model, truth, **changes):
 
 def test_the_truth_is_in_its_own_coordinates(truth):
     assert truth.series.shape == (1, 8000, 2)
-    np.testing.assert_allclose(truth.series[0] - MEAN, truth.split.fine_x, atol=1e-14)
+    np.testing.assert_allclose(truth.series - MEAN, truth.split.fine_x, atol=1e-14)
     assert truth.step == STEP
     np.testing.assert_allclose(truth.summary.mean.value, MEAN, atol=1e-13)
     # Lags are dense at first and reach three times the slowest integral time.
@@ -137,7 +137,7 @@ def test_members_start_in_states_of_the_truth(truth):
     still = silent(damping=0.0)
     found = run(still, truth, duration=10.0)
     states = {
-        tuple(row) for row in (truth.split.x + truth.split.resolved_mean).tolist()
+        tuple(row) for row in (truth.split.x[0] + truth.split.resolved_mean).tolist()
     }
     starts = {tuple(member[0]) for member in found.series.tolist()}
     assert starts <= states
@@ -165,7 +165,7 @@ def test_a_model_that_blows_up_has_failed(truth):
     )
     assert entry["lost"] == [list(pair) for pair in found.lost]
     # Lost beyond ten times the largest excursion of the truth, and stopped there.
-    largest = np.linalg.norm(truth.split.x, axis=1).max()
+    largest = np.linalg.norm(truth.split.x, axis=2).max()
     size = np.linalg.norm(found.series - MEAN, axis=2)
     assert np.nanmax(size) <= LOST_BOUND * largest
     assert np.isnan(size[:, -1]).all()
@@ -211,7 +211,7 @@ def test_members_at_rest_in_different_places_have_failed(truth):
 
 def test_a_mode_that_never_moves_cannot_be_compared(truth):
     x = truth.split.x.copy()
-    x[:, 1] = 0.0
+    x[..., 1] = 0.0
     with pytest.raises(DataError, match="mode 1 is constant"):
         truth_side(resolved_only(x, step=STEP), SEED)
 

@@ -11,6 +11,7 @@ from toys import Quadratic, orthonormal_vectors, random_model, random_weights
 from eddyshed.reduce.closures import CLOSURES, closure
 from eddyshed.reduce.closures.data import ClosureData
 from eddyshed.reduce.contract import tendency
+from eddyshed.reduce.coupling import covariance
 from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
@@ -30,18 +31,14 @@ def no_noise():
 def data_of(model, states, vectors, nx, *, step=1.0, calibrated=True, **options):
     """All that a closure is made from, and the series of the unresolved modes."""
     split, y = divided(model, states, vectors, nx, step=step, **options)
-    noise = (
-        fit_ornstein_uhlenbeck(y[np.newaxis], step, window=8.0)
-        if y.shape[1]
-        else no_noise()
-    )
+    noise = fit_ornstein_uhlenbeck(y, step, window=8.0) if y.shape[2] else no_noise()
     return ClosureData(
         model=model,
         split=split,
         operators=galerkin(model, vectors[:, :nx], vectors[:, nx:], split.mean),
         noise=noise,
-        covariance_y=y.T @ y / len(y),
-        covariance_xy=split.x.T @ y / len(y),
+        covariance_y=covariance(y, y),
+        covariance_xy=covariance(split.x, y),
         mean_calibration=calibrated,
     ), y
 
@@ -130,8 +127,7 @@ def test_coloured_closure_conserves_energy_in_its_quadratic_terms():
 
 def mean_drift(model, data):
     """Mean of the drift along the truth, y y by the covariance of the noise."""
-    split = data.split
-    cx, cxy = split.x.T @ split.x / len(split.x), data.covariance_xy
+    cx, cxy = data.covariance_x, data.covariance_xy
     dx = (
         model.x_forcing
         + np.einsum("ijk,jk->i", model.x_from_xx, cx)
@@ -161,11 +157,11 @@ def test_uncalibrated_constant_is_that_of_the_equation():
     data, _ = random_case(calibrated=False)
     model = closure("coloured")(data)
     dx, dy = mean_drift(model, data)
-    np.testing.assert_allclose(dx, data.split.tendency.mean(axis=0), atol=1e-11)
+    np.testing.assert_allclose(dx, data.split.tendency.mean(axis=(0, 1)), atol=1e-11)
     np.testing.assert_allclose(dy, 0, atol=1e-11)
     calibrated = closure("coloured")(replace(data, mean_calibration=True))
     shift = calibrated.x_forcing - model.x_forcing
-    typical = np.sqrt(np.mean(data.split.tendency**2, axis=0))
+    typical = np.sqrt(np.mean(data.split.tendency**2, axis=(0, 1)))
     (share,) = calibrated.facts.values()
     assert share == pytest.approx(np.max(np.abs(shift) / typical), rel=1e-12)
     assert share > 0.01
@@ -362,7 +358,7 @@ def test_regression_at_the_same_instant_finds_no_damping(residual_truths):
     # minus the rate at which it loses volume, then vanishes too.
     net, volume = [], []
     for data in residual_truths:
-        x, r = data.split.x, data.coupling
+        x, r = data.split.x[0], data.coupling[0]
         naive = np.linalg.lstsq(x, r, rcond=None)[0].T
         half = (naive + KNOWN) @ data.covariance_x
         net.append(half + half.T)

@@ -6,7 +6,7 @@ from splits import divided
 from toys import orthonormal_vectors, random_model, random_weights
 
 from eddyshed.reduce.contract import tendency
-from eddyshed.reduce.coupling import SAMPLE, coupling, coupling_sizes
+from eddyshed.reduce.coupling import SAMPLE, coupling, coupling_sizes, covariance
 from eddyshed.reduce.operators import galerkin
 
 SIZE, NX = 9, 3
@@ -30,9 +30,9 @@ def test_coupling_is_all_terms_with_unresolved_modes(conserving, dense):
     _, _, split, y, op = case(conserving=conserving, dense=dense, ny=SIZE - NX)
     x = split.x
     expected = (
-        np.einsum("im,tm->ti", op.A12, y)
-        + 2 * np.einsum("ijm,tj,tm->ti", op.B112, x, y)
-        + np.einsum("imn,tm,tn->ti", op.B122, y, y)
+        np.einsum("im,atm->ati", op.A12, y)
+        + 2 * np.einsum("ijm,atj,atm->ati", op.B112, x, y)
+        + np.einsum("imn,atm,atn->ati", op.B122, y, y)
     )
     # Round-off of sums of a thousand products of order ten.
     np.testing.assert_allclose(coupling(split, op), expected, rtol=0, atol=1e-10)
@@ -43,10 +43,10 @@ def test_coupling_is_full_less_truncated_tendency(ny):
     # With modes left out as well: they act on the resolved modes like the others.
     model, states, split, _, op = case(conserving=True, dense=True, ny=ny)
     vectors = split.resolved.vectors
-    kept = split.mean + split.x @ vectors.T
+    kept = split.mean + split.x[0] @ vectors.T
     difference = tendency(model, 0.0, states) - tendency(model, 0.0, kept)
     expected = model.inner(vectors.T, difference[:, np.newaxis])
-    np.testing.assert_allclose(coupling(split, op), expected, rtol=0, atol=1e-10)
+    np.testing.assert_allclose(coupling(split, op)[0], expected, rtol=0, atol=1e-10)
 
 
 def independent(covariance, count, seed):
@@ -73,7 +73,9 @@ def test_sizes_are_those_of_gaussian_modes():
     found = np.array(
         [
             coupling_sizes(
-                op, independent(cx, SAMPLE, [1, k]), independent(cy, SAMPLE, [2, k])
+                op,
+                independent(cx, SAMPLE, [1, k])[np.newaxis],
+                independent(cy, SAMPLE, [2, k])[np.newaxis],
             )
             for k in range(30)
         ]
@@ -91,14 +93,14 @@ def test_sizes_are_those_of_gaussian_modes():
 )
 def test_sizes_are_from_a_sample_of_a_long_record(count):
     _, _, _, _, op = case(conserving=True, dense=False, ny=SIZE - NX)
-    x, y = (independent(np.eye(n), count, n) for n in (NX, SIZE - NX))
+    x, y = (independent(np.eye(n), count, n)[np.newaxis] for n in (NX, SIZE - NX))
     every = -(-count // SAMPLE)
     sizes = coupling_sizes(op, x, y)
     used = np.zeros(count, dtype=bool)
     used[::every] = True
     assert used.sum() <= SAMPLE
     assert used.sum() > SAMPLE / 2 or every == 1
-    x[~used] = y[~used] = np.nan
+    x[:, ~used] = y[:, ~used] = np.nan
     assert coupling_sizes(op, x, y) == sizes
     assert np.isfinite(sizes).all()
 
@@ -106,3 +108,15 @@ def test_sizes_are_from_a_sample_of_a_long_record(count):
 def test_no_unresolved_modes_have_no_size():
     _, _, split, y, op = case(conserving=True, dense=False, ny=0)
     assert coupling_sizes(op, split.x, y) == (0.0, 0.0)
+
+
+def test_covariance_is_over_all_members():
+    rng = np.random.default_rng(43)
+    u, v = rng.standard_normal((3, 50, 2)), rng.standard_normal((3, 50, 4))
+    both = np.concatenate([*np.concatenate([u, v], axis=2)])
+    expected = np.cov(both.T, bias=True) + np.outer(
+        both.mean(axis=0), both.mean(axis=0)
+    )
+    # Round-off of sums of 150 products.
+    np.testing.assert_allclose(covariance(u, v), expected[:2, 2:], atol=1e-13)
+    assert covariance(u, v[..., :0]).shape == (2, 0)

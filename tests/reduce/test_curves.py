@@ -35,7 +35,10 @@ class TestCorrelation:
         noise = rng.standard_normal((n, members))
         series = signal.lfilter([1], [1, -a], noise, axis=0)[500:]
         sample = np.array(
-            [unit_correlation(series[:, [k]], 60)[60] for k in range(members)]
+            [
+                unit_correlation(series[np.newaxis, :, k : k + 1], 60)[60]
+                for k in range(members)
+            ]
         )
         expected = np.sqrt((1 + a**2) / (1 - a**2) / len(series))
         # A standard deviation from 400 values is known to 3.5 %: four errors.
@@ -53,7 +56,7 @@ class TestCorrelation:
         """Real part of ``exp(-i w lag)``, less the share of lost products."""
         t = np.arange(5000) * 0.1
         series = np.stack([np.cos(0.7 * t), -np.sin(0.7 * t)], axis=1)
-        found = unit_correlation(series, 100)
+        found = unit_correlation(series[np.newaxis], 100)
         lag = np.arange(101)
         expected = np.cos(0.7 * lag * 0.1) * (1 - lag / 5000)
         # The mean over 56 turns that do not end whole is of order 1 / 56 / pi,

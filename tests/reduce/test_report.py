@@ -239,11 +239,13 @@ modes = 1
     )
     study = Study(document=document, folder=folder, quiet=True)
     bring_up_to_date(study, STAGES, "truth")
-    record = study.record()
+    records = study.records()
+    (record,) = records
     return SimpleNamespace(
         study=study,
         ocean=build_ocean(document.config),
         record=record,
+        records=records,
         split=SimpleNamespace(mean=record.read(0, len(record.times)).mean(axis=0)),
     )
 
@@ -400,7 +402,7 @@ class TestContent:
     def test_serves_a_study_that_resolves_every_mode(self, evidence):
         from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 
-        nothing = np.empty((1, len(evidence.split.x), 0))
+        nothing = np.empty((*evidence.split.x.shape[:2], 0))
         whole = dataclasses.replace(
             evidence,
             noise=fit_ornstein_uhlenbeck(nothing, 172800.0, window=4320000.0),

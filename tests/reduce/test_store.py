@@ -52,12 +52,12 @@ def parts():
         unresolved=dataclasses.replace(
             split.unresolved, partners=np.array([1, 0, -1, -1])
         ),
-        fine_x=split.x.repeat(3, axis=0),
+        fine_x=split.x.repeat(3, axis=1),
         fine_step=0.1,
     )
     operators = galerkin(model, vectors[:, :NX], vectors[:, NX:], split.mean)
     noise = fit_ornstein_uhlenbeck(
-        y[np.newaxis], 0.3, window=6.0, partners=split.unresolved.partners
+        y, 0.3, window=6.0, partners=split.unresolved.partners
     )
     noise = dataclasses.replace(
         noise,
@@ -67,9 +67,7 @@ def parts():
             noise.decay, error=np.array([0.1, 0.1, math.inf, 1e-300])
         ),
     )
-    full = fit_ornstein_uhlenbeck(
-        y[np.newaxis, :, :2], 0.3, window=6.0, structure="full"
-    )
+    full = fit_ornstein_uhlenbeck(y[..., :2], 0.3, window=6.0, structure="full")
     coloured = coloured_model(
         operators, rate=noise.process.rate, covariance=noise.process.covariance
     )
