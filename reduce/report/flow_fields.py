@@ -179,7 +179,7 @@ def _profile(evidence, finer, last, field):
     parts = np.array([profile_of(z) for z in batch_states(evidence.record)])
     found = Profile(
         name="b" if field == "buoyancy" else "u",
-        units=ocean.field_units["buoyancy"] if field == "buoyancy" else ocean.unit,
+        units=ocean.field_units["buoyancy"] if field == "buoyancy" else "m s-1",
         y=finer.space.grid_axes[1],
         mean=of_batches(parts, profile_of(evidence.split.mean)),
         last=profile_of(last),

@@ -23,6 +23,7 @@ from collections.abc import Callable, Iterable
 import numpy as np
 
 from ..errors import DataError
+from ..inner_products import InnerProduct, quasigeostrophic
 from .barotropic_scales import scales_of_flow, scales_of_settings
 from .barotropic_settings import BarotropicSettings, friction
 
@@ -162,6 +163,10 @@ class Barotropic:
     def inner(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
+
+    def inner_product(self, name: str) -> InnerProduct:
+        """Inner product of a name: energy, l2 or enstrophy."""
+        return quasigeostrophic(name, self._stiffness)
 
     @property
     def fastest_frequency(self) -> float:
