@@ -5,9 +5,21 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from eddyshed.solver.config import setting
+from eddyshed.solver.inner_products import INNER_PRODUCTS
 from eddyshed.solver.settings import TruthConfig
 
 from .closures import CLOSURES
+
+
+def inner_product_setting() -> str:
+    """Declare the key `inner_product`, the same for every kind of ``[resolved]``."""
+    return setting(
+        default="energy",
+        choices=INNER_PRODUCTS,
+        doc="product in which modes are orthonormal and variance is measured. energy; "
+        "l2: mean square of the streamfunction; enstrophy: mean square of the "
+        "potential vorticity; layers weighted by depth. A slice has energy alone",
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -28,6 +40,7 @@ class FourierSettings:
     waves: tuple[tuple[int, int], ...] = setting(
         default=(), doc="waves per box in x and y, one pair for each wave (listed)"
     )
+    inner_product: str = inner_product_setting()
 
     def problems(self):
         """Rules that go across keys."""
@@ -48,6 +61,7 @@ class EofSettings:
     """Keep the leading empirical orthogonal functions of the truth."""
 
     modes: int = setting(minimum=1, maximum=1000, doc="how many modes are kept")
+    inner_product: str = inner_product_setting()
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

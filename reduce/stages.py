@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+from typing import Any
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
@@ -27,6 +28,7 @@ from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes, covariance
+from .inner_products import in_product
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
@@ -38,6 +40,17 @@ from .store import plain, read_one, write_all, write_json
 from .study import Interrupted, Stage, Study, fingerprint_of
 
 log = logging.getLogger(__name__)
+
+
+def model_of(config: StudyConfig) -> Any:
+    """Build the ocean of a study, seen in the inner product of its reduction.
+
+    Raises
+    ------
+    DataError
+        If a pattern does not fit the grid, or the product the ocean.
+    """
+    return in_product(build_ocean(config), config.resolved.inner_product)
 
 
 def preflight(config: StudyConfig, command: str) -> None:
@@ -54,8 +67,8 @@ def preflight(config: StudyConfig, command: str) -> None:
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, or a reduction
-        is asked for under a forcing that varies.
+        If a pattern, a band or the basis does not fit the grid, the inner product
+        the ocean, or a reduction is asked for under a forcing that varies.
     """
     varying = [
         name
@@ -69,7 +82,7 @@ def preflight(config: StudyConfig, command: str) -> None:
             "truth"
         )
         raise DataError(message)
-    ocean = build_ocean(config)
+    ocean = model_of(config)
     initial_state(config, ocean, 0)
     random_forcing_of(config, ocean, 0)
     stepper_of(config.time.scheme, ocean, config.time.step)
@@ -108,8 +121,8 @@ def run_truth(study: Study, stamp: str) -> None:
 def run_reduce(study: Study, stamp: str) -> None:
     """Split the truth, project the equation, fit the noise, make the closures."""
     config, records = study.config, study.records()
-    ocean = build_ocean(config)
-    split = split_truth(config, ocean, records)
+    model = model_of(config)
+    split = split_truth(config, model, records)
     shares = ", ".join(f"{100 * share:.3g} %" for share in split.shares)
     log.info(
         "reduce: %d resolved and %d unresolved modes (%s of the variance, the last "
@@ -118,10 +131,10 @@ def run_reduce(study: Study, stamp: str) -> None:
         split.unresolved.n_modes,
         shares,
     )
-    y = unresolved_series(split, ocean, records)
+    y = unresolved_series(split, model, records)
     with progress("operators", 1, quiet=study.quiet) as shown:
         operators = galerkin(
-            ocean,
+            model,
             split.resolved.vectors,
             split.unresolved.vectors,
             split.mean,
@@ -137,7 +150,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         "%.3g and quadratic terms of %.3g %s per second (rms)",
         linear,
         quadratic,
-        ocean.unit,
+        model.unit,
     )
     match = config.noise.match
     if match == "auto":
@@ -151,7 +164,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         labels=split.unresolved.labels,
     )
     data = ClosureData(
-        model=ocean,
+        model=model,
         split=split,
         operators=operators,
         noise=noise,
@@ -222,7 +235,7 @@ def run_benchmark(study: Study, stamp: str) -> None:
         stamp,
         {
             "modes": list(split.resolved.labels),
-            "unit": build_ocean(config).unit,
+            "unit": model_of(config).unit,
             "truth": {
                 "length": truth.series.shape[1] * truth.step,
                 "summary": plain(truth.summary),

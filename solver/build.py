@@ -8,6 +8,7 @@ from typing import Any
 from .driven import driven_ocean
 from .forcing import vorticity_source
 from .oceans.barotropic import Barotropic, BarotropicSettings
+from .oceans.barotropic_current import BarotropicCurrent
 from .oceans.boussinesq import Boussinesq
 from .oceans.boussinesq_waves import BoussinesqSettings
 from .oceans.two_layer import TwoLayer, TwoLayerSettings
@@ -36,7 +37,8 @@ def _barotropic(settings, space, patterns):
     if settings.topography:
         bottom = heights(space, settings.topography)
         bottom *= settings.coriolis / settings.depth
-    return Barotropic(settings, space, vorticity_source(space, patterns), bottom)
+    kind = BarotropicCurrent if settings.mean_current_evolves else Barotropic
+    return kind(settings, space, vorticity_source(space, patterns), bottom)
 
 
 def _two_layer(settings, space, patterns):

@@ -124,18 +124,27 @@ def starting_state(
             z = np.zeros(ocean.size)
             rng = stream(seed, member, "initial state")
             z[where] = rng.standard_normal(len(where))
-            return _scaled(z, initial.energy)
+            return _at_rest(ocean) + _scaled(z, initial.energy)
         if isinstance(initial, ModeSettings):
             return _single_mode(initial, ocean)
         if isinstance(initial, FieldSettings):
             z = _from_fields(Path(initial.path), ocean)
-            return z if initial.energy is None else _scaled(z, initial.energy)
+            if initial.energy is None:
+                return z
+            rest = _at_rest(ocean)
+            return rest + _scaled(z - rest, initial.energy)
         if isinstance(initial, EarlierSettings):
             return _end_of_run(Path(initial.path), ocean)
     except DataError as error:
         message = f"[initial] {error}"
         raise DataError(message) from error
-    return np.zeros(ocean.size)
+    return _at_rest(ocean)
+
+
+def _at_rest(ocean):
+    """State without eddies: zero, but for a current that the ocean starts with."""
+    made = getattr(ocean, "at_rest", None)
+    return np.zeros(ocean.size) if made is None else made()
 
 
 def _scaled(z, energy):
@@ -167,7 +176,7 @@ def _single_mode(initial, ocean):
         )
         raise DataError(message)
     amplitude = np.sqrt(2 * initial.energy)
-    z = np.zeros(ocean.size)
+    z = _at_rest(ocean)
     if partner >= 0:
         z[partner] = amplitude * np.sin(initial.phase)
     z[index] = amplitude * np.cos(initial.phase)

@@ -7,14 +7,13 @@ from typing import Any
 
 import numpy as np
 
-from eddyshed.solver.build import build_ocean
 from eddyshed.solver.record import TruthRecord
 
 from ..noise.fit import NoiseFit
 from ..scores import Summary
 from ..simulated import load
 from ..split import Split
-from ..stages import read_noise, read_split, simulation_stamp
+from ..stages import model_of, read_noise, read_split, simulation_stamp
 from ..statistics.estimate import Estimate
 from ..store import read_json
 from ..study import Study
@@ -29,7 +28,7 @@ class Evidence:
     study : Study
         The study.
     ocean : ocean
-        The model that made the truth.
+        The model that made the truth, in the inner product of the reduction.
     records : list of TruthRecord
         The members of the truth.
     split : Split
@@ -113,7 +112,7 @@ def gather(study: Study) -> Evidence:
     lags = np.array(found.pop("lags"))
     return Evidence(
         study=study,
-        ocean=build_ocean(study.config),
+        ocean=model_of(study.config),
         records=study.records(),
         split=read_split(study),
         noise=read_noise(study),

@@ -179,7 +179,7 @@ def _profile(evidence, finer, last, field):
     parts = np.array([profile_of(z) for z in batch_states(evidence.record)])
     found = Profile(
         name="b" if field == "buoyancy" else "u",
-        units=ocean.field_units["buoyancy"] if field == "buoyancy" else ocean.unit,
+        units=ocean.field_units["buoyancy"] if field == "buoyancy" else "m s-1",
         y=finer.space.grid_axes[1],
         mean=of_batches(parts, profile_of(evidence.split.mean)),
         last=profile_of(last),
@@ -193,8 +193,9 @@ def _profile_words(ocean, profile, count):
     spread = "whose error is unknown"
     if np.isfinite(profile.mean.error).all():
         spread = f"with two standard errors to either side from {count} batch means"
-    imposed = getattr(ocean.settings, "mean_current", 0.0)
-    left_out = " The imposed current is left out." if imposed else ""
+    carried = getattr(ocean.settings, "mean_current", 0.0) != 0
+    evolves = getattr(ocean.settings, "mean_current_evolves", False)
+    left_out = " The mean current is left out." if carried or evolves else ""
     return (
         f" (b) {what} averaged along x: time mean (black, {spread}) and that of the "
         f"state in (a) (dashed).{left_out}"

@@ -23,6 +23,7 @@ from collections.abc import Callable, Iterable
 import numpy as np
 
 from ..errors import DataError
+from ..inner_products import InnerProduct, quasigeostrophic
 from .barotropic_scales import scales_of_flow, scales_of_settings
 from .barotropic_settings import BarotropicSettings, friction
 
@@ -147,7 +148,7 @@ class Barotropic:
     def linear(self, z: np.ndarray) -> np.ndarray:
         """A z [m s-2], shape (..., size)."""
         result = self.linear_function(lambda rate: rate)(z)
-        coupling = self._coupling(z)
+        coupling = self.explicit_linear(z)
         return result if coupling is None else result + coupling
 
     def bilinear(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
@@ -162,6 +163,10 @@ class Barotropic:
     def inner(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
+
+    def inner_product(self, name: str) -> InnerProduct:
+        """Inner product of a name: energy, l2 or enstrophy."""
+        return quasigeostrophic(name, self._stiffness)
 
     @property
     def fastest_frequency(self) -> float:
@@ -193,6 +198,25 @@ class Barotropic:
     def exact_flow(self, interval: float) -> Callable[[np.ndarray], np.ndarray]:
         """Return the function ``z -> exp(L interval) z``."""
         return self.space.flow(self.damping, self._frequency, interval)
+
+    def explicit_linear(self, z: np.ndarray) -> np.ndarray | None:
+        """Part of A z that is stepped explicitly, (..., size); None if there is none.
+
+        It does no work: it is antisymmetric in the energy inner product.
+        """
+        if not self._is_coupled:
+            return None
+        psi = self.streamfunction(z)
+        result = np.zeros(psi.shape)
+        if self.topography is not None:
+            rows = [
+                self.space.jacobian(row, self.topography)
+                for row in psi.reshape(-1, self.size)
+            ]
+            result += np.reshape(rows, psi.shape)
+        if self._beta:
+            result += self._beta * self.space.ddx(psi)
+        return result * self._from_vorticity
 
     def explicit(self, t: float, z: np.ndarray) -> np.ndarray:
         """F, B(z, z) and the part of A that is not treated exactly.
@@ -259,7 +283,7 @@ class Barotropic:
             found["form_drag"] = float(self._pushed @ z)
             found["enstrophy_form_drag"] = float(self._pushed @ weighted)
         if self._is_coupled:
-            found["enstrophy_exchange"] = float(self._coupling(z) @ weighted)
+            found["enstrophy_exchange"] = float(self.explicit_linear(z) @ weighted)
         return found
 
     @property
@@ -333,22 +357,6 @@ class Barotropic:
     def _is_coupled(self):
         """Whether a part of A is not treated exactly."""
         return self.topography is not None or self._beta != 0
-
-    def _coupling(self, z):
-        """Part of A z that is not treated exactly, None if there is none."""
-        if not self._is_coupled:
-            return None
-        psi = self.streamfunction(z)
-        result = np.zeros(psi.shape)
-        if self.topography is not None:
-            rows = [
-                self.space.jacobian(row, self.topography)
-                for row in psi.reshape(-1, self.size)
-            ]
-            result += np.reshape(rows, psi.shape)
-        if self._beta:
-            result += self._beta * self.space.ddx(psi)
-        return result * self._from_vorticity
 
     def _fastest_basin_mode(self):
         """Largest frequency of the basin's Rossby modes, as truncated [s-1]."""

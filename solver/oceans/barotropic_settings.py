@@ -50,7 +50,23 @@ class BarotropicSettings:
         unit="m s-1",
         default=0.0,
         doc="uniform current along x that is imposed and carries the rest; not in "
-        "a basin",
+        "a basin. With mean_current_evolves that of the start",
+    )
+    mean_current_evolves: bool = setting(
+        default=False,
+        doc="the mean current is part of the flow: driven, damped, and slowed or "
+        "sped up by the pressure on topography; periodic space and rigid lid only",
+    )
+    mean_current_drag: float = setting(
+        unit="s-1",
+        default=0.0,
+        minimum=0,
+        doc="linear drag on a mean current that evolves",
+    )
+    mean_current_drive: float = setting(
+        unit="m s-2",
+        default=0.0,
+        doc="steady acceleration along x of a mean current that evolves",
     )
     coriolis: float | None = setting(
         unit="s-1",
@@ -68,6 +84,19 @@ class BarotropicSettings:
 
     def problems(self):
         """Rules that go across keys."""
+        if self.mean_current_evolves and math.isfinite(self.deformation_radius):
+            yield (
+                "mean_current_evolves needs a rigid lid: under a free surface a "
+                "change of the current moves water across the box, which does not "
+                "repeat; leave out deformation_radius"
+            )
+        if not self.mean_current_evolves:
+            for name in ("mean_current_drag", "mean_current_drive"):
+                if getattr(self, name) != 0:
+                    yield (
+                        f"{name} has no meaning for a current that is imposed; set "
+                        "mean_current_evolves = true or leave it out"
+                    )
         if self.topography:
             examples = {"coriolis": "1e-4 s-1", "depth": "4 km"}
             for name, value in examples.items():

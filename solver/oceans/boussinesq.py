@@ -25,6 +25,7 @@ from collections.abc import Callable, Iterable
 import numpy as np
 
 from ..block_functions import block_function
+from ..inner_products import InnerProduct, energy_alone
 from .boussinesq_budget import budget_of_state, units_of_budget
 from .boussinesq_scales import scales_of_flow, scales_of_settings
 from .boussinesq_waves import BoussinesqSettings, check_space, linear_blocks
@@ -183,6 +184,11 @@ class Boussinesq:
     def inner(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
+
+    def inner_product(self, name: str) -> InnerProduct:
+        """Inner product of a name: energy, the only one that weighs all fields."""
+        why = "streamfunction or vorticity alone would give the buoyancy no weight"
+        return energy_alone(name, self.size, why)
 
     @property
     def damping(self) -> np.ndarray:

@@ -25,6 +25,7 @@ import numpy as np
 
 from ..block_functions import block_function
 from ..errors import DataError
+from ..inner_products import InnerProduct, quasigeostrophic
 from . import two_layer_measures as measures
 from .two_layer_waves import (
     TwoLayerSettings,
@@ -206,6 +207,10 @@ class TwoLayer:
     def inner(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
         """Energy inner product [m2 s-2], shape (...)."""
         return np.sum(np.multiply(u, w), axis=-1)
+
+    def inner_product(self, name: str) -> InnerProduct:
+        """Inner product of a name: energy, l2 or enstrophy, of both layers."""
+        return quasigeostrophic(name, np.square(self._root).ravel())
 
     def frequencies(self) -> np.ndarray:
         """Complex frequencies of the linear waves [s-1], those that grow first.
