@@ -69,12 +69,16 @@ class BoxAverages:
         SI unit of each.
     long_names : tuple of str
         What each is, for people.
+    sides : ndarray, shape (n, 2, 2)
+        From and to in each of the two directions [m]; beyond the length where a
+        rectangle wraps around.
     """
 
     names: tuple[str, ...]
     rows: np.ndarray
     units: tuple[str, ...]
     long_names: tuple[str, ...]
+    sides: np.ndarray
 
 
 def box_averages(
@@ -101,7 +105,7 @@ def box_averages(
         If a field is not one of the ocean's, or a rectangle is empty or reaches
         beyond the box; all such problems at once.
     """
-    rows, fields, places, problems = [], [], [], []
+    rows, sides, fields, places, problems = [], [], [], [], []
     known = ocean.linear_fields
     for name, box in boxes.items():
         where = f"[{section}.{name}]"
@@ -121,6 +125,7 @@ def box_averages(
         if field is not None:
             means = _means(ocean.space, field.derivative, x, y)
             rows.append((field.weights * means).ravel())
+            sides.append((x, y))
             fields.append(field)
             places.append(_place(ocean, box))
     if problems:
@@ -133,6 +138,7 @@ def box_averages(
             f"mean {field.long_name}{place}"
             for field, place in zip(fields, places, strict=True)
         ),
+        sides=np.array(sides).reshape(len(rows), 2, 2),
     )
 
 
@@ -147,8 +153,8 @@ def _means(space, derivative, x, y):
     return space.averages(x, y)
 
 
-def _directions(ocean):
-    """What the two directions of the space are called."""
+def directions_of(ocean: Any) -> tuple[str, str]:
+    """What the two directions of an ocean's space are called: x and y, or x and z."""
     return getattr(ocean, "directions", ("x", "y"))
 
 
@@ -160,7 +166,7 @@ def _rectangle(ocean, box):
     DataError
         With one line for each problem.
     """
-    space, directions = ocean.space, _directions(ocean)
+    space, directions = ocean.space, directions_of(ocean)
     other = "z" if directions[1] == "y" else "y"
     problems = []
     if getattr(box, other) is not None:
@@ -211,7 +217,7 @@ def _interval(name: str, given: Interval | None, length: float, repeats: bool):
 def _place(ocean, box):
     """Where a rectangle lies, in words that follow a name."""
     sides = []
-    for name in _directions(ocean):
+    for name in directions_of(ocean):
         given = getattr(box, name)
         if given is not None:
             sides.append(f"{name} {_shown(given[0])} to {_shown(given[1])}")

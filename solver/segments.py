@@ -264,4 +264,5 @@ def _add_series(file, stream, folder, parts):
             layout,
             units=variable.units,
             long_name=variable.long_name,
+            **variable.attributes,
         )
