@@ -23,6 +23,7 @@ from .errors import DataError, RunFolderError
 
 SCHEMA = 1
 EPOCH = "2000-01-01 00:00:00"
+PARTIAL = ".partial"
 
 
 @contextmanager
@@ -40,13 +41,14 @@ def replacing(path: Path) -> Iterator[Path]:
         If the folder cannot be made or written, or the disk is full. The old
         file, if there was one, is as it was.
     """
-    temporary = path.with_name(f".{path.name}.{os.getpid()}.partial")
+    temporary = path.with_name(f".{path.name}.{os.getpid()}{PARTIAL}")
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         yield temporary
         with temporary.open("rb") as handle:
             os.fsync(handle.fileno())
         temporary.replace(path)
+        _settle(path.parent)
     except OSError as error:
         message = (
             f"{path}: cannot be written ({error.strerror or error}); what was there "
@@ -57,6 +59,30 @@ def replacing(path: Path) -> Iterator[Path]:
     finally:
         with suppress(OSError):  # the folder itself may be what is wrong
             temporary.unlink(missing_ok=True)
+
+
+def _settle(folder):
+    """Have the folder itself on disk, so that a power cut cannot undo the move."""
+    with suppress(OSError):  # the file is in its place; not all systems can do more
+        handle = os.open(folder, os.O_RDONLY)
+        try:
+            os.fsync(handle)
+        finally:
+            os.close(handle)
+
+
+def remove_partial(path: Path) -> None:
+    """Remove what killed processes left of a file that they were writing.
+
+    Parameters
+    ----------
+    path : Path
+        The file, of which no other process may be writing a new version now. Its
+        name may be a pattern as of `Path.glob`.
+    """
+    for left in path.parent.glob(f".{path.name}.*{PARTIAL}"):
+        with suppress(OSError):  # harmless where it is
+            left.unlink()
 
 
 @contextmanager

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
@@ -39,6 +39,8 @@ class TruthRecord:
         Times of the fine stream [s]; empty if there is none.
     resolved_coordinates : ndarray of int, shape (n_low,)
         Which coordinates the fine stream holds.
+    boxes_times : ndarray, shape (n_boxes_time,)
+        Times of the averages over boxes [s]; empty if there are none.
     """
 
     path: Path
@@ -51,6 +53,7 @@ class TruthRecord:
     config: dict
     resolved_times: np.ndarray
     resolved_coordinates: np.ndarray
+    boxes_times: np.ndarray = field(default_factory=lambda: np.empty(0))
 
     def read(self, start: int, stop: int) -> np.ndarray:
         """Full states of records start to stop, shape (stop - start, size)."""
@@ -81,22 +84,47 @@ class TruthRecord:
     def read_budget(self) -> dict[str, np.ndarray]:
         """All scalars recorded with the states, by name, each (n_time,)."""
         with open_file(self.path, kind="truth") as file:
-            return {name: file[name][:] for name in self._scalars(file)}
+            return {name: file[name][:] for name in _series(file, "time")}
 
     def budget_units(self) -> dict[str, str]:
         """Unit of each of :meth:`read_budget`."""
         with open_file(self.path, kind="truth") as file:
-            return {name: file[name].attrs["units"] for name in self._scalars(file)}
+            return {name: file[name].attrs["units"] for name in _series(file, "time")}
 
-    def _scalars(self, file):
-        """Names of the variables whose one axis is the time of the states."""
-        return [
-            name
-            for name, item in file.items()
-            if name != "time"
-            and item.ndim == 1
-            and [scale.name for scale in item.dims[0].values()] == ["/time"]
-        ]
+    def read_boxes(self) -> dict[str, np.ndarray]:
+        """Averages over boxes, by the name of the box, each (n_boxes_time,)."""
+        with open_file(self.path, kind="truth") as file:
+            return {
+                name.removeprefix("box_"): file[name][:]
+                for name in _series(file, "boxes_time")
+            }
+
+    def box_units(self) -> dict[str, str]:
+        """Unit of each of :meth:`read_boxes`."""
+        with open_file(self.path, kind="truth") as file:
+            return {
+                name.removeprefix("box_"): file[name].attrs["units"]
+                for name in _series(file, "boxes_time")
+            }
+
+
+def _series(file, time):
+    """Names of the variables whose one axis is a given time."""
+    return [
+        name
+        for name, item in file.items()
+        if name != time
+        and item.ndim == 1
+        and [scale.name for scale in item.dims[0].values()] == [f"/{time}"]
+    ]
+
+
+def _parts(file):
+    """Names of the files that hold the series of an index."""
+    # All variables of a stream lie in the same files: one of each tells.
+    streams = {item.dims[0][0].name: item for item in file.values() if item.is_virtual}
+    sources = (item.virtual_sources() for item in streams.values())
+    return sorted({source.file_name for each in sources for source in each})
 
 
 def walk(
@@ -136,12 +164,7 @@ def open_record(path: Path) -> TruthRecord:
         if len(times) < 2:
             message = f"{path}: holds {len(times)} states; at least two are needed"
             raise DataError(message)
-        sources = file["state"].virtual_sources()
-        missing = [
-            source.file_name
-            for source in sources
-            if not (path.parent / source.file_name).is_file()
-        ]
+        missing = [name for name in _parts(file) if not (path.parent / name).is_file()]
         if missing:
             # HDF5 would fill the gap with NaN and say nothing.
             message = (
@@ -162,5 +185,8 @@ def open_record(path: Path) -> TruthRecord:
             resolved_times=file["resolved_time"][:] if fine else np.empty(0),
             resolved_coordinates=(
                 file["resolved_coordinate"][:] if fine else np.empty(0, dtype=int)
+            ),
+            boxes_times=(
+                file["boxes_time"][:] if "boxes_time" in file else np.empty(0)
             ),
         )

@@ -20,7 +20,7 @@ import numpy as np
 
 from .config import differing_keys
 from .errors import RunFolderError
-from .files import add_time, add_variable, new_file, open_file
+from .files import add_time, add_variable, new_file, open_file, remove_partial
 from .settings import OutputSettings
 from .streams import Recorder, Stream, add_axes
 
@@ -98,6 +98,8 @@ class MemberFiles:
         # Times of the segments seen so far: each is opened for them once, so a
         # long run does not slow down.
         self._times: dict[Path, dict[str, np.ndarray]] = {}
+        # The newest segment that this object read or wrote.
+        self._written: Path | None = None
 
     @property
     def last(self) -> Path | None:
@@ -128,9 +130,12 @@ class MemberFiles:
         DataError
             If the newest segment is damaged.
         """
-        if self.last is None:
+        for path in (self.index, self.folder / "segment-*.h5"):
+            remove_partial(path)
+        self._written = self.last
+        if self._written is None:
             return 0
-        with open_file(self.last, kind="truth segment") as file:
+        with open_file(self._written, kind="truth segment") as file:
             self._check_config(json.loads(file.attrs["config_json"]))
             group = file["checkpoint"]
             z[:] = group["state"][:]
@@ -175,8 +180,17 @@ class MemberFiles:
         Raises
         ------
         RunFolderError
-            If it cannot be written. What was there before is untouched.
+            If it cannot be written, or the folder has lost what was written
+            before. What is there is untouched.
         """
+        if self._written is not None and not self._written.is_file():
+            # Made anew, the folder would hold a series with a gap.
+            message = (
+                f"{self._written}: has vanished while the run went on, so nothing more "
+                "is written. Bring the folder back (is the disk still mounted?) and "
+                "run the same command again: it goes on from the last checkpoint there"
+            )
+            raise RunFolderError(message)
         path = self.folder / f"segment-{step:012d}.h5"
         with new_file(
             path,
@@ -200,6 +214,7 @@ class MemberFiles:
             }
             # Text: their integers have 128 bits, more than an HDF5 integer holds.
             group.attrs["streams"] = json.dumps(streams)
+        self._written = path
         recorder.clear()
         self.write_index()
 
@@ -264,4 +279,5 @@ def _add_series(file, stream, folder, parts):
             layout,
             units=variable.units,
             long_name=variable.long_name,
+            **variable.attributes,
         )

@@ -6,6 +6,7 @@ import math
 import re
 from dataclasses import dataclass
 
+from .boxes import BoxSettings
 from .config import setting
 from .exponential import SCHEMES
 from .forcing import Wave, Wind
@@ -101,6 +102,17 @@ class OutputSettings:
         above=0,
         doc="interval of streamfunction and vorticity on the grid; absent: none",
     )
+    boxes: dict[str, BoxSettings] = setting(
+        default=dict,
+        doc="averages over rectangles, as an instrument would measure them, each "
+        "under a name of its own",
+    )
+    boxes_every: float | None = setting(
+        default=None,
+        unit="s",
+        above=0,
+        doc="interval of the averages over rectangles; absent: that of the state",
+    )
     checkpoint_every: float | None = setting(
         default=None,
         unit="s",
@@ -160,6 +172,7 @@ class TruthConfig:
         intervals = {
             "[output] state_every": self.output.state_every,
             "[output] fields_every": self.output.fields_every,
+            "[output] boxes_every": self.output.boxes_every,
             "[output] checkpoint_every": self.output.checkpoint_every,
         }
         if self.output.resolved is not None:
@@ -170,6 +183,17 @@ class TruthConfig:
                 yield (
                     f"{where} = {interval:.6g} s must be a whole number of steps of "
                     f"{step:.6g} s; try {nearest:.6g} s"
+                )
+        if self.output.boxes_every is not None and not self.output.boxes:
+            yield (
+                "[output] boxes_every is given, but there is no [output.boxes.NAME] "
+                "to average over; add one or leave it out"
+            )
+        for name in self.output.boxes:
+            if not re.fullmatch(r"[A-Za-z0-9_]{1,64}", name):
+                yield (
+                    f"[output.boxes] {name!r} must be usable as the name of a "
+                    "variable: letters, digits and underscore, at most 64"
                 )
         is_slice = isinstance(self.ocean, BoussinesqSettings)
         for name, pattern in self.forcing.items():

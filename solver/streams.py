@@ -3,15 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import h5py
 import numpy as np
 
+from .boxes import box_averages, directions_of
 from .files import add_scale, add_time, add_variable
 from .random_forcing import RandomForcing
 from .settings import OutputSettings
+
+DISTANCES = {"x": "distance eastward", "y": "distance northward", "z": "height"}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -28,6 +31,8 @@ class Variable:
         CF attributes.
     dtype : str
         Type in the file.
+    attributes : mapping of str to str
+        Further CF attributes.
     """
 
     dimensions: tuple[str, ...]
@@ -35,6 +40,7 @@ class Variable:
     units: str
     long_name: str
     dtype: str = "float64"
+    attributes: Mapping[str, str] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -81,6 +87,11 @@ def streams_of(
     Returns
     -------
     list of Stream
+
+    Raises
+    ------
+    DataError
+        If a box does not fit the ocean.
     """
     fed = {} if random is None else random.fed_units()
     state = Stream(
@@ -124,6 +135,8 @@ def streams_of(
                 sample=lambda t, z: {"resolved": z[chosen]},
             )
         )
+    if output.boxes:
+        streams.append(_box_stream(output, ocean, step))
     if output.fields_every is not None:
         nx, ny = ocean.space.points
         streams.append(
@@ -144,6 +157,34 @@ def streams_of(
             )
         )
     return streams
+
+
+def _box_stream(output, ocean, step):
+    """Averages over boxes, a variable each: their units differ."""
+    averages = box_averages(ocean, output.boxes)
+    names = [f"box_{name}" for name in averages.names]
+    variables = {}
+    for name, units, long_name in zip(
+        names, averages.units, averages.long_names, strict=True
+    ):
+        places = [f"{name}_{letter}" for letter in directions_of(ocean)]
+        variables[name] = Variable(
+            dimensions=(),
+            shape=(),
+            units=units,
+            long_name=long_name,
+            attributes={
+                "coordinates": " ".join(places),
+                "cell_methods": f"boxes_time: point {places[0]}: {places[1]}: mean",
+            },
+        )
+    every = output.boxes_every or output.state_every
+    return Stream(
+        time="boxes_time",
+        every=round(every / step),
+        variables=variables,
+        sample=lambda t, z: dict(zip(names, averages.rows @ z, strict=True)),
+    )
 
 
 def low_coordinates(ocean: Any, up_to: float) -> np.ndarray:
@@ -186,15 +227,32 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
                 long_name=f"waves per box in {letter}",
             )
     if output.fields_every is not None:
-        x, y = ocean.space.grid_axes
-        add_scale(group, "x", x, units="m", long_name="distance eastward", axis="X")
-        # The slice says that its second direction is the vertical.
-        if getattr(ocean, "directions", ("x", "y"))[1] == "z":
-            add_scale(group, "y", y, units="m", long_name="height", axis="Z")
-        else:
+        for name, letter, points in zip(
+            "xy", directions_of(ocean), ocean.space.grid_axes, strict=True
+        ):
             add_scale(
-                group, "y", y, units="m", long_name="distance northward", axis="Y"
+                group,
+                name,
+                points,
+                units="m",
+                long_name=DISTANCES[letter],
+                axis=letter.upper(),
             )
+    if output.boxes:
+        add_scale(group, "side", np.arange(2), long_name="0: from, 1: to")
+        _add_box_sides(group, output, ocean)
+
+
+def _add_box_sides(group, output, ocean):
+    """Add the middle of each box and its sides, as CF asks of an average."""
+    averages = box_averages(ocean, output.boxes)
+    for name, sides in zip(averages.names, averages.sides, strict=True):
+        for letter, interval in zip(directions_of(ocean), sides, strict=True):
+            place = f"box_{name}_{letter}"
+            about = {"units": "m", "long_name": DISTANCES[letter]}
+            middle = interval.mean()
+            add_variable(group, place, (), middle, bounds=f"{place}_sides", **about)
+            add_variable(group, f"{place}_sides", ("side",), interval, **about)
 
 
 class Recorder:
@@ -247,4 +305,5 @@ class Recorder:
                     values,
                     units=variable.units,
                     long_name=variable.long_name,
+                    **variable.attributes,
                 )

@@ -1,11 +1,5 @@
 """Truth runs: what is recorded, and that nothing can break the record."""
 
-import os
-import signal
-import subprocess
-import sys
-import time
-
 import h5py
 import numpy as np
 import pytest
@@ -149,43 +143,6 @@ def test_resumed_run_is_the_uninterrupted_one(whole, tmp_path, stops):
 def test_a_longer_duration_goes_on(whole, tmp_path):
     run_member(config_of("time.duration=17 d"), 0, tmp_path)
     assert run_member(config_of(), 0, tmp_path)
-    assert_same_bits(contents(tmp_path), contents(whole))
-
-
-def test_a_kill_at_any_moment_loses_nothing_acknowledged(whole, tmp_path):
-    script = (
-        "import sys; sys.path.insert(0, sys.argv[1]);"
-        "from test_truth import config_of;"
-        "from eddyshed.solver.truth import run_member;"
-        "from pathlib import Path;"
-        "run_member(config_of('output.checkpoint_every=1 d'), 0, Path(sys.argv[2]))"
-    )
-    rng = np.random.default_rng(0)
-    arguments = [sys.executable, "-c", script, os.path.dirname(__file__), str(tmp_path)]
-    kills = 0
-    for _ in range(8):
-        with subprocess.Popen(arguments) as process:
-            # Wait until it works, then kill it at a random moment of its writing.
-            count = len(list(tmp_path.glob("member-000/segment-*.h5")))
-            deadline = time.monotonic() + 30
-            while process.poll() is None and time.monotonic() < deadline:
-                if len(list(tmp_path.glob("member-000/segment-*.h5"))) > count:
-                    break
-                time.sleep(0.001)
-            time.sleep(rng.uniform(0, 0.03))
-            if process.poll() is None:
-                process.send_signal(signal.SIGKILL)
-                kills += 1
-            process.wait()
-        index, segments = member_paths(tmp_path, 0)
-        for path in segments.glob("segment-*.h5"):
-            with h5py.File(path) as file:  # whole, with its checkpoint
-                assert "state" in file["checkpoint"]
-        if index.exists():
-            open_record(index)
-    assert kills > 0
-    config = config_of("output.checkpoint_every=1 d")
-    assert run_member(config, 0, tmp_path)
     assert_same_bits(contents(tmp_path), contents(whole))
 
 
