@@ -10,6 +10,7 @@ import numpy as np
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.record import TruthRecord
 
+from ..flow.parts import Flow, read_flow
 from ..noise.fit import NoiseFit
 from ..scores import Summary
 from ..simulated import load
@@ -32,6 +33,8 @@ class Evidence:
         The model that made the truth.
     record : TruthRecord
         The truth.
+    flow : Flow
+        What it did.
     split : Split
         The truth divided.
     noise : NoiseFit
@@ -53,6 +56,7 @@ class Evidence:
     study: Study
     ocean: Any
     record: TruthRecord
+    flow: Flow
     split: Split
     noise: NoiseFit
     findings: list[dict[str, Any]]
@@ -110,6 +114,7 @@ def gather(study: Study) -> Evidence:
         study=study,
         ocean=build_ocean(study.config),
         record=study.record(),
+        flow=read_flow(study.path("flow.h5")),
         split=read_split(study),
         noise=read_noise(study),
         findings=read_json(study.path("audit.json"))["findings"],
