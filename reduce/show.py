@@ -92,6 +92,7 @@ def _folder(path):
     for file in sorted((path / "truth").glob("member-*.h5")):
         facts[f"truth/{file.name}"] = describe(file).get("reached", "unknown")
     for name in (
+        "flow.h5",
         "split.h5",
         "closures.h5",
         "audit.json",

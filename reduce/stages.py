@@ -28,6 +28,8 @@ from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes, covariance
+from .flow.measure import measure_flow
+from .flow.parts import write_flow
 from .inner_products import in_product
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
@@ -116,6 +118,16 @@ def run_truth(study: Study, stamp: str) -> None:
             "same command again to go on"
         )
         raise Interrupted(message)
+
+
+def run_flow(study: Study, stamp: str) -> None:
+    """Measure what the truth did."""
+    with progress("flow", 1, quiet=study.quiet) as shown:
+        found = measure_flow(
+            build_ocean(study.config), study.records(), progress=shown.to
+        )
+    title = f"{study.config.name}: fields, spectra, fluxes and budgets of the truth"
+    write_flow(study.path("flow.h5"), stamp, title, found)
 
 
 def run_reduce(study: Study, stamp: str) -> None:
@@ -299,6 +311,13 @@ STAGES = {
             run=run_truth,
         ),
         Stage(
+            name="flow",
+            sections=(),
+            after=("truth",),
+            outputs=("flow.h5",),
+            run=run_flow,
+        ),
+        Stage(
             name="reduce",
             sections=("resolved", "unresolved", "noise", "closures"),
             after=("truth",),
@@ -322,7 +341,7 @@ STAGES = {
         Stage(
             name="report",
             sections=("name", "title"),
-            after=("audit", "benchmark"),
+            after=("flow", "audit", "benchmark"),
             outputs=("report.html",),
             run=run_report,
         ),

@@ -55,6 +55,52 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
     },
     "OrnsteinUhlenbeck": {"rate": ("mode", "mode"), "covariance": ("mode", "mode")},
     "Estimate": {"value": ("mode",), "error": ("mode",)},
+    "Spectrum": {
+        "wavenumber": ("wavenumber",),
+        "energy": ("wavenumber",),
+        "energy_error": ("wavenumber",),
+        "part": ("component", "wavenumber"),
+        "part_error": ("component", "wavenumber"),
+    },
+    "ZonalSpectrum": {
+        "wavenumber": ("wavenumber",),
+        "energy": ("wavenumber",),
+        "energy_error": ("wavenumber",),
+    },
+    "Flux": {
+        "wavenumber": ("wavenumber",),
+        "flux": ("wavenumber",),
+        "flux_error": ("wavenumber",),
+    },
+    "Field": {
+        "x": ("x",),
+        "y": ("y",),
+        "snapshot": ("y", "x"),
+        "mean": ("y", "x"),
+        "mean_error": ("y", "x"),
+    },
+    "Profile": {
+        "y": ("y",),
+        "snapshot": ("y",),
+        "mean": ("y",),
+        "mean_error": ("y",),
+    },
+    "MeanBudget": {
+        "term": ("name",),
+        "term_error": ("name",),
+        "time": ("time",),
+        "level_block": ("member", "time"),
+        "level_least": ("member", "time"),
+        "level_greatest": ("member", "time"),
+        "rate_time": ("rate_time",),
+        "rate_block": ("member", "name", "rate_time"),
+    },
+    "Measure": {
+        "time": ("time",),
+        "block": ("member", "time"),
+        "block_least": ("member", "time"),
+        "block_greatest": ("member", "time"),
+    },
     "NoiseFit": {"rate_error": ("mode", "mode"), "uncorrected": ("mode",)},
     "ReducedModel": {
         "x_forcing": ("x",),
@@ -72,6 +118,41 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
     },
 }
 
+# Units of arrays, where they are known: class name -> field -> unit, or the field
+# that holds the unit. An array whose one axis bears its own name is the coordinate
+# along that axis; it comes before those that need it.
+UNITS: dict[str, dict[str, str]] = {
+    "Spectrum": {
+        "wavenumber": "m-1",
+        **dict.fromkeys(("energy", "energy_error", "part", "part_error"), "m2 s-2"),
+    },
+    "ZonalSpectrum": {
+        "wavenumber": "m-1",
+        "energy": "m2 s-2",
+        "energy_error": "m2 s-2",
+    },
+    "Flux": {"wavenumber": "m-1", "flux": "units", "flux_error": "units"},
+    "Field": {
+        "x": "m",
+        "y": "m",
+        **dict.fromkeys(("snapshot", "mean", "mean_error"), "units"),
+    },
+    "Profile": {
+        "y": "m",
+        **dict.fromkeys(("snapshot", "mean", "mean_error"), "units"),
+    },
+    "MeanBudget": {
+        "time": "s",
+        "rate_time": "s",
+        **dict.fromkeys(("level_block", "level_least", "level_greatest"), "units"),
+        **dict.fromkeys(("term", "term_error", "rate_block"), "rate_units"),
+    },
+    "Measure": {
+        "time": "s",
+        **dict.fromkeys(("block", "block_least", "block_greatest"), "units"),
+    },
+}
+
 
 def pack(group: h5py.Group, value: Any) -> None:
     """Write a dataclass into a group.
@@ -85,13 +166,16 @@ def pack(group: h5py.Group, value: Any) -> None:
         or dataclasses.
     """
     axes = AXES.get(type(value).__name__, {})
+    units = UNITS.get(type(value).__name__, {})
     for field in dataclasses.fields(value):
         item = getattr(value, field.name)
         if dataclasses.is_dataclass(item):
             pack(group.create_group(field.name, track_order=True), item)
         elif isinstance(item, np.ndarray):
             stored = item.astype(np.int8) if item.dtype == bool else item
-            _add(group, field.name, axes[field.name], stored)
+            unit = units.get(field.name, "1")
+            unit = getattr(value, unit, unit)
+            _add(group, field.name, axes[field.name], stored, unit)
         elif isinstance(item, bool | int | float | np.floating | np.integer):
             group.attrs[field.name] = float(item) if _is_float(item) else int(item)
         elif isinstance(item, str):
@@ -142,8 +226,12 @@ def _is_flag(stored):
     return stored.dtype == np.int8
 
 
-def _add(group, name, axes, values):
+def _add(group, name, axes, values, units):
     """Add an array; axes that are not in the group yet are made."""
+    words = name.replace("_", " ")
+    if axes == (name,):
+        add_scale(group, name, values, units=units, long_name=words)
+        return
     used: list[str] = []
     for axis, length in zip(axes, values.shape, strict=True):
         dimension = axis
@@ -153,7 +241,7 @@ def _add(group, name, axes, values):
         used.append(dimension)
         if dimension not in group:
             add_scale(group, dimension, np.arange(length), long_name=f"index: {axis}")
-    add_variable(group, name, used, values, long_name=name.replace("_", " "))
+    add_variable(group, name, used, values, units=units, long_name=words)
 
 
 def write_all(

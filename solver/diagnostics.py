@@ -1,15 +1,13 @@
-"""What a flow does: budgets, spectra, fluxes between scales, transports.
+"""What a flow does: its budgets, and the transport of its gyres.
 
 A budget is closed by what the record says alone: how a quantity changed is set
-against each source and sink, and what is left over is the residual. Spectra
-and fluxes need an ocean whose coordinates are orthonormal in energy.
+against each source and sink, and what is left over is the residual.
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Protocol
 
 import numpy as np
 
@@ -18,16 +16,6 @@ from .errors import DataError
 BATCHES = 20  # common practice: the error of a mean is then known to a sixth
 LEVELS = {"energy": ("m2 s-2", "m2 s-3"), "enstrophy": ("s-2", "s-3")}
 FED = "_fed_by_"  # in names of what random forcing fed since the start of the run
-
-
-class Flow(Protocol):
-    """What the diagnostics need of an ocean."""
-
-    waves: np.ndarray
-    size: int
-
-    def bilinear(self, u: np.ndarray, w: np.ndarray) -> np.ndarray:
-        """B(u, w), shape (..., size)."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -115,6 +103,58 @@ def budget_of(
     forcing feeds a run records the energy alone: its enstrophy is in the
     residual.
     """
+    level, change, gains = rates_of(times, series, units, quantity)
+    steps = np.diff(times)
+    count = max(1, min(BATCHES, len(steps) // 2))
+    edges = np.round(np.linspace(0, len(steps), count + 1)).astype(int)
+    weights = np.add.reduceat(steps, edges[:-1])
+
+    def mean_of(rates):
+        """Mean over each batch, and over the record, of rates in intervals."""
+        values = rates * steps
+        parts = np.add.reduceat(values, edges[:-1])
+        return _mean(parts / weights, values.sum() / weights.sum())
+
+    level_units, rate_units = LEVELS[quantity]
+    return Budget(
+        quantity=quantity,
+        units=level_units,
+        rate_units=rate_units,
+        level=mean_of(level),
+        change=mean_of(change),
+        terms={name: mean_of(values) for name, values in gains.items()},
+        residual=mean_of(change - sum(gains.values())),
+        batches=count,
+    )
+
+
+def rates_of(
+    times: np.ndarray,
+    series: Mapping[str, np.ndarray],
+    units: Mapping[str, str],
+    quantity: str = "energy",
+) -> tuple[np.ndarray, np.ndarray, dict[str, np.ndarray]]:
+    """A quantity, its change, and what changed it, in each interval of a record.
+
+    Parameters
+    ----------
+    times, series, units, quantity
+        As in `budget_of`.
+
+    Returns
+    -------
+    level : ndarray, shape (n_time - 1,)
+        Mean of the quantity over the interval, by the trapezoidal rule.
+    change : ndarray, shape (n_time - 1,)
+        Its difference over the interval, as a rate.
+    gains : dict of str to ndarray, each (n_time - 1,)
+        Rate of each source (positive) and sink.
+
+    Raises
+    ------
+    DataError
+        As `budget_of`.
+    """
     level_units, rate_units = LEVELS[quantity]
     if quantity not in series or len(times) < 2:
         message = (
@@ -123,40 +163,22 @@ def budget_of(
         )
         raise DataError(message)
     steps = np.diff(times)
-    count = max(1, min(BATCHES, len(steps) // 2))
-    edges = np.round(np.linspace(0, len(steps), count + 1)).astype(int)
-    weights = np.add.reduceat(steps, edges[:-1])
 
-    def mean_of(values):
-        """Mean over each batch, and over the record, of the values in intervals."""
-        parts = np.add.reduceat(values, edges[:-1])
-        return _mean(parts / weights, values.sum() / weights.sum())
-
-    def rate(values):
-        return (values[1:] + values[:-1]) / 2 * steps
+    def middle(values):
+        return (values[1:] + values[:-1]) / 2
 
     gains = {
-        name: rate(np.asarray(values))
+        name: middle(np.asarray(values))
         for name, values in series.items()
         if units[name] == rate_units
     }
-    fed = {
-        name: np.diff(values)
+    gains |= {
+        name.removeprefix(quantity + FED): np.diff(values) / steps
         for name, values in series.items()
         if name.startswith(quantity + FED) and units[name] == level_units
     }
-    gains |= {name.removeprefix(quantity + FED): value for name, value in fed.items()}
-    change = np.diff(series[quantity])
-    return Budget(
-        quantity=quantity,
-        units=level_units,
-        rate_units=rate_units,
-        level=mean_of(rate(np.asarray(series[quantity]))),
-        change=mean_of(change),
-        terms={name: mean_of(values) for name, values in gains.items()},
-        residual=mean_of(change - sum(gains.values())),
-        batches=count,
-    )
+    level = np.asarray(series[quantity])
+    return middle(level), np.diff(level) / steps, gains
 
 
 def _mean(parts, whole):
@@ -164,101 +186,6 @@ def _mean(parts, whole):
     count = len(parts)
     error = parts.std(ddof=1) / np.sqrt(count) if count > 1 else np.inf
     return Mean(value=float(whole), error=float(error))
-
-
-def shells(waves: np.ndarray) -> np.ndarray:
-    """Total wavenumber of each coordinate, rounded to the nearest whole one.
-
-    Parameters
-    ----------
-    waves : ndarray of int, shape (size, 2)
-        Waves per box, or half waves between walls, in x and y.
-
-    Returns
-    -------
-    ndarray of int, shape (size,)
-    """
-    return np.rint(np.hypot(*waves.T)).astype(int)
-
-
-def isotropic_spectrum(ocean: Flow, states: np.ndarray) -> np.ndarray:
-    """Energy by total wavenumber.
-
-    Parameters
-    ----------
-    ocean : Flow
-    states : ndarray, shape (..., size)
-
-    Returns
-    -------
-    ndarray, shape (..., n)
-        Energy [m2 s-2] in each shell of whole total wavenumber 0, 1, ...; it
-        sums to the energy of the state.
-    """
-    return _binned(np.square(states) / 2, shells(ocean.waves))
-
-
-def zonal_spectrum(ocean: Flow, states: np.ndarray) -> np.ndarray:
-    """Energy of the flow that does not vary in x, by wavenumber in y.
-
-    Parameters
-    ----------
-    ocean : Flow
-        Of a space that is periodic in x: between walls everything varies.
-    states : ndarray, shape (..., size)
-
-    Returns
-    -------
-    ndarray, shape (..., n)
-        Energy [m2 s-2] at wavenumber 0, 1, ... in y.
-
-    Raises
-    ------
-    DataError
-        If every coordinate varies in x.
-    """
-    zonal = np.flatnonzero(ocean.waves[:, 0] == 0)
-    if not len(zonal):
-        message = (
-            "zonal spectrum: every mode of this space varies in x; ask for it in a "
-            "space that is periodic in x"
-        )
-        raise DataError(message)
-    energy = np.square(np.asarray(states)[..., zonal]) / 2
-    return _binned(energy, np.abs(ocean.waves[zonal, 1]))
-
-
-def spectral_flux(ocean: Flow, states: np.ndarray) -> np.ndarray:
-    r"""Energy that advection carries across each total wavenumber.
-
-    Parameters
-    ----------
-    ocean : Flow
-        Its advection must conserve energy.
-    states : ndarray, shape (..., size)
-
-    Returns
-    -------
-    ndarray, shape (..., n)
-        Rate [m2 s-3] at which energy leaves all shells up to 0, 1, ... for
-        smaller scales; the last is zero to round-off.
-
-    Notes
-    -----
-    ``flux(K) = -sum over coordinates of shells <= K of z B(z, z)`` (Frisch,
-    Turbulence, 1995, section 2.4).
-    """
-    transfer = np.multiply(states, ocean.bilinear(states, states))
-    return -np.cumsum(_binned(transfer, shells(ocean.waves)), axis=-1)
-
-
-def _binned(values, bins):
-    """Sums of the last axis in bins, shape (..., largest bin + 1)."""
-    order = np.argsort(bins, kind="stable")
-    found, starts = np.unique(bins[order], return_index=True)
-    result = np.zeros((*np.shape(values)[:-1], bins.max() + 1))
-    result[..., found] = np.add.reduceat(values[..., order], starts, axis=-1)
-    return result
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -271,12 +198,13 @@ class Gyres:
         Extremes of the streamfunction [m2 s-1]: transports per unit depth of
         the strongest anticlockwise gyre (negative) and clockwise one (positive).
     least_at, greatest_at : (float, float)
-        Where they are, (x, y) [m].
+        Where they are, (x, y) [m]. As the streamfunction vanishes at the wall,
+        each extreme is also the transport of the gyre's western boundary
+        current, northward positive, and its x the width of that current.
     boundary_transport : float
-        Transport per unit depth between the western wall and the extreme that
-        is larger in size [m2 s-1], northward positive.
+        The extreme that is larger in size [m2 s-1].
     boundary_width : float
-        Distance of that extreme from the western wall [m].
+        Its distance from the western wall [m].
     """
 
     least: float
@@ -300,7 +228,8 @@ def gyres(x: np.ndarray, y: np.ndarray, psi: np.ndarray) -> Gyres:
     Returns
     -------
     Gyres
-        Extremes on the grid, not between its points.
+        Extremes of the parabolas, in x and in y, through the extreme on the
+        grid and the points beside it.
 
     Raises
     ------
@@ -313,13 +242,30 @@ def gyres(x: np.ndarray, y: np.ndarray, psi: np.ndarray) -> Gyres:
             f"{(len(y), len(x))} points (y, x)"
         )
         raise DataError(message)
-    low, high = (np.unravel_index(f(psi), psi.shape) for f in (np.argmin, np.argmax))
-    main = low if -psi[low] > psi[high] else high
+    least, least_at = _extreme(x, y, psi, np.argmin)
+    greatest, greatest_at = _extreme(x, y, psi, np.argmax)
+    northward = greatest >= -least
     return Gyres(
-        least=float(psi[low]),
-        greatest=float(psi[high]),
-        least_at=(float(x[low[1]]), float(y[low[0]])),
-        greatest_at=(float(x[high[1]]), float(y[high[0]])),
-        boundary_transport=float(psi[main]),
-        boundary_width=float(x[main[1]]),
+        least=least,
+        greatest=greatest,
+        least_at=least_at,
+        greatest_at=greatest_at,
+        boundary_transport=greatest if northward else least,
+        boundary_width=greatest_at[0] if northward else least_at[0],
     )
+
+
+def _extreme(x, y, psi, find):
+    """Value and place of an extreme, between the points of an even grid."""
+    row, column = np.unravel_index(find(psi), psi.shape)
+    value, place = float(psi[row, column]), []
+    for axis, line, k in ((x, psi[row], column), (y, psi[:, column], row)):
+        offset = 0.0
+        if 0 < k < len(axis) - 1:
+            slope = (line[k + 1] - line[k - 1]) / 2
+            bend = line[k + 1] - 2 * line[k] + line[k - 1]
+            if bend != 0:
+                offset = -slope / bend  # within half a spacing: k is the extreme
+                value += float(slope * offset / 2)
+        place.append(float(axis[k] + offset * (axis[1] - axis[0])))
+    return value, (place[0], place[1])

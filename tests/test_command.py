@@ -16,6 +16,7 @@ from eddyshed.reduce.cli import main
 TINY = Path(__file__).with_name("tiny.toml")
 MADE = (
     "truth/member-000.h5",
+    "flow.h5",
     "split.h5",
     "closures.h5",
     "audit.json",
@@ -92,7 +93,7 @@ def test_a_second_call_reuses_everything(study):
     result = eddyshed("study", TINY, "--runs", folder.parent)
     assert result.returncode == 0
     assert result.stdout == first.stdout
-    assert result.stderr.count("up to date, reused") == 5  # each stage, once
+    assert result.stderr.count("up to date, reused") == 6  # each stage, once
     assert "running" not in result.stderr
     assert before == {name: (folder / name).stat().st_mtime_ns for name in MADE}
 

@@ -136,6 +136,11 @@ def logarithmic(axis: Axis) -> None:
     axis.set_minor_formatter(NullFormatter())
 
 
+def length_unit(length: float) -> tuple[float, str]:
+    """Unit [m] that lengths up to this one read well in, and its name."""
+    return (1e3, "km") if length >= 5e3 else (1.0, "m")
+
+
 def in_math(unit: str) -> str:
     """A unit such as ``m2 s-2`` with its powers raised."""
     words = []

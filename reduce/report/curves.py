@@ -7,10 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from ..flow.means import batch_edges, of_batches
 from ..noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from ..statistics.correlation import autocovariance, effective_size
 from ..statistics.estimate import Estimate
-from .measures import batch_edges, of_batches
 
 BARTLETT = "Bartlett 1946, J. R. Stat. Soc. Suppl. 8:27"  # of `large_lag_error`
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from eddyshed.solver.record import TruthRecord
 
+from ..flow.parts import Flow, read_flow
 from ..noise.fit import NoiseFit
 from ..scores import Summary
 from ..simulated import load
@@ -31,6 +32,8 @@ class Evidence:
         The model that made the truth, in the inner product of the reduction.
     records : list of TruthRecord
         The members of the truth.
+    flow : Flow
+        What it did.
     split : Split
         The truth divided.
     noise : NoiseFit
@@ -52,6 +55,7 @@ class Evidence:
     study: Study
     ocean: Any
     records: list[TruthRecord]
+    flow: Flow
     split: Split
     noise: NoiseFit
     findings: list[dict[str, Any]]
@@ -65,11 +69,6 @@ class Evidence:
     def length(self) -> float:
         """Length of the truth, all members together [s]."""
         return self.split.length
-
-    @property
-    def record(self) -> TruthRecord:
-        """First member of the truth, whose flow is shown."""
-        return self.records[0]
 
     @property
     def scored(self) -> list[tuple[int, dict[str, Any]]]:
@@ -114,6 +113,7 @@ def gather(study: Study) -> Evidence:
         study=study,
         ocean=model_of(study.config),
         records=study.records(),
+        flow=read_flow(study.path("flow.h5")),
         split=read_split(study),
         noise=read_noise(study),
         findings=read_json(study.path("audit.json"))["findings"],

@@ -2,15 +2,19 @@
 
 from __future__ import annotations
 
-from .figures_flow import energy, flow, spectrum
+from .figures_flow import energy, flow, over_time, spectrum
 from .figures_models import correlations, distributions, noise, noise_correlations
+from .figures_scales import fluxes, spectra
 
 __all__ = [
     "correlations",
     "distributions",
     "energy",
     "flow",
+    "fluxes",
     "noise",
     "noise_correlations",
+    "over_time",
+    "spectra",
     "spectrum",
 ]

@@ -1,6 +1,6 @@
 """Figures of the flow and of its split; needs matplotlib.
 
-Each function returns a data URI for the page; see `eddyshed.reduce.canvas`.
+Each function returns a data URI for the page; see `eddyshed.reduce.report.canvas`.
 """
 
 from __future__ import annotations
@@ -10,6 +10,7 @@ from collections.abc import Sequence
 import numpy as np
 from matplotlib.ticker import MaxNLocator
 
+from ..flow.parts import MeanBudget, Measure, Profile
 from ..statistics.estimate import Estimate
 from .canvas import (
     BAND,
@@ -20,12 +21,13 @@ from .canvas import (
     WIDTH,
     closure_style,
     drawn,
+    length_unit,
     letter,
     logarithmic,
     power_of_ten,
     scaled_unit,
 )
-from .measures import Map, Profile, is_stretched
+from .flow_fields import Map
 
 YEAR, HOUR = 365.25 * DAY, DAY / 24
 WALL = 2.0  # width of the line that stands for a wall, in points
@@ -52,9 +54,9 @@ def flow(
         Name of the second direction.
     profile : Profile or None
     """
-    scale, name = (1e3, "km") if max(lengths) >= 5e3 else (1.0, "m")
+    scale, name = length_unit(max(lengths))
     shape = lengths[1] / lengths[0]
-    stretched = is_stretched(lengths)
+    stretched = maps[0].stretched
 
     def draw(figure):
         count = len(maps) + (profile is not None)
@@ -63,7 +65,7 @@ def flow(
             1, count, sharey=True, width_ratios=ratios, squeeze=False
         )[0]
         for index, shown in enumerate(maps):
-            _draw_map(figure, axes[index], shown, scale, walls, stretched)
+            _draw_map(figure, axes[index], shown, scale, walls)
             axes[index].set(
                 xlabel=f"x [{name}]", title=f"{letter(index)} {shown.title}".rstrip()
             )
@@ -77,7 +79,7 @@ def flow(
     return drawn(height, draw, layout="compressed")
 
 
-def _draw_map(figure, axes, shown, scale, walls, stretched):
+def _draw_map(figure, axes, shown, scale, walls):
     """Draw a map with its contours and its colour bar."""
     exponent = power_of_ten(shown.field)
     bound = np.max(np.abs(shown.field), initial=0.0) / 10.0**exponent or 1.0
@@ -91,7 +93,7 @@ def _draw_map(figure, axes, shown, scale, walls, stretched):
         cmap=VORTICITY,
         vmin=-bound,
         vmax=bound,
-        aspect="auto" if stretched else "equal",
+        aspect="auto" if shown.stretched else "equal",
     )
     if len(shown.levels):
         # One colour makes negative contours dashed.
@@ -118,75 +120,60 @@ def _draw_map(figure, axes, shown, scale, walls, stretched):
 
 def _draw_profile(axes, profile, scale):
     """Draw a profile: its time mean with a band, and the last one."""
-    y, mean = profile.y / scale, profile.mean
-    exponent = power_of_ten([*mean.value, *profile.last])
+    y, error = profile.y / scale, 2 * profile.mean_error
+    exponent = power_of_ten([*profile.mean, *profile.snapshot])
     factor = 10.0**-exponent
     axes.axvline(0, color=BAND, linewidth=0.6)
-    if np.isfinite(mean.error).all():
+    if np.isfinite(error).all():
         axes.fill_betweenx(
             y,
-            (mean.value - 2 * mean.error) * factor,
-            (mean.value + 2 * mean.error) * factor,
+            (profile.mean - error) * factor,
+            (profile.mean + error) * factor,
             color=BAND,
             linewidth=0,
         )
-    axes.plot(profile.last * factor, y, color=HUES[0], dashes=(3, 1.5), linewidth=0.9)
-    axes.plot(mean.value * factor, y, color=TRUTH)
+    axes.plot(
+        profile.snapshot * factor, y, color=HUES[0], dashes=(3, 1.5), linewidth=0.9
+    )
+    axes.plot(profile.mean * factor, y, color=TRUTH)
     axes.xaxis.set_major_locator(MaxNLocator(4))
     axes.set_xlabel(f"{profile.name} [{scaled_unit(exponent, profile.units)}]")
 
 
-def energy(
-    *,
-    times: np.ndarray,
-    level: tuple[np.ndarray, np.ndarray, np.ndarray],
-    rate_times: np.ndarray,
-    rates: dict[str, np.ndarray],
-) -> str:
-    """Energy and its budget over time.
+def energy(budget: MeanBudget, rates: dict[str, np.ndarray]) -> str:
+    """Energy and its budget over time, of the first member.
 
     Parameters
     ----------
-    times : ndarray, shape (block,)
-        Middle of each block of the record [s].
-    level : tuple of ndarray, each (block,)
-        Mean, least and greatest energy [m2 s-2].
-    rate_times : ndarray, shape (block,)
-        Middle of each block of the rates [s].
-    rates : dict of ndarray, each (block,)
-        Means of each source (positive) and sink [m2 s-3], by name.
+    budget : MeanBudget
+    rates : dict of ndarray, each (rate_time,)
+        The sources (positive) and sinks to be drawn [m2 s-3], by name.
     """
-    scale, name = next(
-        (size, symbol)
-        for size, symbol in ((YEAR, "yr"), (DAY, "d"), (HOUR, "h"))
-        if times[-1] > 3 * size or symbol == "h"
-    )
-    t = times / scale
-    mean, low, high = level
-    first = power_of_ten(high)
+    scale, name = _time_unit(budget.time)
+    t = budget.time / scale
+    first = power_of_ten(budget.level_greatest[0])
     second = power_of_ten(np.concatenate([np.zeros(1), *rates.values()]))
 
     def draw(figure):
         top, bottom = figure.subplots(2, 1, sharex=True)
-        top.fill_between(
-            t, low / 10.0**first, high / 10.0**first, color=BAND, linewidth=0
+        _draw_ranges(
+            top, t, budget.level_block, budget.level_least, budget.level_greatest, first
         )
-        top.plot(t, mean / 10.0**first, color=TRUTH, linewidth=0.8)
-        top.set_ylabel(f"energy\n[{scaled_unit(first, 'm2 s-2')}]")
+        top.set_ylabel(f"energy\n[{scaled_unit(first, budget.units)}]")
         top.set_title("(a)")
         top.set_ylim(bottom=0)
         bottom.axhline(0, color=BAND, linewidth=0.6)
         for index, (label, rate) in enumerate(rates.items()):
             style = closure_style(index)
             bottom.plot(
-                rate_times / scale,
+                budget.rate_time / scale,
                 rate / 10.0**second,
                 color=style["color"],
                 linewidth=0.9,
                 label=label,
                 **({"dashes": style["dashes"]} if index else {}),
             )
-        bottom.set_ylabel(f"power\n[{scaled_unit(second, 'm2 s-3')}]")
+        bottom.set_ylabel(f"power\n[{scaled_unit(second, budget.rate_units)}]")
         bottom.set_xlabel(f"time since the start of the record [{name}]")
         bottom.set_title("(b)")
         if rates:
@@ -194,6 +181,60 @@ def energy(
         figure.align_ylabels()
 
     return drawn(3.6 + 0.25 * -(-len(rates) // 3), draw)
+
+
+def over_time(measures: dict[str, Measure]) -> str:
+    """Measures over time, each in a panel, of the first member.
+
+    Parameters
+    ----------
+    measures : dict of Measure
+        By the words that stand at their axes.
+    """
+    times = next(iter(measures.values())).time
+    scale, name = _time_unit(times)
+
+    def draw(figure):
+        panels = figure.subplots(len(measures), 1, sharex=True, squeeze=False)[:, 0]
+        for index, (axes, (label, shown)) in enumerate(
+            zip(panels, measures.items(), strict=True)
+        ):
+            exponent = power_of_ten([shown.least, shown.greatest])
+            _draw_ranges(
+                axes,
+                shown.time / scale,
+                shown.block,
+                shown.block_least,
+                shown.block_greatest,
+                exponent,
+            )
+            axes.axhline(
+                shown.mean / 10.0**exponent, color=HUES[1], dashes=(4, 2), linewidth=0.9
+            )
+            unit = scaled_unit(exponent, shown.units)
+            axes.set_ylabel(label if shown.units == "1" else f"{label}\n[{unit}]")
+            if len(measures) > 1:
+                axes.set_title(letter(index))
+        panels[-1].set_xlabel(f"time since the start of the record [{name}]")
+        figure.align_ylabels()
+
+    return drawn(0.7 + 1.5 * len(measures), draw)
+
+
+def _time_unit(times):
+    """Unit that a time axis reads well in [s], and its name."""
+    return next(
+        (size, symbol)
+        for size, symbol in ((YEAR, "yr"), (DAY, "d"), (HOUR, "h"))
+        if times[-1] > 3 * size or symbol == "h"
+    )
+
+
+def _draw_ranges(axes, t, mean, low, high, exponent):
+    """Draw block means of the first member within their least and greatest values."""
+    factor = 10.0**-exponent
+    axes.fill_between(t, low[0] * factor, high[0] * factor, color=BAND, linewidth=0)
+    axes.plot(t, mean[0] * factor, color=TRUTH, linewidth=0.8)
 
 
 def spectrum(*, resolved: Estimate, unresolved: Estimate) -> str:

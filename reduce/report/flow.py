@@ -5,16 +5,17 @@ from __future__ import annotations
 import numpy as np
 
 from eddyshed.solver.config import as_table
-from eddyshed.solver.diagnostics import Budget, budget_of
 from eddyshed.solver.quantities import format_quantity
 
 from ..statistics.estimate import Estimate
 from .evidence import Evidence
 from .flow_fields import last_state
+from .flow_scales import scales
 from .markup import (
     Note,
     listed,
     number,
+    numbers,
     paragraphs,
     section,
     span,
@@ -22,10 +23,14 @@ from .markup import (
     unbroken,
     unit,
 )
-from .measures import block_ranges, energy_rates
 
 DAY = 86400.0
-BLOCKS = 400  # of a series: as many as a column of print can show
+# What is drawn over time of a basin and of convection, by the words at its axis.
+DRAWN = {
+    "clockwise_gyre": "clockwise",
+    "anticlockwise_gyre": "anticlockwise",
+    "nusselt_number": "Nusselt number",
+}
 OCEANS = {
     "barotropic": "one layer of quasi-geostrophic flow on a beta plane",
     "two_layer": "two layers of quasi-geostrophic flow on a beta plane, the eddies of "
@@ -45,17 +50,14 @@ SLICES = {
 
 def flow(note: Note, evidence: Evidence) -> str:
     """What the ocean looks like and what it lives on."""
-    record = evidence.record
-    series, units = record.read_budget(), record.budget_units()
-    budget = budget_of(record.times, series, units)
     return section(
         "The flow",
-        paragraphs(
-            f"The ocean is {text(in_words(evidence))}. {_speed(evidence, series)}"
-        ),
+        paragraphs(f"The ocean is {text(in_words(evidence))}. {_speed(evidence)}"),
         last_state(note, evidence),
-        _energy_figure(note, evidence, series, units),
-        _budget_table(note, evidence, budget),
+        scales(note, evidence),
+        _energy_figure(note, evidence),
+        _budget_table(note, evidence),
+        _measures(note, evidence),
     )
 
 
@@ -76,85 +78,144 @@ def _directions(ocean):
     return getattr(ocean, "directions", ("x", "y"))
 
 
-def _speed(evidence, series):
+def _speed(evidence):
     """Sentence on the speed, from the mean of the kinetic energy."""
-    kinetic, words = series["energy"], "The root-mean-square speed is"
-    if "kinetic_energy" in series:
-        kinetic = series["kinetic_energy"]
-    elif "potential_energy" in series:
-        kinetic = kinetic - series["potential_energy"]
+    flow, words = evidence.flow, "The root-mean-square speed is"
+    kinetic = flow.measure.get("kinetic_energy")
+    if "potential_energy" in flow.measure:
         words = "The root-mean-square speed of the eddies, both layers by mass, is"
-    elif np.isfinite(evidence.ocean.settings.deformation_radius):
+    elif kinetic is None and np.isfinite(evidence.ocean.settings.deformation_radius):
         words = "The root of twice the energy, the tilt of the surface included, is"
-    times = evidence.record.times
-    mean = budget_of(times, {"energy": kinetic}, {"energy": "m2 s-2"}).level
-    speed = float(np.sqrt(2 * max(mean.value, 0.0)))
-    error = mean.error / speed if speed else mean.error
+    if kinetic is None:
+        mean, spread = flow.budget["energy"].level, flow.budget["energy"].level_error
+    else:
+        mean, spread = kinetic.mean, kinetic.mean_error
+    speed = float(np.sqrt(2 * max(mean, 0.0)))
+    error = spread / speed if speed else spread
     return f"{words} {number(speed, error)} {unit('m s-1')} (from the mean over time)."
 
 
-def _energy_figure(note, evidence, series, units):
+def _energy_figure(note, evidence):
     """Energy and its budget over time."""
-    record = evidence.record
-    since = record.times - record.times[0]
-    middle, *_ = block_ranges(since, BLOCKS)
-    level = block_ranges(series["energy"], BLOCKS)
-    rates = energy_rates(record.times, series, units)
-    between, *_ = block_ranges((since[1:] + since[:-1]) / 2, BLOCKS)
-    drawn = {
-        name.replace("_", " "): block_ranges(values, BLOCKS)[0]
-        for name, values in rates.items()
+    budget, sampling = evidence.flow.budget["energy"], evidence.flow.sampling
+    rates = {
+        name.replace("_", " "): budget.rate_block[0, k]
+        for k, name in enumerate(budget.names)
+        if budget.rate_block[0, k].any()
     }
-    block = span(len(since) * record.step / len(middle))
+    block = span(sampling.recorded * sampling.step / len(budget.time))
     return note.figure(
-        lambda figures: figures.energy(
-            times=middle, level=level, rate_times=between, rates=drawn
-        ),
+        lambda figures: figures.energy(budget, rates),
         alt="Two time series: energy above; below, what feeds and drains it: "
-        f"{listed(list(drawn)) or 'nothing'}.",
+        f"{listed(list(rates)) or 'nothing'}.",
         caption="(a) Energy, averaged over the domain, in blocks of about "
         f"{block}: mean (line), least and greatest value (grey). (b) What feeds the "
         "energy (above zero) and what drains it (below), means of such blocks; the "
-        "names are those of the table below.",
+        f"names are those of the table below.{_of_the_first(evidence)}",
+        numbers=numbers(
+            [f"mean energy [{unit(budget.units)}]", "least", "greatest"],
+            [
+                [
+                    number(budget.level, budget.level_error),
+                    number(float(budget.level_least.min()), 0.0),
+                    number(float(budget.level_greatest.max()), 0.0),
+                ]
+            ],
+        ),
     )
 
 
-def _budget_table(note, evidence, budget: Budget):
-    """The mean budget with its errors."""
+def _of_the_first(evidence):
+    """Said where a figure shows one member of several."""
+    return " The first member is shown." if evidence.flow.sampling.members > 1 else ""
+
+
+def _budget_table(note, evidence):
+    """The mean budgets with their errors."""
     stirring = evidence.study.config.stirring
-    names = evidence.ocean.budget_units
-    rates = [f"rates [{unit(budget.rate_units)}]"]
-    for name, mean in budget.terms.items():
-        _, meaning = names.get(name, ("", f"energy fed by {name}"))
-        meaning = meaning.removesuffix(" (negative)")
-        label = text(f"{name.replace('_', ' ')}: {meaning}")
-        rates.append([label, number(mean.value, mean.error)])
-    change, residual = budget.change, budget.residual
-    rates += [
-        ["change, end against start", number(change.value, change.error)],
-        ["residual", number(residual.value, residual.error)],
-    ]
-    level = [
-        f"level [{unit(budget.units)}]",
-        [
-            text(names["energy"][1]),
-            number(budget.level.value, budget.level.error),
-        ],
-    ]
+    groups = []
+    for budget in evidence.flow.budget.values():
+        groups.append(
+            [
+                f"level [{unit(budget.units)}]",
+                [text(budget.meaning), number(budget.level, budget.level_error)],
+            ]
+        )
+        rates = [f"rates [{unit(budget.rate_units)}]"]
+        for k, (name, meaning) in enumerate(
+            zip(budget.names, budget.meanings, strict=True)
+        ):
+            label = f"{name.replace('_', ' ')}: {meaning.removesuffix(' (negative)')}"
+            rates.append([text(label), number(budget.term[k], budget.term_error[k])])
+        rates += [
+            ["change, end against start", number(budget.change, budget.change_error)],
+            ["residual", number(budget.residual, budget.residual_error)],
+        ]
+        groups.append(rates)
     asked = ""
     if stirring is not None:
         asked = (
             " The config asks the stirring for "
-            f"{number(stirring.energy_rate, 0.0)} {unit(budget.rate_units)}."
+            f"{number(stirring.energy_rate, 0.0)} {unit('m2 s-3')}."
         )
     return note.table(
         ["mean over the record", "value"],
-        [level, rates],
-        caption=f"Energy budget. Standard errors from {budget.batches} batch means. "
-        "The residual, change less all sources and sinks, is what the sampled record "
-        "fails to account for: zero but for the interval of the record "
-        f"({span(evidence.record.step)}) and the errors of the time step.{asked}",
+        groups,
+        caption=f"Budgets of {listed(list(evidence.flow.budget))}: sources are "
+        "positive, sinks negative. Standard errors "
+        "from the effective sample size of each series. The residual, change less all "
+        "sources and sinks, is what the sampled record fails to account for: zero but "
+        f"for the interval of the record ({span(evidence.flow.sampling.step)}) and the "
+        f"errors of the time step.{asked}",
     )
+
+
+def _measures(note, evidence):
+    """What else was measured: gyres, Nusselt number, parts of the energy."""
+    flow = evidence.flow
+    measures = {**flow.gyre, **flow.measure}
+    if not measures:
+        return ""
+    shown = {words: measures[name] for name, words in DRAWN.items() if name in measures}
+    rows = [
+        [
+            text(measure.meaning.removesuffix(" (negative)")),
+            unit(measure.units) if measure.units != "1" else "",
+            number(measure.mean, measure.mean_error),
+            number(measure.least, 0.0),
+            number(measure.greatest, 0.0),
+        ]
+        for measure in measures.values()
+    ]
+    sampled = ""
+    if flow.gyre:
+        sampled = (
+            f" Gyres were measured on {flow.sampling.sampled} states, one every "
+            f"{span(flow.sampling.interval)}; transports are per unit depth, times "
+            f"the depth in metres they are in {unit('m3 s-1')}."
+        )
+    table = note.table(
+        ["measure", "unit", "mean", "least", "greatest"],
+        [rows],
+        words=(0, 1),
+        caption="Other measures of the flow over the record. Standard errors from "
+        f"the effective sample size of each series.{sampled}",
+    )
+    if not shown:
+        return table
+    names = listed(list(shown))
+    what = "Transport of the gyres" if flow.gyre else "Nusselt number"
+    first = next(iter(shown.values()))
+    lasts = len(first.time) > 1
+    block = span(float(first.time[1] - first.time[0])) if lasts else "the record"
+    figure = note.figure(
+        lambda figures: figures.over_time(shown),
+        alt=f"{what} over time: {names}, with the mean of the record.",
+        caption=f"{what} over time, in blocks of about {block}: mean (line), least and "
+        "greatest value (grey); dashed: mean over the record, given with its error in "
+        f"the table below.{_of_the_first(evidence)}",
+    )
+    return f"{figure}\n{table}"
 
 
 def split(note: Note, evidence: Evidence) -> str:

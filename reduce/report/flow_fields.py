@@ -2,23 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from eddyshed.solver.quantities import format_quantity
 
+from ..flow.parts import Field, Flow, Profile
 from .evidence import Evidence
 from .markup import Note, number, span, unit
-from .measures import (
-    Finer,
-    Map,
-    Profile,
-    batch_states,
-    eastward_profile,
-    is_stretched,
-    of_batches,
-)
 
-MAP_POINTS = 192  # of a map, from the modes that the space holds
 CONTOURS = 12  # of the streamfunction, about
 STREAMFUNCTION = "streamfunction"
 NAMES = {"vorticity": "relative vorticity"}
@@ -29,6 +22,40 @@ SIGNS = {
 }
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Map:
+    """A field over the box, with contours of the streamfunction.
+
+    Attributes
+    ----------
+    name, units : str
+        Of the field.
+    title : str
+        Which layer; empty if there is one only.
+    field, streamfunction : ndarray, shape (ny, nx)
+        [units] and [m2 s-1], on one grid.
+    x, y : ndarray, shapes (nx,), (ny,)
+        Grid coordinates [m].
+    levels : ndarray, shape (level,)
+        Contours of the streamfunction.
+    interval : float
+        Between contours [m2 s-1]; zero if there are none.
+    stretched : bool
+        Whether it is not drawn to scale: a long box would be a line.
+    """
+
+    name: str
+    units: str
+    title: str
+    field: np.ndarray
+    streamfunction: np.ndarray
+    x: np.ndarray
+    y: np.ndarray
+    levels: np.ndarray
+    interval: float
+    stretched: bool
+
+
 def last_state(note: Note, evidence: Evidence) -> str:
     """Maps of the last state, and beside them a mean of the record.
 
@@ -36,11 +63,9 @@ def last_state(note: Note, evidence: Evidence) -> str:
     of a slice that of the buoyancy, both averaged along x; in a basin it is the
     streamfunction. Of two layers both are shown, and no mean.
     """
-    ocean, record = evidence.ocean, evidence.record
-    last = record.read(len(record.times) - 1, len(record.times))[0]
-    finer = Finer(ocean.space, MAP_POINTS)
-    maps = _maps(ocean, finer, last)
-    when = span(float(record.times[-1] - record.times[0]))
+    ocean, found = evidence.ocean, evidence.flow
+    maps = _maps(evidence.flow, ocean.space.lengths)
+    when = span((found.sampling.recorded - 1) * found.sampling.step)
     intervals = dict.fromkeys(m.interval for m in maps if m.interval)
     every = " and ".join(number(interval, 0.0) for interval in intervals)
     field = "buoyancy" if maps[0].name == "buoyancy" else "vorticity"
@@ -58,25 +83,23 @@ def last_state(note: Note, evidence: Evidence) -> str:
     alt = f"Map of {maps[0].name} with contours of the streamfunction"
     alt += ", of the upper layer left, of the lower right." if len(maps) > 1 else "."
     caption += _box_words(ocean)
-    profile = None
     if len(maps) > 1:
         caption += " The imposed currents are left out."
-    elif not ocean.space.x_is_periodic:
-        mean, words, worded = _mean_map(evidence, finer)
+    elif found.profile is None:
+        mean, words = _mean_map(found, ocean.space.lengths)
         maps.append(mean)
         caption += words
-        alt += worded
+        alt += " Right, the time-mean streamfunction."
     else:
-        profile, count = _profile(evidence, finer, last, field)
-        caption += _profile_words(ocean, profile, count)
-        alt += _profile_alt(ocean, profile)
+        caption += _profile_words(ocean, found.profile, found.sampling.batches)
+        alt += _profile_alt(ocean, found.profile)
     return note.figure(
         lambda figures: figures.flow(
             maps=maps,
             lengths=ocean.space.lengths,
             walls=(not ocean.space.x_is_periodic, not ocean.space.y_is_periodic),
             vertical=_vertical(ocean),
-            profile=profile,
+            profile=found.profile,
         ),
         alt=alt,
         caption=caption,
@@ -93,105 +116,79 @@ def _box_words(ocean):
     words = ""
     if not (ocean.space.x_is_periodic and ocean.space.y_is_periodic):
         words = " Thick lines are walls."
-    if is_stretched(ocean.space.lengths):
+    if _is_stretched(ocean.space.lengths):
         words += f" The {_vertical(ocean)} axis is not to the scale of the x axis."
     return words
 
 
-def _maps(ocean, finer, z):
-    """A map for each streamfunction among the fields of a state."""
-    fields = ocean.fields(z)
+def _is_stretched(lengths):
+    """Whether a map of a box is not drawn to scale."""
+    return not 0.4 <= lengths[1] / lengths[0] <= 2.5
+
+
+def _maps(flow: Flow, lengths):
+    """A map of the last state for each streamfunction among the fields."""
     maps = []
-    for name in fields:
+    for name, psi in flow.field.items():
         if not name.endswith(STREAMFUNCTION):
             continue
         prefix = name.removesuffix(STREAMFUNCTION)
-        shown = "buoyancy" if "buoyancy" in fields else "vorticity"
+        shown = "buoyancy" if "buoyancy" in flow.field else "vorticity"
+        title = f"{prefix.rstrip('_')} layer" if prefix else ""
+        field = flow.field[prefix + shown]
         maps.append(
-            _map(
-                finer,
-                NAMES.get(shown, shown),
-                ocean.field_units[prefix + shown],
-                finer.field(fields[prefix + shown]),
-                finer.field(fields[name]),
-                f"{prefix.rstrip('_')} layer" if prefix else "",
-            )
+            _map(NAMES.get(shown, shown), title, field, "snapshot", psi, lengths)
         )
     return maps
 
 
-def _map(finer, name, units, field, psi, title=""):
-    """A map with round contours."""
-    interval = round_number(float(np.ptp(psi)) / CONTOURS)
+def _map(name, title, field: Field, which, psi: Field, lengths):
+    """A map of the snapshot or the mean of a field, with round contours."""
+    contoured = getattr(psi, which)
+    interval = round_number(float(np.ptp(contoured)) / CONTOURS)
     levels = np.empty(0)
     if interval:
         levels = interval * np.arange(
-            np.ceil(psi.min() / interval), psi.max() / interval
+            np.ceil(contoured.min() / interval), contoured.max() / interval
         )
-    x, y = finer.space.grid_axes
     return Map(
         name=name,
-        units=units,
+        units=field.units,
         title=title,
-        field=field,
-        streamfunction=psi,
-        x=x,
-        y=y,
+        field=getattr(field, which),
+        streamfunction=contoured,
+        x=psi.x,
+        y=psi.y,
         levels=levels,
         interval=interval,
+        stretched=_is_stretched(lengths),
     )
 
 
-def _mean_map(evidence, finer):
+def _mean_map(flow: Flow, lengths):
     """Time mean of the streamfunction, and words on it."""
-    ocean = evidence.ocean
-
-    def psi_of(z):
-        return finer.field(ocean.fields(z)[STREAMFUNCTION])
-
-    parts = np.array([psi_of(z) for z in batch_states(evidence.record)])
-    mean = of_batches(parts, psi_of(evidence.split.mean))
-    found = _map(finer, STREAMFUNCTION, "m2 s-1", mean.value, mean.value)
+    psi = flow.field[STREAMFUNCTION]
+    found = _map(STREAMFUNCTION, "", psi, "mean", psi, lengths)
     words = (
         " (b) Streamfunction, mean over the record, with contours every "
         f"{number(found.interval, 0.0)}&nbsp;{unit('m2 s-1')}; "
     )
-    error = float(mean.error.max())
+    error = float(psi.mean_error.max())
     if np.isfinite(error):
         words += (
-            f"its standard error, from {len(parts)} batch means, is nowhere above "
-            f"{number(error, 0.0)}&nbsp;{unit('m2 s-1')}."
+            f"its standard error, from {flow.sampling.batches} batch means, is "
+            f"nowhere above {number(error, 0.0)}&nbsp;{unit('m2 s-1')}."
         )
     else:
         words += "the record is too short to tell its error."
-    return found, words, " Right, the time-mean streamfunction."
+    return found, words
 
 
-def _profile(evidence, finer, last, field):
-    """Profile of the velocity along x or of the buoyancy, and the number of batches."""
-    ocean = evidence.ocean
-
-    def profile_of(z):
-        if field == "buoyancy":
-            return finer.field(ocean.fields(z)["buoyancy"]).mean(axis=1)
-        return eastward_profile(finer.space, finer.modes(ocean.streamfunction(z)))
-
-    parts = np.array([profile_of(z) for z in batch_states(evidence.record)])
-    found = Profile(
-        name="b" if field == "buoyancy" else "u",
-        units=ocean.field_units["buoyancy"] if field == "buoyancy" else "m s-1",
-        y=finer.space.grid_axes[1],
-        mean=of_batches(parts, profile_of(evidence.split.mean)),
-        last=profile_of(last),
-    )
-    return found, len(parts)
-
-
-def _profile_words(ocean, profile, count):
+def _profile_words(ocean, profile: Profile, count):
     """Caption of a profile."""
     what = "Eastward velocity" if profile.name == "u" else "Buoyancy, as in (a),"
     spread = "whose error is unknown"
-    if np.isfinite(profile.mean.error).all():
+    if np.isfinite(profile.mean_error).all():
         spread = f"with two standard errors to either side from {count} batch means"
     carried = getattr(ocean.settings, "mean_current", 0.0) != 0
     evolves = getattr(ocean.settings, "mean_current_evolves", False)
@@ -204,8 +201,8 @@ def _profile_words(ocean, profile, count):
 
 def _profile_alt(ocean, profile):
     """Text for a profile: where it is largest."""
-    place = int(np.abs(profile.mean.value).argmax())
-    value, error = profile.mean.value[place], profile.mean.error[place]
+    place = int(np.abs(profile.mean).argmax())
+    value, error = profile.mean[place], profile.mean_error[place]
     known = f"± {error:.1g}" if np.isfinite(error) else "(error unknown)"
     height = float(f"{profile.y[place]:.3g}")
     what = "the strongest time-mean jet" if profile.name == "u" else "the largest mean"

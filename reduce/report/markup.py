@@ -205,7 +205,12 @@ class Note:
     figures: int = 0
 
     def figure(
-        self, draw: Callable[[ModuleType], str], *, alt: str, caption: str
+        self,
+        draw: Callable[[ModuleType], str],
+        *,
+        alt: str,
+        caption: str,
+        numbers: str = "",
     ) -> str:
         """Draw a figure, or say how it would be drawn.
 
@@ -217,6 +222,8 @@ class Note:
             What is to be seen, as text.
         caption : str
             HTML.
+        numbers : str
+            HTML of one line with what is to be seen, shown if nothing is drawn.
 
         Returns
         -------
@@ -224,7 +231,7 @@ class Note:
             HTML.
         """
         self.figures += 1
-        picture = NO_PICTURE
+        picture = NO_PICTURE + numbers
         if self.drawing is not None:
             picture = f'<img alt="{text(alt)}" src="{draw(self.drawing)}">'
         return (
@@ -292,6 +299,30 @@ class Note:
             f'role="region" aria-label="Table {self.tables}" tabindex="0">\n<table>\n'
             f"<thead><tr>{head}</tr></thead>\n{bodies}\n</table>\n</div>\n</figure>"
         )
+
+
+def numbers(heading: Sequence[str], rows: Sequence[Sequence[str]]) -> str:
+    """A table of numbers in the place of a picture, as HTML of one line.
+
+    Parameters
+    ----------
+    heading : sequence of str
+        HTML of the column heads.
+    rows : sequence of sequence of str
+        HTML of the cells; the first of each row is its head.
+    """
+    head = "".join(f'<th scope="col" class="figures">{cell}</th>' for cell in heading)
+    body = "".join(
+        f'<tr><th scope="row" class="figures">{first}</th>'
+        + "".join(f'<td class="figures">{cell}</td>' for cell in rest)
+        + "</tr>"
+        for first, *rest in rows
+    )
+    return (
+        '<div class="scroll" role="region" aria-label="what the picture would show" '
+        f'tabindex="0"><table><thead><tr>{head}</tr></thead><tbody>{body}</tbody>'
+        "</table></div>"
+    )
 
 
 def page(*, title: str, stamp: str, generator: str, body: str) -> str:

@@ -50,7 +50,7 @@ def write_report(study: Study, stamp: str) -> None:
     Parameters
     ----------
     study : Study
-        A study whose audit and benchmark are there.
+        A study whose flow, audit and benchmark are there.
     stamp : str
         Fingerprint that the report carries. A report without pictures, because
         matplotlib is not installed, carries another.
@@ -133,7 +133,7 @@ def opening(evidence: Evidence) -> str:
         f"{span(evidence.length)} after a spin-up of {span(config.time.spin_up)}: "
         f"{known} correlation times of its slowest resolved mode, "
         f"{text(resolved.labels[slowest])}. Of its "
-        f"{evidence.record.size} coordinates {resolved.n_modes} were kept. Each way to "
+        f"{evidence.ocean.size} coordinates {resolved.n_modes} were kept. Each way to "
         "stand in for the rest, a closure, makes a reduced model; "
         f"{len(evidence.closures)} of them were scored against that run, here called "
         "the truth."
@@ -256,6 +256,7 @@ def reproduce(note: Note, evidence: Evidence) -> str:
     config, document = study.config, study.document
     files = (
         ("truth/member-000.h5", "truth", "the truth, every recorded state"),
+        ("flow.h5", "flow", "what the truth did: all that is drawn of its flow"),
         ("split.h5", "reduce", "resolved and unresolved modes, resolved series"),
         ("closures.h5", "reduce", "projected equation, noise, reduced models"),
         ("audit.json", "audit", "assumptions, mode by mode"),

@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from eddyshed.reduce.operators import galerkin
+from eddyshed.solver.diagnostics import gyres
 from eddyshed.solver.forcing import Wave, Wind, vorticity_source
 from eddyshed.solver.integrate import integrate
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
@@ -14,7 +15,7 @@ from eddyshed.solver.stepping import IntegratingFactorRK4
 SQUARE = (np.pi, np.pi)
 PLACES = (0.05, 0.1, 0.25, 0.5, 0.75)
 # Half waves in x and the number of points whose cutoff, (2 n - 1) // 3, they are.
-POINTS = {2: 4, 4: 7, 8: 13, 16: 25, 32: 49, 64: 97, 128: 193}
+POINTS = {2: 4, 4: 7, 8: 13, 16: 25, 32: 49, 64: 97, 128: 193, 256: 385}
 
 
 def basin(half_waves, lengths, ny=8):
@@ -178,6 +179,43 @@ def test_stommel_gyre_profile(eps):
     for x in PLACES:
         # Third order in half waves: about 6e-6 at 128, and more in the layer.
         assert at(space, psi, x, 0.5) == pytest.approx(stommel(eps, x), abs=1e-4)
+
+
+@pytest.mark.parametrize(
+    ("eps", "place", "transport"),
+    [(0.1, 0.2434923505, 0.459899764972), (0.05, 0.1559898890, 0.645402361358)],
+)
+def test_transport_of_stommels_gyre(eps, place, transport):
+    # The maximum of Stommel's formula, here `stommel`, found to ten digits: it is the
+    # transport of the gyre and of its boundary current, and lies at the width of that.
+    space = basin(128, (1.0, 1.0), ny=24)
+    psi = steady(BarotropicSettings(beta=1.0, drag=eps), space)
+    found = gyres(*space.grid_axes, space.to_grid(psi))
+    # The parabola through points pi / 24 of a sine apart misses its top by
+    # (pi / 24)^3 / 16 of it, 1.4e-4, at most; the truncation is good to 1e-5.
+    assert found.greatest == pytest.approx(transport, rel=2e-4)
+    assert found.boundary_transport == found.greatest
+    # A tenth of a spacing of the grid: the ripple of the truncation, two spacings
+    # long, moves the top.
+    assert found.greatest_at == pytest.approx((place, 0.5), abs=5e-4)
+    assert found.boundary_width == found.greatest_at[0]
+    # One gyre only: what turns the other way is the ripple of the truncation.
+    assert abs(found.least) < 1e-3 * transport
+
+
+def test_transport_of_the_gulf_stream_of_1948():
+    # Stommel (1948) with his own numbers, from memory: a basin of 1e9 by 2 pi 1e8
+    # cm, 2e4 cm deep, under 1 dyn cm-2, R = 0.02 cm s-1, df/dy = 1e-13 cm-1 s-1, so
+    # that lap psi + 1e-7 psi_x = -2.5e-7 sin(pi y / b): by his formula psi is greatest,
+    # 2.0954323267e9 cm2 s-1, at 0.047115 of the width from the western shore.
+    space = basin(256, (1e9, 2 * np.pi * 1e8), ny=16)
+    psi = 2.5e-13 * steady(BarotropicSettings(beta=1e-13, drag=1e-6), space)
+    found = gyres(*space.grid_axes, space.to_grid(psi))
+    # The layer is a hundredth of the basin wide: two and a half half waves, whose
+    # coefficients fall with the third power; and the parabola in y, as above. The
+    # ripple is stronger here: the place is good to a spacing of the grid.
+    assert found.greatest == pytest.approx(2.0954323267e9, rel=2e-3)
+    assert found.boundary_width == pytest.approx(0.047115e9, abs=1e9 / 385)
 
 
 def test_sverdrup_balance_of_the_interior():

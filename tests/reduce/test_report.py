@@ -12,6 +12,7 @@ from xml.etree import ElementTree
 import numpy as np
 import pytest
 
+from eddyshed.reduce.flow.parts import read_flow
 from eddyshed.reduce.report.evidence import gather
 from eddyshed.reduce.report.flow import flow
 from eddyshed.reduce.report.markup import Note, number, page, span, text, unit
@@ -71,7 +72,7 @@ duration = "300 d"
 
 # HTML Living Standard, "Void elements": those without an end tag.
 VOID = {"area", "base", "br", "col", "embed", "hr", "img", "input", "link", "meta"}
-FIGURES = 7
+FIGURES = 9
 
 
 class Walk(HTMLParser):
@@ -107,7 +108,7 @@ def study(tmp_path_factory):
     found = Study(
         document=document, folder=tmp_path_factory.mktemp("runs") / "tiny", quiet=True
     )
-    for name in ("audit", "benchmark"):
+    for name in ("flow", "audit", "benchmark"):
         bring_up_to_date(found, STAGES, name)
     return found
 
@@ -238,15 +239,11 @@ modes = 1
         "flow.toml",
     )
     study = Study(document=document, folder=folder, quiet=True)
-    bring_up_to_date(study, STAGES, "truth")
-    records = study.records()
-    (record,) = records
+    bring_up_to_date(study, STAGES, "flow")
     return SimpleNamespace(
         study=study,
         ocean=build_ocean(document.config),
-        record=record,
-        records=records,
-        split=SimpleNamespace(mean=record.read(0, len(record.times)).mean(axis=0)),
+        flow=read_flow(study.path("flow.h5")),
     )
 
 
@@ -307,20 +304,33 @@ class TestFlow:
         walk = Walk(html)
         pictures = walk.tags("img")
         assert walk.open == []
-        assert len(pictures) == 2
+        # Maps, spectra, fluxes and energy; in a basin the gyres, in a slice under
+        # stratification the Nusselt number.
+        assert len(pictures) == (4 if kind is LAYERS or space != "basin" else 5) + (
+            kind is FLUID
+        )
+        for picture in pictures:
+            ElementTree.fromstring(base64.b64decode(picture["src"].partition(",")[2]))
         found = re.sub(r"\s+", " ", re.sub(r"<[^>]*>", "", html))
         for part in shown:
             assert part in found
         assert ("against z" in pictures[0]["alt"]) == (kind is FLUID)
         # Every source and sink that the ocean names, and what the gusts fed.
         names = evidence.ocean.budget_units.items()
-        terms = [name for name, (units, _) in names if units == "m2 s-3"]
-        assert len(terms) >= 2
-        table = found[found.index("Energy budget") :].replace("&#x27;", "'")
+        terms = [name for name, (units, _) in names if units in ("m2 s-3", "s-3")]
+        assert len(terms) >= 4
+        table = found[found.index("Budgets of energy and enstrophy") :]
         for name in [*terms, "gusts"]:
             assert f"{name.replace('_', ' ')}: " in table
-        # Beside them the gusts, the energy, its change and the residual.
-        assert html.count('scope="row"') == len(terms) + 4
+        # Beside them the gusts, both quantities, their changes and the residuals.
+        table = html[html.index("Budgets of") :].partition("</table>")[0]
+        assert table.count('scope="row"') == len(terms) + 7
+        # Everything else that is recorded or measured, with its unit.
+        rest = {**evidence.flow.measure, **evidence.flow.gyre}
+        others = html.count('scope="row"') - table.count('scope="row"')
+        assert others == len(rest)
+        for measure in rest.values():
+            assert measure.meaning.removesuffix(" (negative)") in found
         assert ("Thick lines are walls" in found) == (space != "periodic")
         assert ("not to the scale" in found) == (kind is FLUID)
 
@@ -376,7 +386,7 @@ class TestContent:
         assert table.count("†") == (~close.astype(bool)).sum() > 0
 
     def test_lists_the_fingerprints_and_seeds(self, study, html):
-        for name in ("truth", "reduce", "audit", "benchmark"):
+        for name in ("truth", "flow", "reduce", "audit", "benchmark"):
             assert fingerprint_of(study, STAGES, name) in html
         assert "drawn from seed 3" in words(html)
 

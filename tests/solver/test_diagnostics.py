@@ -1,20 +1,21 @@
 """Budgets, spectra and fluxes: identities, and closed forms."""
 
 from dataclasses import dataclass
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
 from toys import random_model
 
-from eddyshed.solver.diagnostics import (
-    budget_of,
-    gyres,
+from eddyshed.solver.diagnostics import budget_of, gyres
+from eddyshed.solver.errors import DataError
+from eddyshed.solver.spectra import (
     isotropic_spectrum,
     shells,
+    spectra_by_part,
     spectral_flux,
     zonal_spectrum,
 )
-from eddyshed.solver.errors import DataError
 
 UNITS = {
     "energy": "m2 s-2",
@@ -101,6 +102,7 @@ class Shelled:
 
     toy: object
     waves: np.ndarray
+    space: object
 
     @property
     def size(self):
@@ -110,18 +112,24 @@ class Shelled:
         return self.toy.bilinear(u, w)
 
 
+SQUARE = SimpleNamespace(
+    lengths=(2 * np.pi, 2 * np.pi), x_is_periodic=True, y_is_periodic=True, n_real=7
+)
+
+
 @pytest.fixture
 def shelled():
     rng = np.random.default_rng(4)
     waves = np.array([[0, 1], [0, 1], [1, 0], [3, 4], [0, 2], [2, -2], [-3, 4]])
-    return Shelled(random_model(rng, 7), waves), rng.standard_normal((3, 7))
+    return Shelled(random_model(rng, 7), waves, SQUARE), rng.standard_normal((3, 7))
 
 
 def test_spectra_sum_to_the_energy(shelled):
     model, states = shelled
     energy = (states**2).sum(axis=-1) / 2
     spectrum = isotropic_spectrum(model, states)
-    assert list(shells(model.waves)) == [1, 1, 1, 5, 2, 3, 5]
+    assert list(shells(model).index) == [1, 1, 1, 5, 2, 3, 5]
+    np.testing.assert_array_equal(spectra_by_part(model, states)[:, 0], spectrum)
     np.testing.assert_allclose(spectrum.sum(axis=-1), energy, rtol=1e-14)
     np.testing.assert_allclose(
         spectrum[:, 5], (states[:, 3] ** 2 + states[:, 6] ** 2) / 2, rtol=1e-14
@@ -136,7 +144,7 @@ def test_spectra_sum_to_the_energy(shelled):
 
 def test_no_zonal_flow_between_walls(shelled):
     model, states = shelled
-    walled = Shelled(model.toy, np.abs(model.waves) + 1)
+    walled = Shelled(model.toy, np.abs(model.waves) + 1, SQUARE)
     with pytest.raises(DataError, match="periodic in x"):
         zonal_spectrum(walled, states)
 
@@ -145,12 +153,37 @@ def test_flux_is_what_large_scales_lose(shelled):
     model, states = shelled
     flux = spectral_flux(model, states)
     tendency = model.bilinear(states, states)
-    low = shells(model.waves) <= 2
+    low = shells(model).index <= 2
     lost = -(states * tendency)[:, low].sum(axis=1)
     np.testing.assert_allclose(flux[:, 2], lost, rtol=1e-12)
     # Advection conserves energy: nothing leaves the last shell, to round-off.
     assert np.all(np.abs(flux[:, -1]) < 1e-13 * np.abs(states * tendency).sum(axis=1))
     assert np.all(np.abs(flux[:, 2]) > 1e-3)
+
+
+def test_rings_are_as_wide_as_the_wider_spacing():
+    # 4 by 1 with walls in y: waves of pi / 2 along, half waves of pi across.
+    space = SimpleNamespace(
+        lengths=(4.0, 1.0), x_is_periodic=True, y_is_periodic=False, n_real=4
+    )
+    waves = np.array([[0, 1], [2, 1], [5, 1], [1, 3]])
+    found = shells(Shelled(None, waves, space))
+    assert found.width == pytest.approx(np.pi)
+    # Over pi: 1, sqrt(2), sqrt(29) / 2 = 2.69, sqrt(37) / 2 = 3.04.
+    assert list(found.index) == [1, 1, 3, 3]
+    np.testing.assert_allclose(found.wavenumbers, np.pi * np.arange(4))
+    # The first wave that lacks is (6, 0) at 3: rings up to 2.5 are whole.
+    assert found.complete == 3
+
+
+def test_gyres_between_the_points_of_a_grid():
+    # A paraboloid is found exactly, wherever its top lies.
+    x, y = np.linspace(0, 3, 7), np.linspace(0, 2, 9)
+    psi = 5 - (x - 1.3) ** 2 - 2 * (y[:, None] - 0.9) ** 2
+    found = gyres(x, y, psi)
+    assert found.greatest == pytest.approx(5, rel=1e-14)
+    assert found.greatest_at == pytest.approx((1.3, 0.9), rel=1e-13)
+    assert found.least == psi.min()  # in a corner, where no parabola is laid
 
 
 def test_gyres_of_a_known_streamfunction():

@@ -7,10 +7,11 @@ import pytest
 from eddyshed.reduce.contract import check_model
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config
-from eddyshed.solver.diagnostics import budget_of, spectral_flux
+from eddyshed.solver.diagnostics import budget_of
 from eddyshed.solver.initial import FieldSettings, starting_state
 from eddyshed.solver.record import open_record
 from eddyshed.solver.settings import TruthConfig
+from eddyshed.solver.spectra import spectral_flux
 from eddyshed.solver.truth import run_member
 
 ALL = """

@@ -1,22 +1,17 @@
-"""Means, budgets and fields of the report against what is known of them."""
-
-from dataclasses import dataclass
-from itertools import pairwise
+"""Means of a flow with their errors, and its fields, against what is known of them."""
 
 import numpy as np
 import pytest
+from scipy.signal import lfilter
 
-from eddyshed.reduce.report.flow_fields import round_number
-from eddyshed.reduce.report.measures import (
-    Finer,
+from eddyshed.reduce.flow.fields import Finer, eastward_profile
+from eddyshed.reduce.flow.means import (
     batch_edges,
-    batch_states,
     block_ranges,
-    eastward_profile,
-    energy_rates,
+    mean_of,
     of_batches,
 )
-from eddyshed.solver.diagnostics import budget_of
+from eddyshed.reduce.report.flow_fields import round_number
 from eddyshed.solver.spaces.basin import Basin
 from eddyshed.solver.spaces.channel import Channel
 from eddyshed.solver.spaces.periodic import Periodic
@@ -27,24 +22,46 @@ def rng():
     return np.random.default_rng(20260101)
 
 
-@dataclass
-class Record:
-    """States in memory, read in stretches of seven."""
+def red_noise(rng, members, times, columns, phi):
+    """First-order autoregressive series of unit variance, with its stationary start."""
+    shocks = np.sqrt(1 - phi**2) * rng.standard_normal((members, times, columns))
+    shocks[:, 0] /= np.sqrt(1 - phi**2)
+    return lfilter([1.0], [1.0, -phi], shocks, axis=1)
 
-    states: np.ndarray
 
-    @property
-    def times(self):
-        return np.arange(len(self.states)) * 2.0
+class TestErrors:
+    @pytest.mark.parametrize(("phi", "members"), [(0.0, 1), (0.9, 1), (0.9, 4)])
+    def test_are_those_of_red_noise(self, rng, phi, members):
+        """Variance of the mean (1 + phi) / (1 - phi) / n: Bartlett 1946, Leith 1973."""
+        times, columns = 4000 // members, 600
+        found = mean_of(red_noise(rng, members, times, columns, phi), 2.0)
+        count = members * times
+        expected = np.sqrt((1 + phi) / (1 - phi) / count)
+        # The integral of the correlation function ends at 0.05 of it, which takes a
+        # fortieth off the error; its own error, sqrt(12 time / T) / 2 or 12 % of each,
+        # leaves half a percent in 600.
+        assert np.mean(found.error) == pytest.approx(expected, rel=0.05)
+        inside = np.mean(np.abs(found.value) < 1.96 * found.error)
+        # A share of 0.95 of 600 has the standard error 0.009: three of those, and
+        # what an error known to 12 % takes off.
+        assert 0.915 < inside < 0.98
 
-    @property
-    def size(self):
-        return self.states.shape[1]
+    def test_of_a_step_twice_as_long_are_the_same(self, rng):
+        # Two samples in a correlation time tell as much as four.
+        series = red_noise(rng, 1, 40000, 50, 0.95)
+        fine, coarse = mean_of(series, 1.0), mean_of(series[:, ::4], 4.0)
+        assert coarse.error.mean() == pytest.approx(fine.error.mean(), rel=0.05)
 
-    def chunks(self):
-        for start in range(0, len(self.states), 7):
-            where = slice(start, min(start + 7, len(self.states)))
-            yield where, self.states[where]
+    def test_of_constants_are_zero_and_of_short_records_unknown(self, rng):
+        series = np.stack([np.full(100, 3.1), rng.standard_normal(100)], axis=1)
+        found = mean_of(series[np.newaxis], 1.0)
+        assert found.value[0] == pytest.approx(3.1, rel=1e-14)
+        assert found.error[0] == 0
+        assert 0.05 < found.error[1] < 0.2
+        assert mean_of(series[np.newaxis, :7], 1.0).error.tolist() == [0, np.inf]
+        trend = np.arange(100.0)[np.newaxis, :, np.newaxis]
+        # A record that only rises does not know its own memory beyond its half.
+        assert mean_of(trend, 1.0).error[0] > 10
 
 
 class TestBatches:
@@ -69,39 +86,8 @@ class TestBatches:
     def test_one_batch_has_no_error(self):
         assert of_batches(np.ones((1, 3)), np.ones(3)).error.tolist() == [np.inf] * 3
 
-    def test_mean_states_do_not_depend_on_how_the_file_is_read(self, rng):
-        states = rng.standard_normal((101, 5))
-        expected = [states[part].mean(axis=0) for part in _parts(101)]
-        np.testing.assert_allclose(batch_states(Record(states)), expected, atol=1e-14)
 
-
-def _parts(count):
-    return [slice(a, b) for a, b in pairwise(batch_edges(count))]
-
-
-class TestRates:
-    def test_their_means_are_the_terms_of_the_budget(self, rng):
-        t = np.cumsum(rng.uniform(1, 2, 61))
-        series = {
-            "energy": rng.uniform(1, 2, 61),
-            "work": rng.uniform(0, 1, 61),
-            "drag": rng.uniform(-1, 0, 61),
-            "idle": np.zeros(61),
-            "energy_fed_by_gusts": np.cumsum(rng.uniform(0, 1, 61)),
-            "enstrophy": rng.uniform(1, 2, 61),
-        }
-        units = dict.fromkeys(series, "m2 s-3")
-        units |= {"energy": "m2 s-2", "energy_fed_by_gusts": "m2 s-2"}
-        units["enstrophy"] = "s-2"
-        found = energy_rates(t, series, units)
-        terms = budget_of(t, series, units).terms
-        assert set(found) == set(terms) - {"idle"} == {"work", "drag", "gusts"}
-        for name, rate in found.items():
-            mean = np.average(rate, weights=np.diff(t))
-            assert mean == pytest.approx(terms[name].value, rel=1e-12)  # rounding
-
-
-class TestFlow:
+class TestFields:
     def test_eastward_velocity_of_a_plane_wave(self):
         """``u = -psi_y`` (Pedlosky 1987, ch. 3); a wave along x has no mean."""
         space = Periodic((16, 24), (1e6, 2e6))

@@ -1,0 +1,1 @@
+"""What the truth did: its fields, spectra, fluxes, budgets and transports."""
