@@ -6,6 +6,7 @@ import argparse
 import json
 import logging
 import os
+import re
 import signal
 import sys
 from collections.abc import Sequence
@@ -60,6 +61,14 @@ def parser() -> argparse.ArgumentParser:
             "--quiet", action="store_true", help="no progress and no log on stderr"
         )
         _add_common(stage)
+        if name == "truth":
+            stage.add_argument(
+                "--members",
+                type=_slice,
+                metavar="FIRST:END",
+                help="run these members alone, END not among them, such as 0:8; "
+                "several commands may run members of one study at the same time",
+            )
 
     show = commands.add_parser(
         "show", help="say what a file or run folder of ours holds", allow_abbrev=False
@@ -89,6 +98,32 @@ def _add_common(command):
     command.add_argument(
         "--json", action="store_true", help="print JSON instead of a table"
     )
+    command.add_argument(
+        "--engine",
+        choices=("processes", "dask", "serial"),
+        help="where members run, instead of [engine] kind",
+    )
+    command.add_argument(
+        "--workers",
+        type=int,
+        metavar="N",
+        help="members that run at the same time, instead of [engine] workers",
+    )
+    command.add_argument(
+        "--ignore-disk-space",
+        action="store_true",
+        help="go ahead even if the truth will not fit the disk",
+    )
+
+
+def _slice(text):
+    """Members of ``FIRST:END``, as Python counts; an end left out is the last."""
+    found = re.fullmatch("([0-9]*):([0-9]*)", text)
+    if found is None:
+        message = f"{text!r} is not FIRST:END, such as 0:8"
+        raise argparse.ArgumentTypeError(message)
+    first, end = found.groups()
+    return slice(int(first or 0), int(end) if end else None)
 
 
 def main(argv: Sequence[str] | None = None) -> int:
@@ -141,7 +176,31 @@ def _read(options):
 
     from .settings import StudyConfig
 
-    return read_config(options.config, StudyConfig, options.overrides)
+    overrides = list(options.overrides)
+    # One way only into the config, so that all is checked alike.
+    if options.engine is not None:
+        overrides.append(f'engine.kind="{options.engine}"')
+    if options.workers is not None:
+        overrides.append(f"engine.workers={options.workers}")
+    return read_config(options.config, StudyConfig, overrides)
+
+
+def _members(options, config):
+    """Members that a command asks for; None for all."""
+    from eddyshed.solver.errors import ConfigError
+
+    asked = getattr(options, "members", None)
+    if asked is None:
+        return None
+    count = config.ensemble.members
+    end = count if asked.stop is None else asked.stop
+    if not 0 <= asked.start < end <= count:
+        problem = (
+            f"asks for members {asked.start} up to {end}; the config has "
+            f"{count}, numbered from 0"
+        )
+        raise ConfigError("--members", (problem,))  # noqa: EM101 (not a message)
+    return range(asked.start, end)
 
 
 def _check(options):
@@ -161,8 +220,9 @@ def _check(options):
     from eddyshed.solver.forecast import forecast_run
 
     from .stages import preflight
-    from .study import free_bytes
+    from .study import Study, free_bytes
     from .tables import forecast_json, forecast_table
+    from .truth_stage import refuse_full_disk
 
     preflight(document.config, "check")
     found = forecast_run(document.config)
@@ -171,6 +231,13 @@ def _check(options):
         print(json.dumps(forecast_json(found, free), indent=1))
     else:
         print(forecast_table(document.config, found, free))
+    refuse_full_disk(
+        Study(
+            document=document,
+            folder=options.runs / document.config.name,
+            ignore_disk_space=options.ignore_disk_space,
+        )
+    )
     return 0
 
 
@@ -178,8 +245,8 @@ def _stage(options):
     """Carry out a stage, or all of them."""
     document = _read(options)
     from .stages import STAGES, preflight
-    from .study import Interrupted, Study, bring_up_to_date, opened
-    from .tables import stage_json, stage_table
+    from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
+    from .tables import stage_json, stage_table, truth_json, truth_table
 
     preflight(document.config, options.command)
 
@@ -194,6 +261,8 @@ def _stage(options):
             folder=options.runs / document.config.name,
             overrides=tuple(options.overrides),
             quiet=options.quiet,
+            members=_members(options, document.config),
+            ignore_disk_space=options.ignore_disk_space,
             stop=lambda: bool(caught),
             gentle=caught.gentle,
         )
@@ -204,11 +273,21 @@ def _stage(options):
             except Interrupted as stopped:
                 print(f"eddyshed: {stopped}", file=sys.stderr)
                 return 128 + caught.number
-            if options.json:
-                print(json.dumps(stage_json(study, options.command), indent=1))
-            else:
-                print(stage_table(study, options.command))
+            except Incomplete:
+                # What came of each is a result, and why is part of it.
+                _print(truth_json(study) if options.json else truth_table(study))
+                raise
+            _print(
+                stage_json(study, options.command)
+                if options.json
+                else stage_table(study, options.command)
+            )
     return 0
+
+
+def _print(result):
+    """Print a table, or plain data as JSON."""
+    print(result if isinstance(result, str) else json.dumps(result, indent=1))
 
 
 class _Caught:

@@ -13,13 +13,10 @@ from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
-from eddyshed.solver.segments import reached_step
 from eddyshed.solver.time_functions import Steady
 from eddyshed.solver.truth import (
     initial_state,
-    plan_of,
     random_forcing_of,
-    run_member,
 )
 
 from .audit import audit
@@ -39,7 +36,8 @@ from .simulated import load, save
 from .split import Split, split_truth, unresolved_series
 from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
-from .study import Interrupted, Stage, Study, fingerprint_of
+from .study import Stage, Study, fingerprint_of
+from .truth_stage import run_truth
 
 log = logging.getLogger(__name__)
 
@@ -85,7 +83,7 @@ def preflight(config: StudyConfig, command: str) -> None:
         )
         raise DataError(message)
     ocean = model_of(config)
-    initial_state(config, ocean, 0)
+    initial_state(config, ocean, config.ensemble.members - 1)
     random_forcing_of(config, ocean, 0)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
@@ -96,28 +94,6 @@ def preflight(config: StudyConfig, command: str) -> None:
             f"{ocean.size} coordinates and some must be left unresolved; ask for fewer"
         )
         raise DataError(message)
-
-
-def run_truth(study: Study, stamp: str) -> None:
-    """Run the truth, or go on with it."""
-    config = study.config
-    ocean = build_ocean(config)
-    total = plan_of(config, ocean).total
-    done = reached_step(study.truth_folder, 0)
-    with (
-        study.gentle(),
-        progress("truth", total, done=done, quiet=study.quiet) as shown,
-    ):
-        complete = run_member(
-            config, 0, study.truth_folder, stop=study.stop, progress=shown.to
-        )
-    if not complete:
-        reached = reached_step(study.truth_folder, 0)
-        message = (
-            f"truth stopped at step {reached} of {total}, checkpoint written; run the "
-            "same command again to go on"
-        )
-        raise Interrupted(message)
 
 
 def run_flow(study: Study, stamp: str) -> None:

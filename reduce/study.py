@@ -8,27 +8,29 @@ is reused; any other is run.
 
 from __future__ import annotations
 
-import fcntl
 import logging
 import platform
 import shutil
-from collections.abc import Callable, Iterator
-from contextlib import AbstractContextManager, contextmanager, nullcontext
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import AbstractContextManager, ExitStack, contextmanager, nullcontext
 from dataclasses import dataclass, field
 from importlib.metadata import version
 from pathlib import Path
 
 from eddyshed.solver.config import Document, as_table, fingerprint
-from eddyshed.solver.errors import DataError, RunFolderError
-from eddyshed.solver.files import replacing
-from eddyshed.solver.record import TruthRecord, open_record
-from eddyshed.solver.segments import member_paths
-from eddyshed.solver.truth import truth_table
+from eddyshed.solver.ensemble import Outcome, complete_members, ensemble_path
+from eddyshed.solver.errors import DataError, EddyshedError, RunFolderError
+from eddyshed.solver.files import open_file, replacing
+from eddyshed.solver.identity import truth_table
+from eddyshed.solver.locks import holding
+from eddyshed.solver.record import TruthRecord, open_records
 
 from .settings import StudyConfig
 from .store import read_fingerprint
 
 log = logging.getLogger(__name__)
+
+LIBRARIES = ("numpy", "scipy", "h5py", "pyfftw")  # what numbers and files depend on
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -45,6 +47,13 @@ class Study:
         Keys that the command line overrode; noted in the folder's config.
     quiet : bool
         No progress.
+    members : range, optional
+        Which members of the truth this process is to run; all of the config if not
+        given.
+    ignore_disk_space : bool
+        Go ahead even if the truth will not fit the disk.
+    outcomes : list of Outcome
+        How the members came out, once the truth was run.
     stop : callable
         Asked by long work whether it should checkpoint and end.
     gentle : callable
@@ -55,6 +64,9 @@ class Study:
     folder: Path
     overrides: tuple[str, ...] = ()
     quiet: bool = False
+    members: range | None = None
+    ignore_disk_space: bool = False
+    outcomes: list[Outcome] = field(default_factory=list)
     stop: Callable[[], bool] = field(default=lambda: False)
     gentle: Callable[[], AbstractContextManager] = field(default=nullcontext)
 
@@ -68,9 +80,18 @@ class Study:
         """Where the truth runs are."""
         return self.folder / "truth"
 
+    @property
+    def asked(self) -> range:
+        """The members that this process is to run."""
+        return (
+            range(self.config.ensemble.members)
+            if self.members is None
+            else (self.members)
+        )
+
     def records(self) -> list[TruthRecord]:
-        """Records of the truth runs, one for each member."""
-        return [open_record(member_paths(self.truth_folder, 0)[0])]
+        """Records of all members of the truth, by number."""
+        return open_records(self.truth_folder, range(self.config.ensemble.members))
 
     def path(self, name: str) -> Path:
         """File of the study."""
@@ -106,13 +127,22 @@ class Interrupted(Exception):
     """Work was asked to stop, and stopped with a checkpoint."""
 
 
+class Incomplete(EddyshedError, RuntimeError):
+    """Some members of the truth did not come to their end."""
+
+
 def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
     """Fingerprint that the files of a stage must carry to be reused."""
     stage = stages[name]
     table = as_table(study.config)
     if name == "truth":
         # A truth is told by its config alone: months of runs outlive a release.
-        return fingerprint(truth_table(study.config))
+        members = study.config.ensemble.members
+        if members == 1:
+            return fingerprint(truth_table(study.config))
+        return fingerprint(
+            {"members": members, "truth": truth_table(study.config, members - 1)}
+        )
     return fingerprint(
         {
             "stage": name,
@@ -127,21 +157,46 @@ def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
 
 def is_fresh(study: Study, stages: dict[str, Stage], name: str) -> tuple[bool, str]:
     """Whether a stage can be reused, and why not if it cannot."""
+    if name == "truth":
+        return _is_truth_fresh(study)
     wanted = fingerprint_of(study, stages, name)
     for output in stages[name].outputs:
         path = study.path(output)
         if not path.exists():
             return False, f"{output} is missing"
-        if name == "truth":
-            try:
-                record = open_record(path)
-            except DataError as error:
-                return False, str(error)
-            if not record.complete or fingerprint(record.config) != wanted:
-                return False, "the run is not at its end"
-        elif read_fingerprint(path) != wanted:
+        if read_fingerprint(path) != wanted:
             return False, f"{output} was made from other settings"
     return True, ""
+
+
+def _is_truth_fresh(study):
+    """Whether all members that were asked for are there, and shown as one."""
+    done = complete_members(study.config, study.truth_folder, study.asked)
+    missing = [member for member in study.asked if member not in done]
+    if missing:
+        return False, f"{members_text(missing)} not at the end"
+    if study.config.ensemble.members > 1:
+        path = ensemble_path(study.truth_folder)
+        try:
+            with open_file(path, kind="truth ensemble") as file:
+                shown = set(file["member"][...].tolist())
+        except DataError:
+            return False, f"truth/{path.name} is missing"
+        if not shown.issuperset(done):
+            return False, f"truth/{path.name} does not show all members"
+    return True, ""
+
+
+def members_text(members: Sequence[int]) -> str:
+    """Members in words, with their verb, such as ``members 0, 1 and 4 are``."""
+    if len(members) == 1:
+        return f"member {members[0]} is"
+    if len(members) > 2 and members[-1] - members[0] == len(members) - 1:
+        return f"members {members[0]} to {members[-1]} are"
+    listed = [str(member) for member in members[:12]]
+    rest = len(members) - len(listed)
+    last = f"{rest} more" if rest else listed.pop()
+    return f"members {', '.join(listed)} and {last} are"
 
 
 def bring_up_to_date(study: Study, stages: dict[str, Stage], name: str) -> None:
@@ -161,13 +216,18 @@ def bring_up_to_date(study: Study, stages: dict[str, Stage], name: str) -> None:
     Interrupted
         If the truth run was asked to stop.
     """
-    for needed in _upstream(stages, name):
-        fresh, why = is_fresh(study, stages, needed)
-        if fresh:
-            log.info("%s: up to date, reused", needed)
-            continue
-        log.info("%s: running, because %s", needed, why)
-        stages[needed].run(study, fingerprint_of(study, stages, needed))
+    with ExitStack() as stack:
+        lock = None
+        for needed in _upstream(stages, name):
+            if needed != "truth" and lock is None:
+                # Members have a lock each; all else has one writer.
+                lock = stack.enter_context(holding(study.path(".lock")))
+            fresh, why = is_fresh(study, stages, needed)
+            if fresh:
+                log.info("%s: up to date, reused", needed)
+                continue
+            log.info("%s: running, because %s", needed, why)
+            stages[needed].run(study, fingerprint_of(study, stages, needed))
 
 
 def _upstream(stages, name):
@@ -178,52 +238,44 @@ def _upstream(stages, name):
 
 @contextmanager
 def opened(study: Study) -> Iterator[None]:
-    """Hold the run folder of a study: one process at a time writes there.
+    """Make the run folder of a study, and note there what is done to it.
 
     Raises
     ------
     RunFolderError
-        If the folder cannot be made or written, or another process holds it.
+        If the folder cannot be made or written.
     """
+    lines = [f"# with --set {override}\n" for override in study.overrides]
+    text = "".join([*lines, study.document.text])
+    path = study.path("config.toml")
+    if not path.is_file() or path.read_bytes() != text.encode():
+        with replacing(path) as temporary:
+            temporary.write_text(text, encoding="utf-8")
     try:
-        study.folder.mkdir(parents=True, exist_ok=True)
-        lock = (study.folder / ".lock").open("w")
+        handler = logging.FileHandler(study.path("study.log"), encoding="utf-8")
     except OSError as error:
         message = (
-            f"{study.folder}: cannot be written ({error.strerror}); choose another "
-            "place with --runs"
+            f"{study.path('study.log')}: cannot be written ({error.strerror}); unlock "
+            "the folder, or choose another place with --runs"
         )
         raise RunFolderError(message) from error
-    with lock:
-        try:
-            fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except BlockingIOError as error:
-            message = (
-                f"{study.folder}: another process is at work there; wait for it, or "
-                "give this study another name"
-            )
-            raise RunFolderError(message) from error
-        with replacing(study.path("config.toml")) as temporary:
-            lines = [f"# with --set {override}\n" for override in study.overrides]
-            text = "".join([*lines, study.document.text])
-            temporary.write_text(text, encoding="utf-8")
-        handler = logging.FileHandler(study.path("study.log"), encoding="utf-8")
-        handler.setFormatter(
-            logging.Formatter("%(asctime)s %(levelname)s %(name)s: %(message)s")
+    handler.setFormatter(
+        logging.Formatter("%(asctime)s %(levelname)s %(name)s: %(message)s")
+    )
+    root = logging.getLogger("eddyshed")
+    root.addHandler(handler)
+    try:
+        log.info(
+            "eddyshed %s, Python %s, %s, config %s",
+            version("eddyshed"),
+            platform.python_version(),
+            ", ".join(f"{name} {version(name)}" for name in LIBRARIES),
+            study.document.source,
         )
-        root = logging.getLogger("eddyshed")
-        root.addHandler(handler)
-        try:
-            log.info(
-                "eddyshed %s, Python %s, config %s",
-                version("eddyshed"),
-                platform.python_version(),
-                study.document.source,
-            )
-            yield
-        finally:
-            root.removeHandler(handler)
-            handler.close()
+        yield
+    finally:
+        root.removeHandler(handler)
+        handler.close()
 
 
 def free_bytes(folder: Path) -> int:
@@ -231,3 +283,14 @@ def free_bytes(folder: Path) -> int:
     while not folder.exists():
         folder = folder.parent
     return shutil.disk_usage(folder).free
+
+
+def available_memory() -> int | None:
+    """Memory that new processes can have without swapping [bytes], if known."""
+    try:
+        for line in Path("/proc/meminfo").read_text(encoding="ascii").splitlines():
+            if line.startswith("MemAvailable:"):
+                return 1024 * int(line.split()[1])
+    except (OSError, ValueError):
+        pass
+    return None

@@ -2,15 +2,20 @@
 
 from __future__ import annotations
 
+import os
+from collections import Counter
+from dataclasses import asdict
 from typing import Any
 
+from eddyshed.solver.ensemble import Outcome, complete_members, ensemble_path
 from eddyshed.solver.forecast import Forecast
+from eddyshed.solver.progress import clock
 from eddyshed.solver.quantities import format_quantity
 from eddyshed.solver.settings import TruthConfig
 
 from .stages import read_noise, read_split
 from .store import plain, read_json
-from .study import Study
+from .study import Study, available_memory, members_text
 
 CAUTION = (
     "A toy ocean: no coastlines, no thermodynamics, nothing observed. "
@@ -45,9 +50,15 @@ def forecast_json(found: Forecast, free: int) -> dict[str, Any]:
     return {
         **plain(found),
         "scales": [list(scale) for scale in found.scales],
-        "seconds": found.seconds_per_step * found.steps,
+        "seconds": found.seconds,
+        "wall_seconds": found.wall_seconds(processors()),
         "free_bytes": free,
     }
+
+
+def processors() -> int:
+    """How many processors this process may use."""
+    return len(os.sched_getaffinity(0))
 
 
 def forecast_table(config: TruthConfig, found: Forecast, free: int) -> str:
@@ -60,24 +71,45 @@ def forecast_table(config: TruthConfig, found: Forecast, free: int) -> str:
             "truth run",
             f"{found.steps} steps of {format_quantity(config.time.step, 's')}",
         ],
+    ]
+    workers = found.workers or 1
+    if found.members > 1:
+        where = f"{workers} at a time" if found.workers else "on a cluster"
+        rows.append(["members", f"{found.members}, {where}"])
+    each = " each" if workers > 1 else ""
+    rows += [
         [
             "processor time of the truth",
-            format_quantity(found.seconds_per_step * found.steps, "s")
+            format_quantity(found.seconds, "s")
             + f" ({1e6 * found.seconds_per_step:.0f} microseconds a step)",
         ],
+        ["time on the clock", _wall(found)],
         [
             "disk",
             f"{found.disk_bytes / 1e6:.0f} MB of {free / 1e6:.0f} MB free",
         ],
-        ["memory between checkpoints", f"{found.memory_bytes / 1e6:.0f} MB"],
+        ["memory", f"{found.memory_bytes / 1e6:.0f} MB{each}"],
     ]
     text = columns(rows)
     warnings = list(found.warnings)
-    if found.disk_bytes > free:
-        warnings.append("the truth will not fit on the disk")
+    memory = available_memory()
+    if memory is not None and workers * found.memory_bytes > memory:
+        warnings.append(
+            f"{workers * found.memory_bytes / 1e6:.0f} MB of memory are needed and "
+            f"{memory / 1e6:.0f} MB available; try fewer [engine] workers, or a "
+            "shorter [output] checkpoint_every"
+        )
     for warning in warnings:
         text += f"\nwarning: {warning}"
     return f"{text}\n{CAUTION}"
+
+
+def _wall(found):
+    """Forecast of the time on the clock, in words."""
+    seconds = found.wall_seconds(processors())
+    if seconds is None:
+        return "as the cluster has workers"
+    return f"{clock(seconds)}, if nothing else runs here"
 
 
 def _scale(value, unit):
@@ -90,6 +122,8 @@ def _scale(value, unit):
 def stage_json(study: Study, command: str) -> dict[str, Any]:
     """Return what a command made, as plain data."""
     result: dict[str, Any] = {"study": study.config.name, "folder": str(study.folder)}
+    if command in ("truth", "study"):
+        result["truth"] = truth_json(study)
     if command in ("audit", "report", "study"):
         result["audit"] = read_json(study.path("audit.json"))
     if command in ("benchmark", "report", "study"):
@@ -100,7 +134,7 @@ def stage_json(study: Study, command: str) -> dict[str, Any]:
 def stage_table(study: Study, command: str) -> str:
     """Write what a command made, for people."""
     parts = {
-        "truth": _truth,
+        "truth": truth_table,
         "reduce": _reduce,
         "audit": _audit,
         "benchmark": _benchmark,
@@ -110,13 +144,57 @@ def stage_table(study: Study, command: str) -> str:
     return "\n\n".join(parts[name](study) for name in asked)
 
 
-def _truth(study):
-    record = study.records()[0]
-    length = len(record.times) * record.step
-    return (
-        f"truth: {len(record.times)} states over {format_quantity(length, 's')} in "
-        f"{record.path}"
-    )
+def truth_json(study: Study) -> dict[str, Any]:
+    """Return how the members of the truth came out, as plain data."""
+    outcomes = outcomes_of(study)
+    counts = Counter(outcome.status for outcome in outcomes)
+    return {
+        "counts": dict(counts),
+        "members": [asdict(outcome) for outcome in outcomes],
+        "missing": _missing(study),
+    }
+
+
+def outcomes_of(study: Study) -> list[Outcome]:
+    """How the members came out; of a truth that was there already, all skipped."""
+    return study.outcomes or [
+        Outcome(member=member, status="skipped") for member in study.asked
+    ]
+
+
+def _missing(study):
+    """Members of the config that are not complete, asked for now or not."""
+    done = complete_members(study.config, study.truth_folder)
+    return [m for m in range(study.config.ensemble.members) if m not in done]
+
+
+def truth_table(study: Study) -> str:
+    """Write how the members of the truth came out, for people."""
+    if study.config.ensemble.members == 1:
+        (record,) = study.records()
+        length = len(record.times) * record.step
+        return (
+            f"truth: {len(record.times)} states over {format_quantity(length, 's')} in "
+            f"{record.path}"
+        )
+    outcomes = outcomes_of(study)
+    counts = Counter(outcome.status for outcome in outcomes)
+    listed = ", ".join(f"{count} {status}" for status, count in sorted(counts.items()))
+    parts = []
+    rows = [[str(o.member), o.status, o.reason] for o in outcomes if not o.complete]
+    if rows:
+        parts.append(columns([["member", "came out", "why"], *rows]))
+    summary = f"truth: {len(outcomes)} members: {listed}"
+    missing = _missing(study)
+    if missing:
+        summary += (
+            f"\n{members_text(missing)} not complete, of the "
+            f"{study.config.ensemble.members} that the config asks for"
+        )
+    path = ensemble_path(study.truth_folder)
+    if path.is_file():
+        summary += f"\nall that are complete, as one: {path}"
+    return "\n\n".join([*parts, summary])
 
 
 def _reduce(study):

@@ -64,6 +64,16 @@ class RunFolderError(EddyshedError, RuntimeError):
     exit_code = 2
 
 
+class EngineError(EddyshedError, RuntimeError):
+    """Members cannot be run where the config says: nothing there answers."""
+
+    exit_code = 2
+
+
+class LostWorker(EddyshedError, RuntimeError):
+    """The process that ran a member died, again and again."""
+
+
 class Blowup(EddyshedError, ArithmeticError):
     """A truth run or a reduced model left the finite numbers.
 

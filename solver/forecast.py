@@ -2,18 +2,30 @@
 
 from __future__ import annotations
 
+import math
+import resource
+import sys
 import time
+from collections.abc import Iterable
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from .build import build_ocean
+from .engine import workers_of
 from .exponential import stepper_of
 from .initial import ModeSettings, NoiseSettings
 from .resolution import flow_scales, laminar_state, unresolved_lengths
+from .segments import reached_step
 from .settings import TruthConfig
 from .truth import Plan, initial_state, plan_of, random_forcing_of
+
+# A segment's axes and its tables of contents, as found on files of 120 to 7000
+# coordinates, to a tenth; and so for the index of a member.
+SEGMENT_BYTES = 24_000
+SEGMENT_BYTES_PER_COORDINATE = 72
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -27,13 +39,18 @@ class Forecast:
     coordinates : int
         Real coordinates of the state.
     steps : int
-        Steps of the truth run.
+        Steps of a member.
     seconds_per_step : float
-        Processor time of a step, as timed just now [s].
+        Processor time of a step with its share of recording, as timed just now [s].
     disk_bytes : int
-        Size of the truth on disk.
+        Size of the truth on disk, all members.
     memory_bytes : int
-        Records held between two checkpoints.
+        Memory of one member at work: this process with the ocean in it as it is now,
+        and the records between two checkpoints, twice while they are written.
+    members : int
+        How many there are.
+    workers : int or None
+        How many run at the same time; None if a cluster decides.
     warnings : tuple of str
         What the grid or the step does not resolve.
     """
@@ -44,7 +61,28 @@ class Forecast:
     seconds_per_step: float
     disk_bytes: int
     memory_bytes: int
+    members: int
+    workers: int | None
     warnings: tuple[str, ...]
+
+    @property
+    def seconds(self) -> float:
+        """Processor time of all members [s]."""
+        return self.members * self.steps * self.seconds_per_step
+
+    def wall_seconds(self, processors: int) -> float | None:
+        """Time on the clock of all members [s]; None if a cluster decides.
+
+        Parameters
+        ----------
+        processors : int
+            How many there are for the workers, idle but for them.
+        """
+        if self.workers is None:
+            return None
+        rounds = math.ceil(self.members / self.workers)
+        shared = max(1.0, self.workers / processors)
+        return rounds * shared * self.steps * self.seconds_per_step
 
 
 def forecast_run(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
@@ -70,16 +108,65 @@ def forecast_run(config: TruthConfig, *, seconds: float = 0.3) -> Forecast:
     plan = plan_of(config, ocean, random_forcing_of(config, ocean, 0))
     scales, warnings = scales_of(config, ocean)
     per_step = seconds_per_step(config, seconds=seconds)
-    record_steps = plan.total - plan.spin_up
-    per_steps = sum(_bytes(stream) / stream.every for stream in plan.streams)
+    recorded = (plan.total - plan.spin_up) / plan.total
+    per_step += recorded * seconds_of_records(config, ocean, plan)
+    held = sum(
+        _bytes(stream) * (min(plan.segment, plan.total - plan.spin_up) / stream.every)
+        for stream in plan.streams
+    )
+    members = config.ensemble.members
     return Forecast(
         scales=tuple(scales),
         coordinates=ocean.size,
         steps=plan.total,
         seconds_per_step=per_step,
-        disk_bytes=round(per_steps * record_steps),
-        memory_bytes=round(per_steps * min(plan.segment, record_steps)),
+        disk_bytes=members * bytes_of_member(plan, ocean.size, 0),
+        memory_bytes=_memory_now() + round(2 * held),
+        members=members,
+        workers=workers_of(config.engine, members),
         warnings=(*warnings, *_warnings(config, ocean, plan)),
+    )
+
+
+def bytes_of_member(plan: Plan, size: int, first_step: int) -> int:
+    """Bytes that a member still writes from a step to its end.
+
+    Parameters
+    ----------
+    plan : Plan
+        Its steps and streams.
+    size : int
+        Coordinates of the state.
+    first_step : int
+        Where it goes on.
+    """
+    if first_step >= plan.total:
+        return 0
+    steps = plan.total - max(first_step, plan.spin_up)
+    records = sum(
+        _bytes(stream) * (steps // stream.every + 1) for stream in plan.streams
+    )
+    segments = math.ceil((plan.total - first_step) / plan.segment)
+    per_segment = SEGMENT_BYTES + (SEGMENT_BYTES_PER_COORDINATE + 8) * size
+    return records + (segments + 1) * per_segment
+
+
+def bytes_to_come(config: TruthConfig, folder: Path, members: Iterable[int]) -> int:
+    """Bytes that members still write, from wherever each stands.
+
+    Parameters
+    ----------
+    config : TruthConfig
+    folder : Path
+        The truth folder.
+    members : iterable of int
+        Which ones.
+    """
+    ocean = build_ocean(config)
+    plan = plan_of(config, ocean, random_forcing_of(config, ocean, 0))
+    return sum(
+        bytes_of_member(plan, ocean.size, reached_step(folder, member))
+        for member in members
     )
 
 
@@ -136,6 +223,25 @@ def seconds_per_step(config: TruthConfig, *, seconds: float = 0.3) -> float:
         make_step()
         count += 1
     return (time.process_time() - began) / count
+
+
+def seconds_of_records(config: TruthConfig, ocean: Any, plan: Plan) -> float:
+    """Processor time of recording [s], per step of the record."""
+    z = initial_state(config, ocean, 0)
+    cost = 0.0
+    for stream in plan.streams:
+        stream.sample(0.0, z)  # it pays for what is made once
+        began = time.process_time()
+        for _ in range(3):
+            stream.sample(0.0, z)
+        cost += (time.process_time() - began) / 3 / stream.every
+    return cost
+
+
+def _memory_now():
+    """Largest memory that this process has had, in bytes."""
+    largest = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+    return largest * (1 if sys.platform == "darwin" else 1024)
 
 
 def _bytes(stream):

@@ -120,11 +120,9 @@ def starting_state(
     """
     try:
         if isinstance(initial, NoiseSettings):
-            where = band_coordinates(ocean.waves, initial.band)
-            z = np.zeros(ocean.size)
             rng = stream(seed, member, "initial state")
-            z[where] = rng.standard_normal(len(where))
-            return _at_rest(ocean) + _scaled(z, initial.energy)
+            noise = band_noise(ocean, initial.energy, initial.band, rng)
+            return _at_rest(ocean) + noise
         if isinstance(initial, ModeSettings):
             return _single_mode(initial, ocean)
         if isinstance(initial, FieldSettings):
@@ -145,6 +143,52 @@ def _at_rest(ocean):
     """State without eddies: zero, but for a current that the ocean starts with."""
     made = getattr(ocean, "at_rest", None)
     return np.zeros(ocean.size) if made is None else made()
+
+
+def band_noise(
+    ocean: Any, energy: float, band: tuple[float, float], rng: np.random.Generator
+) -> np.ndarray:
+    """Random state of a given energy on a band of wavenumbers.
+
+    Parameters
+    ----------
+    ocean : ocean
+        In coordinates orthonormal in energy.
+    energy : float
+        Its energy [m2 s-2].
+    band : tuple of float
+        Smallest and largest total wavenumber.
+    rng : numpy.random.Generator
+        Draws it.
+
+    Returns
+    -------
+    ndarray, shape (size,)
+
+    Raises
+    ------
+    DataError
+        If no coordinate lies in the band.
+    """
+    where = band_coordinates(ocean.waves, band)
+    z = np.zeros(ocean.size)
+    z[where] = rng.standard_normal(len(where))
+    return _scaled(z, energy)
+
+
+def file_read(initial: InitialSettings) -> Path | None:
+    """File whose bytes decide the start; None if there is none.
+
+    Of an earlier run it is the segment with the last checkpoint, which never
+    changes: the index beside it is written anew while that run goes on.
+    """
+    if isinstance(initial, FieldSettings):
+        return Path(initial.path)
+    if not isinstance(initial, EarlierSettings):
+        return None
+    path = Path(initial.path)
+    segments = sorted((path.parent / path.stem).glob("segment-*.h5"))
+    return segments[-1] if segments else path
 
 
 def _scaled(z, energy):

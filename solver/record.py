@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -11,6 +11,7 @@ import numpy as np
 
 from .errors import DataError
 from .files import open_file
+from .segments import member_paths
 
 CHUNK_BYTES = 64_000_000
 
@@ -144,6 +145,37 @@ def walk(
     for member, record in enumerate(records):
         for where, states in record.chunks():
             yield member, where, states
+
+
+def open_records(
+    folder: Path, members: Iterable[int] | None = None
+) -> list[TruthRecord]:
+    """Open the records of a truth's members.
+
+    Parameters
+    ----------
+    folder : Path
+        ``truth`` of a run folder.
+    members : iterable of int, optional
+        Which, and in which order; by default all that are there, by number.
+
+    Returns
+    -------
+    list of TruthRecord
+
+    Raises
+    ------
+    DataError
+        As :func:`open_record`; or if there is none.
+    """
+    if members is None:
+        paths = sorted(folder.glob("member-*.h5"))
+    else:
+        paths = [member_paths(folder, member)[0] for member in members]
+    if not paths:
+        message = f"{folder}: holds no record of a truth run"
+        raise DataError(message)
+    return [open_record(path) for path in paths]
 
 
 def open_record(path: Path) -> TruthRecord:

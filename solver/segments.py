@@ -18,9 +18,9 @@ from typing import Any, Protocol
 import h5py
 import numpy as np
 
-from .config import differing_keys
 from .errors import RunFolderError
 from .files import add_time, add_variable, new_file, open_file, remove_partial
+from .identity import differences
 from .settings import OutputSettings
 from .streams import Recorder, Stream, add_axes
 
@@ -147,12 +147,10 @@ class MemberFiles:
 
     def _check_config(self, made: dict) -> None:
         """Refuse a folder that another config made, unless only the end moved."""
-        now = dict(self._table)
-        now["time"] = {**now["time"], "duration": made["time"]["duration"]}
-        keys = differing_keys(made, now)
-        if keys:
+        changed = differences(made, self._table)
+        if changed:
             message = (
-                f"{self.folder}: made by another config ({'; '.join(keys)}). Give "
+                f"{self.folder}: made by another config ({'; '.join(changed)}). Give "
                 "this study another name, point --runs elsewhere, or remove the folder"
             )
             raise RunFolderError(message)

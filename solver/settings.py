@@ -5,12 +5,14 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import dataclass
+from typing import TypeAlias
 
 from .boxes import BoxSettings
 from .config import setting
+from .driven import is_random
 from .exponential import SCHEMES
 from .forcing import Wave, Wind
-from .initial import INITIAL_KINDS, InitialSettings, RestSettings
+from .initial import INITIAL_KINDS, InitialSettings, NoiseSettings, RestSettings
 from .oceans.barotropic import BarotropicSettings
 from .oceans.boussinesq_waves import BoussinesqSettings
 from .oceans.two_layer_waves import TwoLayerSettings
@@ -123,6 +125,89 @@ class OutputSettings:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class PerturbationSettings:
+    """Random phases and amplitudes on a band of wavenumbers, added to the start."""
+
+    energy: float = setting(
+        unit="m2 s-2", above=0, doc="energy of the perturbation by itself"
+    )
+    band: tuple[float, float] = setting(
+        minimum=0,
+        doc="smallest and largest total wavenumber perturbed, in waves per box (half "
+        "waves between walls)",
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if self.band[0] > self.band[1]:
+            yield f"band = {list(self.band)} runs downwards; give the smaller first"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class EnsembleSettings:
+    """How many members a truth has, and what tells them apart."""
+
+    members: int = setting(
+        default=1,
+        minimum=1,
+        maximum=10_000,
+        doc="runs that differ in their random streams and, where the start is the "
+        "same for all, in a perturbation of it; more can be added later",
+    )
+    perturbation: PerturbationSettings | None = setting(
+        default=None,
+        doc="noise added to the start of every member but member 0, which stays what "
+        "a truth of one member is; absent: none",
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ProcessesSettings:
+    """Members in processes of this machine, each on one thread."""
+
+    workers: int | None = setting(
+        default=None,
+        minimum=1,
+        maximum=4096,
+        doc="members that run at the same time; absent: one for each processor that "
+        "this process may use",
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class DaskSettings:
+    """Members on the workers of a Dask scheduler that somebody has started."""
+
+    address: str | None = setting(
+        default=None, doc='where the scheduler listens, such as "tcp://node7:8786"'
+    )
+    scheduler_file: str | None = setting(
+        default=None, doc="file in which the scheduler has left its address"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if (self.address is None) == (self.scheduler_file is None):
+            yield (
+                "needs either address or scheduler_file, such as address = "
+                '"tcp://127.0.0.1:8786"'
+            )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SerialSettings:
+    """Members one after another, in this process."""
+
+
+EngineSettings: TypeAlias = ProcessesSettings | DaskSettings | SerialSettings
+ENGINE_KINDS = {
+    "processes": ProcessesSettings,
+    "dask": DaskSettings,
+    "serial": SerialSettings,
+}
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class TruthConfig:
     """Everything that a truth run depends on."""
 
@@ -160,6 +245,14 @@ class TruthConfig:
     )
     time: TimeSettings = setting(doc="steps, spin-up and length")
     output: OutputSettings = setting(doc="what is written, and how often")
+    ensemble: EnsembleSettings = setting(
+        default=EnsembleSettings, doc="how many members, and how they differ"
+    )
+    engine: EngineSettings = setting(
+        default=ProcessesSettings,
+        kinds=ENGINE_KINDS,
+        doc="where the members of an ensemble run; never changes a number",
+    )
 
     def problems(self):
         """Rules that go across sections."""
@@ -217,6 +310,26 @@ class TruthConfig:
                         f"number of steps of {step:.6g} s; try "
                         f"{round(when / step) * step:.6g} s"
                     )
+        yield from self._ensemble_problems()
+
+    def _ensemble_problems(self):
+        """Members must differ, and by one thing alone at the start."""
+        start_differs = isinstance(self.initial, NoiseSettings)
+        perturbed = self.ensemble.perturbation is not None
+        if start_differs and perturbed:
+            yield (
+                '[ensemble.perturbation] has no meaning with [initial] kind = "noise", '
+                "whose members start differently by themselves; leave it out"
+            )
+        random = self.stirring is not None or any(
+            is_random(pattern) for pattern in self.forcing.values()
+        )
+        if self.ensemble.members > 1 and not (start_differs or perturbed or random):
+            yield (
+                f"[ensemble] members = {self.ensemble.members} would all be the same "
+                "run: nothing of it is random; add a table [ensemble.perturbation] "
+                "with energy and band"
+            )
 
 
 def _divides(step: float, interval: float) -> bool:

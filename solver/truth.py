@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import logging
+import math
+import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -11,39 +13,44 @@ from typing import Any
 import numpy as np
 
 from .build import build_ocean, build_with
-from .config import as_table
-from .errors import Blowup, RunFolderError
+from .errors import Blowup, DataError, EddyshedError, RunFolderError
 from .exponential import stepper_of
-from .initial import starting_state
+from .identity import truth_table
+from .initial import band_noise, starting_state
 from .integrate import guard, integrate
+from .locks import holding, member_lock
 from .random_forcing import RandomForcing, random_forcing
+from .randomness import stream
 from .segments import MemberFiles
 from .settings import TruthConfig
 from .streams import Recorder, Stream, streams_of
 
 log = logging.getLogger(__name__)
 
-TRUTH_SECTIONS = (
-    "seed",
-    "grid",
-    "ocean",
-    "forcing",
-    "stirring",
-    "initial",
-    "time",
-    "output",
-)
+NOTE_EVERY = 0.5  # seconds of wall time between words on how far a run is
 
 
 def initial_state(config: TruthConfig, ocean: Any, member: int) -> np.ndarray:
     """State at time zero, shape (size,).
+
+    Every member but the first gets the config's perturbation, if there is one, from
+    a stream of its own.
 
     Raises
     ------
     DataError
         If it does not fit the ocean or its grid, or a file cannot be used.
     """
-    return starting_state(config.initial, ocean, seed=config.seed, member=member)
+    z = starting_state(config.initial, ocean, seed=config.seed, member=member)
+    perturbation = config.ensemble.perturbation
+    if perturbation is not None and member > 0:
+        rng = stream(config.seed, member, "perturbation")
+        try:
+            z += band_noise(ocean, perturbation.energy, perturbation.band, rng)
+        except DataError as error:
+            message = f"[ensemble.perturbation] {error}"
+            raise DataError(message) from error
+    return z
 
 
 def random_forcing_of(config: TruthConfig, ocean: Any, member: int) -> RandomForcing:
@@ -63,12 +70,6 @@ def random_forcing_of(config: TruthConfig, ocean: Any, member: int) -> RandomFor
         seed=config.seed,
         member=member,
     )
-
-
-def truth_table(config: TruthConfig) -> dict[str, object]:
-    """Return the part of the config that a truth run depends on, in SI."""
-    table = as_table(config)
-    return {key: table[key] for key in TRUTH_SECTIONS if key in table}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -91,6 +92,12 @@ class Plan:
     streams: list[Stream]
 
 
+def steps_of(config: TruthConfig) -> tuple[int, int]:
+    """Steps of the spin-up, and of the whole run."""
+    spin_up = round(config.time.spin_up / config.time.step)
+    return spin_up, spin_up + round(config.time.duration / config.time.step)
+
+
 def plan_of(
     config: TruthConfig, ocean: Any, random: RandomForcing | None = None
 ) -> Plan:
@@ -102,10 +109,10 @@ def plan_of(
     else:
         states = max(1, min(512, 64_000_000 // (8 * ocean.size)))
         segment = states * every
-    spin_up = round(config.time.spin_up / step)
+    spin_up, total = steps_of(config)
     return Plan(
         spin_up=spin_up,
-        total=spin_up + round(config.time.duration / step),
+        total=total,
         segment=segment,
         streams=streams_of(config.output, ocean, step, random),
     )
@@ -142,12 +149,23 @@ def run_member(
     Raises
     ------
     RunFolderError
-        If the folder holds a run of another config, or cannot be written.
+        If the folder holds a run of another config, cannot be written, was moved
+        away, or another process is at work on this member.
     DataError
         If a segment is damaged, or a pattern does not fit the grid.
     Blowup
         If the run blows up. The segments written so far remain.
     """
+    with holding(member_lock(folder, member)) as lock:
+        try:
+            return _run(config, member, folder, lock, stop, progress)
+        except EddyshedError as error:
+            lock.note(failed=str(error))
+            raise
+
+
+def _run(config, member, folder, lock, stop, progress):
+    """Carry out `run_member`, its lock in hand."""
     ocean = build_ocean(config)
     random = random_forcing_of(config, ocean, member)
     plan = plan_of(config, ocean, random)
@@ -159,7 +177,7 @@ def run_member(
         streams=plan.streams,
         output=config.output,
         ocean=ocean,
-        table=truth_table(config),
+        table=truth_table(config, member),
         title=config.name,
         total=plan.total,
     )
@@ -188,16 +206,24 @@ def run_member(
         push=random.push,
         stir=random.stir,
     )
+    noted = -math.inf
     try:
         # A state on its way out overflows before it is caught: say so once, well.
         with np.errstate(over="ignore", invalid="ignore"):
             for step in advance:
                 recorder.record(step, step * step_length, z)
                 stopping = stop()
+                now = time.monotonic()
+                if now - noted > NOTE_EVERY:
+                    noted = now
+                    lock.note(step=step)
+                    progress(step)
                 if step % plan.segment == 0 or step == plan.total or stopping:
                     # A checkpoint is a promise that the run can go on from it.
                     guard(z, step, step_length, config.time.energy_bound)
+                    lock.check_place()
                     files.add(step, recorder, z, random)
+                    lock.note(step=step)
                     progress(step)
                 if stopping:
                     break
