@@ -76,9 +76,8 @@ def measure_flow(
 
     Notes
     -----
-    Errors of spectra, fluxes, budgets and measures are those of `mean_of`, by the
-    effective size of each series; those of fields come from the scatter of the
-    means of 20 stretches of each record.
+    Errors of spectra, fluxes, budgets and measures are those of `mean_of`; those of
+    fields come from the scatter of the means of 20 stretches of each record.
     """
     first = records[0]
     count = len(first.times)
