@@ -53,6 +53,8 @@ def describe(path: Path) -> dict[str, str]:
             facts.update(_truth(file))
         else:
             facts["parts"] = ", ".join(file)
+        if facts["kind"] == "flow":
+            facts["means over"] = _sampling(file["sampling"].attrs)
         return facts
 
 
@@ -81,6 +83,15 @@ def _truth(file):
                 words += f", every {format_quantity(times[1] - times[0], 's')}"
             facts[name.removesuffix("time").rstrip("_") or "state"] = words
     return facts
+
+
+def _sampling(found):
+    """What the means of a flow come from."""
+    return (
+        f"{found['recorded']} states of each of {found['members']} member(s); spectra, "
+        f"fluxes and gyres over {found['sampled']}, one every "
+        f"{format_quantity(float(found['interval']), 's')}"
+    )
 
 
 def _folder(path):

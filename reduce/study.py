@@ -105,7 +105,7 @@ class Stage:
     Attributes
     ----------
     name : str
-        Its name, also that of the command.
+        Its name, also that of the command if it has one of its own.
     sections : tuple of str
         Top-level config keys that it depends on by itself.
     after : tuple of str

@@ -174,10 +174,19 @@ def spectral_flux(
     for the energy (Frisch, Turbulence, 1995, section 2.4) and the ocean's
     `enstrophy_weights` for the enstrophy (Kraichnan 1967, Phys. Fluids 10:1417).
     """
+    return spectral_fluxes(ocean, states)[quantity]
+
+
+def spectral_fluxes(ocean: Flow, states: np.ndarray) -> dict[str, np.ndarray]:
+    """Both of :func:`spectral_flux`, by name, from one evaluation of the advection."""
     transfer = np.multiply(states, ocean.bilinear(states, states))
-    if quantity == "enstrophy":
-        transfer *= ocean.enstrophy_weights
-    return -np.cumsum(_binned(transfer, shells(ocean).index), axis=-1)
+    index = shells(ocean).index
+    return {
+        "energy": -np.cumsum(_binned(transfer, index), axis=-1),
+        "enstrophy": -np.cumsum(
+            _binned(transfer * ocean.enstrophy_weights, index), axis=-1
+        ),
+    }
 
 
 def _binned(values, bins):

@@ -29,9 +29,13 @@ def mean_of(series: np.ndarray, step: float) -> Estimate:
 
     Notes
     -----
-    The squared error is the variance over the effective size less one, since the
-    variance about the mean of the record lacks that part; the effective size is
-    that of `eddyshed.reduce.statistics.correlation.effective_size` for a mean.
+    The larger of two errors. One squared is the variance over the effective size
+    less one, since the variance about the mean of the record lacks that part; the
+    effective size is that of `eddyshed.reduce.statistics.correlation.effective_size`
+    for a mean. It ends where the correlation first falls, and so misses a slow change
+    behind a fast oscillation, as of gyres that pulsate. The other is that of batch
+    means (20 of all members), which sees it. Where both are right, the larger of
+    the two is some 6 % too large.
     """
     low, high = series.min(axis=(0, 1)), series.max(axis=(0, 1))
     # What is constant but for round-off has no correlation function.
@@ -42,16 +46,25 @@ def mean_of(series: np.ndarray, step: float) -> Estimate:
         size = effective_size(chosen, step).mean
         with np.errstate(divide="ignore"):
             squared = chosen.var(axis=(0, 1)) / np.maximum(size.value - 1, 0.0)
-        error[varies] = np.where(np.isfinite(size.error), np.sqrt(squared), np.inf)
+        scatter = of_batches(_batch_means(chosen), chosen.mean(axis=(0, 1))).error
+        known = np.maximum(np.sqrt(squared), scatter)
+        error[varies] = np.where(np.isfinite(size.error), known, np.inf)
     return Estimate(series.mean(axis=(0, 1)), error)
 
 
-def batch_edges(count: int) -> np.ndarray:
+def _batch_means(series):
+    """Means of 20 batches of whole or parts of members, shape (batch, column)."""
+    edges = batch_edges(series.shape[1], max(1, BATCHES // len(series)))
+    sums = np.add.reduceat(series, edges[:-1], axis=1)
+    return (sums / np.diff(edges)[:, np.newaxis]).reshape(-1, series.shape[2])
+
+
+def batch_edges(count: int, most: int = BATCHES) -> np.ndarray:
     """Cut a record of `count` samples into equal parts; first index of each, and end.
 
-    There are 20 parts, or fewer if they would hold less than two samples.
+    There are `most` parts, or fewer if they would hold less than two samples.
     """
-    batches = max(1, min(BATCHES, count // 2))
+    batches = max(1, min(most, count // 2))
     return np.round(np.linspace(0, count, batches + 1)).astype(int)
 
 

@@ -12,7 +12,7 @@ from eddyshed.solver.record import TruthRecord
 from eddyshed.solver.spectra import (
     shells,
     spectra_by_part,
-    spectral_flux,
+    spectral_fluxes,
     zonal_spectrum,
 )
 
@@ -30,7 +30,7 @@ from .parts import (
 
 # States that spectra, fluxes and gyres are evaluated on. What eddies forget between
 # two of them counts in full, and what remembers longer is not told better by more.
-SAMPLES = 2000
+SAMPLES = 1000
 BLOCKS = 400  # of a series: as many as a column of print can show
 SPAN = 4.0  # a power law is drawn if it holds over such a range of wavenumbers
 RINGS = 8  # and as many rings at least: any curve is straight over a few,
@@ -76,9 +76,8 @@ def measure_flow(
 
     Notes
     -----
-    Errors of spectra, fluxes, budgets and measures are those of `mean_of`, by the
-    effective size of each series; those of fields come from the scatter of the
-    means of 20 stretches of each record.
+    Errors of spectra, fluxes, budgets and measures are those of `mean_of`; those of
+    fields come from the scatter of the means of 20 stretches of each record.
     """
     first = records[0]
     count = len(first.times)
@@ -135,25 +134,15 @@ def _walk(ocean, record, every):
     """Mean and last state of a record, batch means, and what was sampled of it."""
     edges = batch_edges(len(record.times))
     batches = np.zeros((len(edges) - 1, record.size))
-    evaluate = {
-        "parts": lambda z: spectra_by_part(ocean, z),
-        **{
-            quantity: (lambda z, name=quantity: spectral_flux(ocean, z, name))
-            for quantity in LEVELS
-        },
-    }
-    if ocean.space.x_is_periodic:
-        evaluate["zonal"] = lambda z: zonal_spectrum(ocean, z)
-    elif not ocean.space.y_is_periodic:
-        evaluate["gyres"] = lambda z: _gyres(ocean, z)
-    sampled: dict[str, list] = {name: [] for name in evaluate}
+    sampled: dict[str, list] = {}
     for where, states in record.chunks():
         place = np.searchsorted(edges, np.arange(where.start, where.stop), "right") - 1
         first = np.flatnonzero(np.diff(place, prepend=-1))
         batches[place[first]] += np.add.reduceat(states, first, axis=0)
         chosen = states[-where.start % every :: every]
-        for name, function in evaluate.items() if len(chosen) else ():
-            sampled[name].append(function(chosen))
+        if len(chosen):
+            for name, values in _evaluated(ocean, chosen).items():
+                sampled.setdefault(name, []).append(values)
         last = states[-1].copy()
     return {
         "mean": batches.sum(axis=0) / len(record.times),
@@ -161,6 +150,16 @@ def _walk(ocean, record, every):
         "last": last,
         "sampled": {name: np.concatenate(rows) for name, rows in sampled.items()},
     }
+
+
+def _evaluated(ocean, states):
+    """What is sampled of some states, each with the axis of time first."""
+    found = {"parts": spectra_by_part(ocean, states), **spectral_fluxes(ocean, states)}
+    if ocean.space.x_is_periodic:
+        found["zonal"] = zonal_spectrum(ocean, states)
+    elif not ocean.space.y_is_periodic:
+        found["gyres"] = _gyres(ocean, states)
+    return found
 
 
 def _gyres(ocean, states):
@@ -171,7 +170,7 @@ def _gyres(ocean, states):
     ]
     return np.array(
         [(g.greatest, g.least, g.greatest_at[0], g.least_at[0]) for g in found]
-    ).reshape(-1, len(GYRES))
+    )
 
 
 def _spectrum(ocean, parts, interval):

@@ -85,8 +85,12 @@ def spectra(
                 label=f"power law, {found.slope:.2f}",
             )
         _mark_whole(axes, found.width * scale, last, found.complete)
+        # Said here, for a flow at rest has no point on logarithmic axes.
+        edge = found.width * scale
+        axes.set_xlim(0.9 * edge, 1.05 * max(last - 1, 2) * edge)
         _wavenumber_axes(axes, scale, name)
-        axes.set_yscale("log")
+        if np.any(found.energy > 0):
+            axes.set_yscale("log")
         axes.set_ylabel(f"energy density [{in_math('m3 s-2')}]")
         if len(curves) > 1 or found.slope_from > 0:
             axes.legend()

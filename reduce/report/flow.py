@@ -10,7 +10,7 @@ from eddyshed.solver.quantities import format_quantity
 from ..statistics.estimate import Estimate
 from .evidence import Evidence
 from .flow_fields import last_state
-from .flow_scales import scales
+from .flow_scales import ERRORS, scales
 from .markup import (
     Note,
     listed,
@@ -162,11 +162,10 @@ def _budget_table(note, evidence):
         ["mean over the record", "value"],
         groups,
         caption=f"Budgets of {listed(list(evidence.flow.budget))}: sources are "
-        "positive, sinks negative. Standard errors "
-        "from the effective sample size of each series. The residual, change less all "
-        "sources and sinks, is what the sampled record fails to account for: zero but "
-        f"for the interval of the record ({span(evidence.flow.sampling.step)}) and the "
-        f"errors of the time step.{asked}",
+        f"positive, sinks negative. Standard errors{ERRORS}. The residual, change less "
+        "all sources and sinks, is what the sampled record fails to account for: zero "
+        f"but for the interval of the record ({span(evidence.flow.sampling.step)}) and "
+        f"the errors of the time step.{asked}",
     )
 
 
@@ -198,8 +197,8 @@ def _measures(note, evidence):
         ["measure", "unit", "mean", "least", "greatest"],
         [rows],
         words=(0, 1),
-        caption="Other measures of the flow over the record. Standard errors from "
-        f"the effective sample size of each series.{sampled}",
+        caption="Other measures of the flow over the record. Standard "
+        f"errors{ERRORS}.{sampled}",
     )
     if not shown:
         return table

@@ -8,6 +8,8 @@ from ..flow.parts import Flow
 from .evidence import Evidence
 from .markup import Note, listed, number, numbers, span, unit
 
+# Whose errors they are; see `eddyshed.reduce.flow.means.mean_of`.
+ERRORS = ", by effective sample size or 20 batch means, whichever is larger"
 SHOWN = 16  # rows of a table that stands in for a picture
 
 
@@ -77,10 +79,9 @@ def _spectra(note, flow, longest):
         f"{_share(found.energy, peak)} % of the energy, lies at a wavelength of "
         f"{long}.",
         caption=f"Spectrum of the energy: {', '.join(parts)}. The area under a curve "
-        f"is its energy. {_sampling(flow)}; grey: two standard errors to either side, "
-        "from the effective sample size of each ring's own series. Rings of total "
-        f"wavenumber, one spacing wide; beyond those shown lie {100 * cut:.1g} % of "
-        f"the energy.{_whole(found, last)} {law}",
+        f"is its energy. {_sampling(flow)}; grey: two standard errors to either side"
+        f"{ERRORS}. Rings of total wavenumber, one spacing wide; beyond "
+        f"those shown lie {100 * cut:.1g} % of the energy.{_whole(found, last)} {law}",
         numbers=_spectra_table(found, zonal, last),
     )
 
@@ -142,8 +143,8 @@ def _fluxes(note, flow, longest):
         "Above zero it goes to smaller scales, below to larger ones; where a curve "
         "falls, advection feeds the scales there. "
         f"{' '.join(html for _, html in words)} {_sampling(flow)}; grey: two standard "
-        "errors to either side, from the effective sample size of each flux's own "
-        "series. What forcing, friction and linear terms do is not in it."
+        f"errors to either side{ERRORS}. What forcing, friction and linear terms do is "
+        "not in it."
         f"{_whole(flow.spectrum, last)}",
         numbers=numbers(
             [

@@ -339,6 +339,7 @@ class TestFile:
         facts = describe(written[0])
         assert facts["kind"] == "flow"
         assert {"spectrum", "flux", "budget"} <= set(facts["parts"].split(", "))
+        assert facts["means over"].startswith("60 states of each of 1 member(s)")
 
     def test_a_part_that_is_missed_is_named(self, written, tmp_path):
         path = tmp_path / "flow.h5"

@@ -334,6 +334,29 @@ class TestFlow:
         assert ("Thick lines are walls" in found) == (space != "periodic")
         assert ("not to the scale" in found) == (kind is FLUID)
 
+    def test_a_flow_at_rest_is_drawn(self, tmp_path):
+        evidence = flow_of(f'space = "basin"\n{SEA}', LAYER, tmp_path / "flow")
+        still = dataclasses.replace(
+            evidence.flow.spectrum, energy=0 * evidence.flow.spectrum.energy
+        )
+        evidence.flow = dataclasses.replace(evidence.flow, spectrum=still)
+        html = flow(Note(drawing=figures_module()), evidence)
+        assert len(Walk(html).tags("img")) == 5
+
+    def test_without_pictures_spectra_and_fluxes_are_numbers(self, tmp_path):
+        evidence = flow_of(f'space = "channel"\n{SEA}', LAYER, tmp_path / "flow")
+        html = flow(Note(drawing=None), evidence)
+        walk = Walk(html)
+        assert walk.open == []
+        assert walk.tags("img") == []
+        for part, column in (("flux", "enstrophy flux"), ("spectrum", "energy [")):
+            assert column in re.sub(r"<[^>]*>", "", html), part
+        spectrum = evidence.flow.spectrum
+        shown = number(spectrum.energy[1], spectrum.energy_error[1])
+        flux = evidence.flow.flux["energy"]
+        assert f">{shown}<" in html
+        assert f">{number(flux.flux[1], flux.flux_error[1])}<" in html
+
 
 class TestContent:
     def test_opens_with_what_was_done_and_a_caution(self, html):

@@ -105,6 +105,10 @@ class Shelled:
     space: object
 
     @property
+    def enstrophy_weights(self):
+        return 1.0 + np.arange(self.size)
+
+    @property
     def size(self):
         return self.toy.size
 
