@@ -99,9 +99,7 @@ def budget_of(
     -----
     Rates are integrated by the trapezoidal rule. Errors are those of 20 batch
     means (fewer if a batch would hold under two records), which is right when
-    a batch is long against the correlation of the rates. Of what random
-    forcing feeds a run records the energy alone: its enstrophy is in the
-    residual.
+    a batch is long against the correlation of the rates.
     """
     level, change, gains = rates_of(times, series, units, quantity)
     steps = np.diff(times)

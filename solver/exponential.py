@@ -9,6 +9,7 @@ from typing import Any, Protocol
 import numpy as np
 
 from .errors import DataError
+from .stability import refuse_unstable_step
 from .stepping import INSET, IntegratingFactorRK4, Stepper, with_push
 
 NEAR_ZERO = 2.0  # below it the closed forms lose digits; the series has none to lose
@@ -167,9 +168,10 @@ def stepper_of(scheme: str, ocean: Any, step: float) -> Stepper:
     ------
     DataError
         If exponential differencing is asked of an ocean that does not give
-        functions of its linear part.
+        functions of its linear part, or linear waves would grow at this step.
     """
     if scheme == SCHEMES[0]:
+        refuse_unstable_step(IntegratingFactorRK4, ocean, step)
         return IntegratingFactorRK4(ocean, step)
     if getattr(ocean, "linear_function", None) is None:
         message = (
@@ -177,4 +179,5 @@ def stepper_of(scheme: str, ocean: Any, step: float) -> Stepper:
             f'this ocean does not give; use scheme = "{SCHEMES[0]}"'
         )
         raise DataError(message)
+    refuse_unstable_step(ExponentialDifferencingRK4, ocean, step)
     return ExponentialDifferencingRK4(ocean, step)

@@ -1,8 +1,9 @@
 """All random forcing of one run: gusts and white stirring, and what they fed.
 
 None of it is part of F. Gusts push the state during a step, stirring kicks it
-between steps. The energy that each feeds is summed up step by step, because no
-record of the state could give it: the state and the noise are correlated.
+between steps. The energy and the enstrophy that each feeds are summed up step by
+step, because no record of the state could give them: the state and the noise are
+correlated.
 """
 
 from __future__ import annotations
@@ -36,22 +37,27 @@ class RandomForcing:
         White stirring, if there is any.
     stirring_rng : numpy.random.Generator
         Its stream.
-    fed : dict of str to float
-        Energy fed by ``gusts`` and by ``stirring`` since the start of the run
-        [m2 s-2]; only those that there are.
+    enstrophy_weights : ndarray, shape (size,)
+        Enstrophy is ``sum(weights * z * z) / 2`` [m-2].
+    fed, fed_enstrophy : dict of str to float
+        Energy [m2 s-2] and enstrophy [s-2] fed by ``gusts`` and by ``stirring``
+        since the start of the run; only those that there are.
     """
 
     step: float
     gusts: dict[str, GustProcess]
     stirring: StirringNoise | None
     stirring_rng: np.random.Generator
+    enstrophy_weights: np.ndarray
     fed: dict[str, float] = field(init=False)
+    fed_enstrophy: dict[str, float] = field(init=False)
     _before: np.ndarray | None = field(init=False, default=None)
     _push: np.ndarray | None = field(init=False, default=None)
 
     def __post_init__(self):
         acting = {"gusts": bool(self.gusts), "stirring": self.stirring is not None}
         self.fed = {name: 0.0 for name, acts in acting.items() if acts}
+        self.fed_enstrophy = dict(self.fed)
 
     def push(self, z: np.ndarray) -> np.ndarray | None:
         """Mean tendency of all gusts over the step that is about to be made.
@@ -87,25 +93,42 @@ class RandomForcing:
             # trapezoidal rule is of order two, like the gusts themselves.
             middle = self._before + z
             self.fed["gusts"] += self.step / 2 * float(self._push @ middle)
+            middle *= self.enstrophy_weights
+            self.fed_enstrophy["gusts"] += self.step / 2 * float(self._push @ middle)
         if self.stirring is not None:
+            before = z.copy()
             self.fed["stirring"] += self.stirring.add(z, self.stirring_rng)
+            # The kick, and twice the state half way through it.
+            kick, middle = z - before, z + before
+            middle *= self.enstrophy_weights
+            self.fed_enstrophy["stirring"] += float(kick @ middle) / 2
 
     def fed_units(self) -> dict[str, tuple[str, str]]:
         """Units and long names of what :meth:`fed_so_far` returns."""
+        units = {"energy": "m2 s-2", "enstrophy": "s-2"}
         return {
-            f"energy{FED}{name}": ("m2 s-2", f"energy fed by {name} since the start")
+            quantity + FED + name: (unit, f"{quantity} fed by {name} since the start")
+            for quantity, unit in units.items()
             for name in self.fed
         }
 
     def fed_so_far(self) -> dict[str, float]:
-        """Energy fed since the start of the run [m2 s-2], for the record."""
-        return {f"energy{FED}{name}": value for name, value in self.fed.items()}
+        """Energy and enstrophy fed since the start of the run, for the record."""
+        both = {"energy": self.fed, "enstrophy": self.fed_enstrophy}
+        return {
+            quantity + FED + name: value
+            for quantity, fed in both.items()
+            for name, value in fed.items()
+        }
 
     def arrays(self) -> dict[str, np.ndarray]:
         """All numbers that go into a checkpoint, by name."""
         found = {f"gust {name}": gust.value for name, gust in self.gusts.items()}
         found |= {f"fed {name}": np.array(value) for name, value in self.fed.items()}
-        return found
+        return found | {
+            f"fed enstrophy {name}": np.array(value)
+            for name, value in self.fed_enstrophy.items()
+        }
 
     def streams(self) -> dict[str, np.random.Generator]:
         """All random streams that go into a checkpoint, by name."""
@@ -126,7 +149,9 @@ class RandomForcing:
         """
         for name, gust in self.gusts.items():
             gust.value = np.array(arrays[f"gust {name}"])
-        self.fed = {name: float(arrays[f"fed {name}"]) for name in self.fed}
+        for name in self.fed:
+            self.fed[name] = float(arrays[f"fed {name}"])
+            self.fed_enstrophy[name] = float(arrays[f"fed enstrophy {name}"])
         for name, generator in self.streams().items():
             generator.bit_generator.state = streams[name]
 
@@ -200,4 +225,5 @@ def random_forcing(
         gusts=gusts,
         stirring=noise,
         stirring_rng=stream(seed, member, "stirring"),
+        enstrophy_weights=ocean.enstrophy_weights,
     )

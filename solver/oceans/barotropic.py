@@ -172,7 +172,12 @@ class Barotropic:
 
     def inner_product(self, name: str) -> InnerProduct:
         """Inner product of a name: energy, l2 or enstrophy."""
-        return quasigeostrophic(name, self._stiffness)
+        return quasigeostrophic(name, self.enstrophy_weights)
+
+    @property
+    def enstrophy_weights(self) -> np.ndarray:
+        """Weights w of the enstrophy, ``sum(w * z * z) / 2`` [m-2], shape (size,)."""
+        return self._stiffness
 
     @property
     def fastest_frequency(self) -> float:

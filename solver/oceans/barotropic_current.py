@@ -162,6 +162,11 @@ class BarotropicCurrent:
         why = "a uniform current has no streamfunction or vorticity that repeats"
         return energy_alone(name, self.size, why)
 
+    @property
+    def enstrophy_weights(self) -> np.ndarray:
+        """Weights w of the enstrophy, ``sum(w * z * z) / 2`` [m-2], shape (size,)."""
+        return np.append(self.eddies.enstrophy_weights, 0.0)
+
     def explicit_linear(self, z: np.ndarray) -> np.ndarray:
         """Part of A z that is stepped explicitly [m s-2], shape (..., size)."""
         eddies, current = z[..., :-1], z[..., -1]
@@ -242,7 +247,7 @@ class BarotropicCurrent:
         """
         eddies, current = z[:-1], float(z[-1])
         found = self.eddies.budget(t, eddies)
-        weights = self.eddies.inner_product("enstrophy").weights
+        weights = self.eddies.enstrophy_weights
         found["energy"] += current**2 / 2
         return found | {
             "current_energy": current**2 / 2,

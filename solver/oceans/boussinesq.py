@@ -198,6 +198,12 @@ class Boussinesq:
         return energy_alone(name, self.size, why)
 
     @property
+    def enstrophy_weights(self) -> np.ndarray:
+        """Weights w of the enstrophy, ``sum(w * z * z) / 2`` [m-2], shape (size,)."""
+        flow = np.arange(self.size) < self.space.n_real
+        return np.where(flow, np.tile(self.space.k_squared, self.n_fields), 0.0)
+
+    @property
     def damping(self) -> np.ndarray:
         """Rate at which friction or diffusion damps each coordinate, shape (size,)."""
         return -np.concatenate([self._blocks[:, i, i] for i in range(self.n_fields)])

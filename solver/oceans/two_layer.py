@@ -216,7 +216,12 @@ class TwoLayer:
 
     def inner_product(self, name: str) -> InnerProduct:
         """Inner product of a name: energy, l2 or enstrophy, of both layers."""
-        return quasigeostrophic(name, np.square(self._root).ravel())
+        return quasigeostrophic(name, self.enstrophy_weights)
+
+    @property
+    def enstrophy_weights(self) -> np.ndarray:
+        """Weights w of the enstrophy, ``sum(w * z * z) / 2`` [m-2], shape (size,)."""
+        return np.square(self._root).ravel()
 
     def frequencies(self) -> np.ndarray:
         """Complex frequencies of the linear waves [s-1], those that grow first.

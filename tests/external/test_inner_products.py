@@ -13,6 +13,7 @@ from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.settings import EofSettings, FourierSettings
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
+from eddyshed.solver.oceans.barotropic_current import BarotropicCurrent
 from eddyshed.solver.oceans.boussinesq import Boussinesq
 from eddyshed.solver.oceans.boussinesq_waves import BoussinesqSettings
 from eddyshed.solver.oceans.two_layer import TwoLayer, TwoLayerSettings
@@ -199,6 +200,20 @@ def test_galerkin_tensors_are_projections_in_the_product(kind, name, product):
         pushed = model.linear(vectors[:, i])
         expected = mean_product(model, product, others[:, m], pushed)
         assert abs(found.A21[m, i] - expected) < 1e-12 * fastest
+
+
+def test_enstrophy_is_the_form_that_counts_what_random_forcing_feeds():
+    # The weights against each ocean's own enstrophy; of a slice, that of the flow.
+    slices = BoussinesqSettings(buoyancy_gradient=1.0, coriolis=0.5)
+    free = BarotropicSettings(beta=2.0, mean_current_evolves=True)
+    models = [ocean(kind, name) for kind, name in OCEANS]
+    models.append(Boussinesq(slices, Periodic((8, 8), BOX)))
+    models.append(BarotropicCurrent(free, Periodic((8, 8), BOX)))
+    for model in models:
+        z = np.random.default_rng(7).standard_normal(model.size)
+        found = np.sum(model.enstrophy_weights * z * z) / 2
+        # Round-off of sums of 10^2 terms.
+        assert found == pytest.approx(model.budget(0.0, z)["enstrophy"], rel=1e-12)
 
 
 def test_what_makes_no_sense_is_refused_with_the_reason():

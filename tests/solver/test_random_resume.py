@@ -156,12 +156,19 @@ def test_budget_with_all_kinds_of_forcing_closes(whole):
     record = open_record(whole / "member-000.h5")
     series, units = record.read_budget(), record.budget_units()
     assert units["energy_fed_by_gusts"] == units["energy"] == "m2 s-2"
+    assert units["enstrophy_fed_by_gusts"] == units["enstrophy"] == "s-2"
     found = budget_of(record.times, series, units)
     assert {"work", "gusts", "stirring"} <= set(found.terms)
     # All of them matter, and what is left is small: the record's interval of half a
     # day samples the work and the friction by the trapezoidal rule.
     turnover = sum(abs(term.value) for term in found.terms.values())
     for name in ("work", "gusts", "stirring"):
+        assert abs(found.terms[name].value) > 0.01 * turnover
+    assert abs(found.residual.value) < 0.01 * turnover
+    found = budget_of(record.times, series, units, "enstrophy")
+    assert {"enstrophy_work", "gusts", "stirring"} <= set(found.terms)
+    turnover = sum(abs(term.value) for term in found.terms.values())
+    for name in ("enstrophy_work", "gusts", "stirring"):
         assert abs(found.terms[name].value) > 0.01 * turnover
     assert abs(found.residual.value) < 0.01 * turnover
 
