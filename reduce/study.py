@@ -91,7 +91,7 @@ class Study:
 
     def record(self) -> TruthRecord:
         """Record of the first member of the truth."""
-        return self.records()[0]
+        return open_records(self.truth_folder, [0])[0]
 
     def records(self) -> list[TruthRecord]:
         """Records of all members of the truth, by number."""
@@ -115,7 +115,8 @@ class Stage:
     after : tuple of str
         Stages that it reads from.
     outputs : tuple of str
-        The files that it makes, the one that is written last at the end.
+        The files that it makes, the one that is written last at the end. Those of
+        the truth are told by its members.
     run : callable
         ``run(study, fingerprint)``.
     """

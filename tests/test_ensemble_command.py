@@ -17,6 +17,7 @@ from eddyshed.reduce.cli import main
 from eddyshed.reduce.show import describe
 from eddyshed.solver.ensemble import run_ensemble
 from eddyshed.solver.locks import holding, member_lock
+from eddyshed.solver.record import open_records
 from eddyshed.solver.segments import reached_step
 
 COMMAND = Path(sys.executable).with_name("eddyshed")
@@ -228,3 +229,25 @@ def test_the_log_tells_times_and_versions(tmp_path):
     text = (tmp_path / "ensemble/study.log").read_text(encoding="utf-8")
     for words in ("eddyshed ", "Python ", "numpy ", "h5py ", "member 0: done"):
         assert words in text
+
+
+def test_the_overnight_config_cut_down(tmp_path, capsys):
+    overnight = Path(__file__).parents[1] / "configs/overnight.toml"
+    options = []
+    for text in (
+        "grid.points=[32, 32]",
+        "stirring.band=[4, 6]",
+        "ensemble.perturbation.band=[4, 6]",
+        "ensemble.members=3",
+        "time.spin_up=20 d",
+        "time.duration=60 d",
+        "output.checkpoint_every=20 d",
+    ):
+        options += ["--set", text]
+    common = [str(overnight), "--runs", str(tmp_path), *options]
+    assert main(["check", *common]) == 0
+    assert "3, 2 at a time" in capsys.readouterr().out
+    assert main(["truth", *common]) == 0
+    assert "3 members: 3 done" in capsys.readouterr().out
+    records = open_records(tmp_path / "overnight/truth")
+    assert [len(record.times) for record in records] == [7] * 3

@@ -205,6 +205,16 @@ def test_a_stop_reaches_the_workers_and_a_resumed_member_is_the_same(tmp_path):
     assert_same_bits(folder, again, [0])
 
 
+def test_workers_have_one_thread_and_the_parent_its_environment(monkeypatch):
+    monkeypatch.delenv("OPENBLAS_NUM_THREADS", raising=False)
+    monkeypatch.setenv("OMP_NUM_THREADS", "3")  # whoever sets it means it
+    with opened_executor(config_of().engine, 1) as executor:
+        names = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS")
+        found = [executor.submit(os.getenv, name).result(60) for name in names]
+    assert found == ["1", "3"]
+    assert "OPENBLAS_NUM_THREADS" not in os.environ
+
+
 def test_a_stop_file_stops_a_worker_before_it_begins(tmp_path):
     sign = tmp_path / "stop"
     sign.touch()
