@@ -250,12 +250,7 @@ def _stage(options):
 
     preflight(document.config, options.command)
 
-    if not options.quiet:
-        handler = logging.StreamHandler(sys.stderr)
-        handler.setFormatter(logging.Formatter("%(message)s"))
-        logging.getLogger("eddyshed").addHandler(handler)
-    logging.getLogger("eddyshed").setLevel(logging.INFO)
-    with _signals() as caught:
+    with _log_on_stderr(options.quiet), _signals() as caught:
         study = Study(
             document=document,
             folder=options.runs / document.config.name,
@@ -288,6 +283,20 @@ def _stage(options):
 def _print(result):
     """Print a table, or plain data as JSON."""
     print(result if isinstance(result, str) else json.dumps(result, indent=1))
+
+
+@contextmanager
+def _log_on_stderr(quiet):
+    """Show what goes on while the block runs."""
+    log = logging.getLogger("eddyshed")
+    log.setLevel(logging.INFO)
+    handler = logging.NullHandler() if quiet else logging.StreamHandler(sys.stderr)
+    handler.setFormatter(logging.Formatter("%(message)s"))
+    log.addHandler(handler)
+    try:
+        yield
+    finally:
+        log.removeHandler(handler)
 
 
 class _Caught:

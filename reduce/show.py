@@ -3,12 +3,18 @@
 from __future__ import annotations
 
 import json
+from collections import Counter
+from contextlib import suppress
 from pathlib import Path
 
-from eddyshed.solver.errors import DataError
+from eddyshed.solver.config import parse_config
+from eddyshed.solver.errors import ConfigError, DataError
 from eddyshed.solver.files import open_file
+from eddyshed.solver.locks import is_held, member_lock, noted
 from eddyshed.solver.quantities import format_quantity
+from eddyshed.solver.segments import member_paths, reached_step
 
+from .settings import StudyConfig
 from .store import read_json
 
 
@@ -49,7 +55,7 @@ def describe(path: Path) -> dict[str, str]:
             "title": str(file.attrs["title"]),
             "made by": str(file.attrs["source"]),
         }
-        if facts["kind"] in ("truth", "truth segment"):
+        if facts["kind"] in ("truth", "truth segment", "truth ensemble"):
             facts.update(_truth(file))
         else:
             facts["parts"] = ", ".join(file)
@@ -61,20 +67,22 @@ def describe(path: Path) -> dict[str, str]:
 def _truth(file):
     """Facts of a truth file."""
     config = json.loads(file.attrs["config_json"])
-    step, total = config["time"]["step"], int(file.attrs["steps_total"])
-    facts = {
-        "member": str(file.attrs["member"]),
+    step = config["time"]["step"]
+    facts = {"member": str(file.attrs["member"])} if "member" in file.attrs else {}
+    if "member" in file:
+        members = file["member"][...].tolist()
+        facts["members"] = ", ".join(map(str, members))
+        facts["members asked for"] = str(file.attrs["members_asked"])
+    facts |= {
         "ocean": str(config["ocean"]["kind"]),
         "grid": " x ".join(str(n) for n in config["grid"]["points"]),
         "box": " x ".join(format_quantity(v, "m") for v in config["grid"]["lengths"]),
     }
     if "steps_done" in file.attrs:
-        done = int(file.attrs["steps_done"])
-        facts["reached"] = (
-            f"{format_quantity(done * step, 's')} of "
-            f"{format_quantity(total * step, 's')}, {100 * done / total:.0f} %"
-            + (", complete" if file.attrs["complete"] else "")
-        )
+        done, total = int(file.attrs["steps_done"]), int(file.attrs["steps_total"])
+        facts["reached"] = _reached(done, total, step)
+        if file.attrs["complete"]:
+            facts["reached"] += ", complete"
     for name in ("time", "resolved_time", "fields_time"):
         if name in file and len(file[name]):
             times = file[name]
@@ -100,9 +108,23 @@ def _folder(path):
         message = f"{path}: not a run folder of ours (it holds no config.toml)"
         raise DataError(message)
     facts = {"run folder": path.name}
-    for file in sorted((path / "truth").glob("member-*.h5")):
-        facts[f"truth/{file.name}"] = describe(file).get("reached", "unknown")
+    truth = path / "truth"
+    there = {
+        int(found.stem.removeprefix(".").removeprefix("member-"))
+        for pattern in ("member-*.h5", ".member-*.lock")
+        for found in truth.glob(pattern)
+    }
+    asked = range(_members_asked(path / "config.toml"))
+    states = {m: _member(truth, m) for m in sorted(there.union(asked))}
+    if len(states) > 1:
+        counts = Counter(kind for kind, _ in states.values())
+        facts["members"] = f"{len(states)}: " + ", ".join(
+            f"{count} {kind}" for kind, count in counts.items()
+        )
+    for member, (kind, words) in states.items():
+        facts[f"member {member}"] = f"{kind}{words}"
     for name in (
+        *(["truth/ensemble.h5"] if len(states) > 1 else []),
         "flow.h5",
         "split.h5",
         "closures.h5",
@@ -112,3 +134,48 @@ def _folder(path):
     ):
         facts[name] = "there" if (path / name).is_file() else "not there yet"
     return facts
+
+
+def _members_asked(path):
+    """Members in the config that a run folder keeps; one if it cannot be read."""
+    text = path.read_text(encoding="utf-8")
+    mark = "# with --set "
+    overrides = [
+        line.removeprefix(mark) for line in text.splitlines() if line.startswith(mark)
+    ]
+    try:
+        config = parse_config(text, StudyConfig, str(path), overrides).config
+    except ConfigError:  # of another version: what is there is told all the same
+        return 1
+    return config.ensemble.members
+
+
+def _member(truth, member):
+    """State of a member in a word or two, and the rest of the sentence."""
+    lock = member_lock(truth, member)
+    note = noted(lock)
+    index, segments = member_paths(truth, member)
+    step, done = note.get("step"), reached_step(truth, member)
+    words = ""
+    if done:
+        with open_file(max(segments.glob("segment-*.h5"))) as file:
+            total = int(file.attrs["steps_total"])
+            length = json.loads(file.attrs["config_json"])["time"]["step"]
+        with suppress(DataError), open_file(index, kind="truth") as file:
+            total = int(file.attrs["steps_total"])  # it may have been made longer
+        words = f", last checkpoint at {_reached(done, total, length)}"
+        if done == total and not is_held(lock):
+            return "complete", f", {format_quantity(total * length, 's')}"
+    if is_held(lock):
+        return "at work", words + (f", now at step {step}" if step else "")
+    if "failed" in note:
+        return "failed", f"{words}: {note['failed']}"
+    return ("stopped", words) if done else ("not begun", "")
+
+
+def _reached(done, total, length):
+    """How far a run is, in words."""
+    return (
+        f"{format_quantity(done * length, 's')} of "
+        f"{format_quantity(total * length, 's')}, {100 * done / total:.0f} %"
+    )

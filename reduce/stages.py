@@ -283,7 +283,7 @@ STAGES = {
             name="truth",
             sections=(),
             after=(),
-            outputs=("truth/member-000.h5",),
+            outputs=(),
             run=run_truth,
         ),
         Stage(

@@ -111,7 +111,8 @@ class Stage:
     after : tuple of str
         Stages that it reads from.
     outputs : tuple of str
-        The files that it makes, the one that is written last at the end.
+        The files that it makes, the one that is written last at the end. Those of
+        the truth are told by its members.
     run : callable
         ``run(study, fingerprint)``.
     """

@@ -29,6 +29,8 @@ log = logging.getLogger(__name__)
 ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 ATTEMPTS = 3  # processes that a member may lose before it counts as failed
 
+PATIENCE = 10  # seconds in which a scheduler must answer
+
 
 class WorkerProcesses(Executor):
     """Processes of this machine, one call at a time in each, replaced when they die.
@@ -254,7 +256,7 @@ def _dask_executor(engine: DaskSettings) -> Iterator[Executor]:
         client = Client(
             engine.address,
             **({} if engine.address else {"scheduler_file": engine.scheduler_file}),
-            timeout=10,
+            timeout=PATIENCE,
             set_as_default=False,
         )
     except (OSError, ValueError, TimeoutError) as error:

@@ -197,6 +197,7 @@ def _run(config, member, folder, lock, stop, progress):
     if first_step == 0:
         recorder.record(0, 0.0, z)
     log.info("member %d: step %d of %d", member, first_step, plan.total)
+    lock.note(step=first_step)  # whatever an earlier run has left there
     advance = integrate(
         stepper,
         z,

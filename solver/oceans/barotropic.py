@@ -138,11 +138,6 @@ class Barotropic:
         return self.space.partners
 
     @property
-    def enstrophy_weights(self) -> np.ndarray:
-        """Weights w [m-2], shape (size,): the enstrophy is ``sum(w z^2) / 2``."""
-        return self._stiffness
-
-    @property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: part and integer wavenumbers."""
         return self.space.labels

@@ -158,12 +158,6 @@ class Boussinesq:
         )
 
     @property
-    def enstrophy_weights(self) -> np.ndarray:
-        """Weights w [m-2], shape (size,): the enstrophy is ``sum(w z^2) / 2``."""
-        k_squared = self.space.k_squared
-        return np.concatenate([k_squared, np.zeros(self.size - len(k_squared))])
-
-    @property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: field, part and integer wavenumbers in x, z."""
         return tuple(

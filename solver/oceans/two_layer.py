@@ -180,11 +180,6 @@ class TwoLayer:
         return np.concatenate([once, np.where(once < 0, -1, once + len(once))])
 
     @property
-    def enstrophy_weights(self) -> np.ndarray:
-        """Weights w [m-2], shape (size,): the enstrophy is ``sum(w z^2) / 2``."""
-        return np.square(self._root).ravel()
-
-    @property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: vertical mode, part and integer wavenumbers."""
         return tuple(
