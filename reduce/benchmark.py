@@ -122,8 +122,14 @@ def run_closure(
     duration = member_duration(config.benchmark, split.length)
     spin_up = SPIN_UP_TIMES * float(truth.summary.integral_time.value.max())
     skip = int(np.ceil(spin_up / interval))
+    # All members live by one clock, so they start at one phase of every season.
+    variation = getattr(model, "variation", None)
+    first = slice(None) if variation is None else variation.alike(split.times)
+    if variation is not None and variation.is_transient:
+        # Before and after are not alike: the same window of time as the truth.
+        first, skip, duration = [0], 0, (split.x.shape[1] - 1) * split.step
     n_steps = (skip + int(np.ceil(duration / interval))) * every
-    states = split.x.reshape(-1, split.x.shape[-1])
+    states = split.x[:, first].reshape(-1, split.x.shape[-1])
     starts = stream(seed, 0, f"starts of {model.name}").integers(
         len(states), size=members
     )
@@ -135,7 +141,8 @@ def run_closure(
         n_steps=n_steps,
         every=every,
         streams=[stream(seed, k, f"noise of {model.name}") for k in range(members)],
-        bound=LOST_BOUND * float(np.linalg.norm(states, axis=1).max()),
+        bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=2).max()),
+        start_time=split.start,
         progress=progress,
     )
     seconds = time.process_time() - before

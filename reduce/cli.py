@@ -164,7 +164,7 @@ def _check(options):
     from .study import free_bytes
     from .tables import forecast_json, forecast_table
 
-    preflight(document.config, "check")
+    preflight(document.config)
     found = forecast_run(document.config)
     free = free_bytes(options.runs)
     if options.json:
@@ -181,7 +181,7 @@ def _stage(options):
     from .study import Interrupted, Study, bring_up_to_date, opened
     from .tables import stage_json, stage_table
 
-    preflight(document.config, options.command)
+    preflight(document.config)
 
     if not options.quiet:
         handler = logging.StreamHandler(sys.stderr)

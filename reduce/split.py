@@ -34,6 +34,8 @@ class Split:
         Full tendency of the resolved coordinates [state unit s-1].
     step : float
         Interval between records [s].
+    start : float
+        Time of the first record, on the clock that forcing varies by [s].
     fine_x : ndarray, shape (member, fine_time, nx)
         Resolved coordinates at the interval of the fine stream, less the same
         mean; `x` itself where the stream does not hold them.
@@ -54,6 +56,12 @@ class Split:
     fine_step: float
     total_variance: float
     left_out_variance: float
+    start: float = 0.0
+
+    @property
+    def times(self) -> np.ndarray:
+        """Times of the records [s], the same for all members."""
+        return self.start + self.step * np.arange(self.x.shape[1])
 
     @property
     def shares(self) -> tuple[float, float, float]:
@@ -132,6 +140,7 @@ def split_truth(
         fine_step=step if fine_x is None else fine_step,
         total_variance=total,
         left_out_variance=max(0.0, total - kept),
+        start=float(records[0].times[0]),
     )
 
 

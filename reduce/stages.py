@@ -3,17 +3,18 @@
 from __future__ import annotations
 
 import logging
+from dataclasses import replace
+
+import numpy as np
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
-from eddyshed.solver.driven import is_random
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.segments import reached_step
-from eddyshed.solver.time_functions import Steady
 from eddyshed.solver.truth import (
     initial_state,
     plan_of,
@@ -40,35 +41,19 @@ from .study import Interrupted, Stage, Study, fingerprint_of
 log = logging.getLogger(__name__)
 
 
-def preflight(config: StudyConfig, command: str) -> None:
+def preflight(config: StudyConfig) -> None:
     """Refuse now what would fail only after the truth was run.
 
     Parameters
     ----------
     config : StudyConfig
         The config.
-    command : str
-        The command that was given: a truth run may do what a reduction of it
-        cannot.
 
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, or a reduction
-        is asked for under a forcing that varies.
+        If a pattern, a band or the basis does not fit the grid.
     """
-    varying = [
-        name
-        for name, pattern in config.forcing.items()
-        if not is_random(pattern) and not isinstance(pattern.time, Steady)
-    ]
-    if varying and command not in ("truth", "check"):
-        message = (
-            f"[forcing.{varying[0]}] varies in time, and the reduced models are made "
-            "for a steady forcing; make it steady, or run only the truth: eddyshed "
-            "truth"
-        )
-        raise DataError(message)
     ocean = build_ocean(config)
     initial_state(config, ocean, 0)
     random_forcing_of(config, ocean, 0)
@@ -125,6 +110,7 @@ def run_reduce(study: Study, stamp: str) -> None:
             split.resolved.vectors,
             split.unresolved.vectors,
             split.mean,
+            times=split.times,
             progress=lambda done, total: shown.to(done / total),
         )
     window = config.noise.window
@@ -142,8 +128,11 @@ def run_reduce(study: Study, stamp: str) -> None:
     match = config.noise.match
     if match == "auto":
         match = "product" if quadratic > linear else "integral"
+    variation, forced = operators.variation, np.zeros((len(split.times), y.shape[2]))
+    if variation is not None:
+        forced = variation.cycle(y, split.times)
     noise = fit_ornstein_uhlenbeck(
-        y,
+        y - forced,
         split.step,
         window=window,
         match=match,
@@ -158,8 +147,9 @@ def run_reduce(study: Study, stamp: str) -> None:
         covariance_y=covariance(y, y),
         covariance_xy=covariance(split.x, y),
         mean_calibration=config.closures.mean_calibration,
+        forced_covariance=covariance(forced[np.newaxis], forced[np.newaxis]),
     )
-    models = {name: closure(name)(data) for name in config.closures.use}
+    models = {name: _made(name, data) for name in config.closures.use}
     write_all(
         study.path("split.h5"),
         stamp,
@@ -174,6 +164,17 @@ def run_reduce(study: Study, stamp: str) -> None:
         "closures",
         {"operators": operators, "noise": noise, **models},
     )
+
+
+def _made(name, data):
+    """Make a closure; its notes say what a varying forcing means for it."""
+    model, variation = closure(name)(data), data.operators.variation
+    if variation is None:
+        return model
+    notes = variation.notes
+    if getattr(model, "variation", None) is None:
+        notes += ("this closure runs under the mean forcing: it takes no variation",)
+    return replace(model, notes=model.notes + notes)
 
 
 def read_split(study: Study) -> Split:

@@ -13,6 +13,7 @@ from importlib import import_module
 CLOSURES = {
     "bare": "truncation: the unresolved modes are set to zero",
     "bare_mean": "truncation: the unresolved modes are held at their mean",
+    "damped": "linear damping fitted to the unresolved tendency, without noise",
     "residual": "red noise and linear damping fitted to the unresolved tendency",
     "coloured": "the unresolved modes are simulated as the fitted noise, and "
     "driven and modulated by the resolved ones",
