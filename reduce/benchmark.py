@@ -11,14 +11,15 @@ import numpy as np
 
 from eddyshed.solver.randomness import stream
 
-from .closures import CLOSURES
+from .closures import about
 from .reduced import ReducedModel
-from .scores import Summary, Verdict, judge, score, summarise
+from .scores import SAMPLING, Summary, Verdict, judge, score, summarise
 from .settings import BenchmarkSettings, StudyConfig
 from .simulated import Simulated
 from .simulation import simulate, step_rule
 from .split import Split
 from .statistics.correlation import correlation_function
+from .statistics.estimate import Estimate
 from .store import plain
 
 LAGS = 120  # of the correlation functions that are kept for the report
@@ -152,7 +153,13 @@ def run_closure(
         step=interval,
         lost=trajectory.lost,
         cost=seconds / (n_steps * step * members),
+        noisy=_has_noise(model),
     )
+
+
+def _has_noise(model) -> bool:
+    """Whether anything random drives a model; any but a ReducedModel has noise."""
+    return not isinstance(model, ReducedModel) or bool(np.any(model.covariance))
 
 
 def compare(
@@ -177,8 +184,14 @@ def compare(
         for a model that gives no statistics.
     """
     labels = truth.split.resolved.labels
-    summary, scores, verdict = None, [], _failure(truth, run)
-    if verdict is None:
+    summary, scores, verdict = None, [], _lost(run)
+    at_rest = _at_rest(truth, run) if verdict is None else None
+    if at_rest is not None and at_rest.any() and not run.noisy:
+        verdict = _resting(config, truth, run, int(np.argmax(at_rest)))
+    elif at_rest is not None and at_rest.any():
+        mode = labels[int(np.argmax(at_rest))]
+        verdict = _failed(f"{mode} comes to rest: it has no variance")
+    elif verdict is None:
         rng = stream(config.seed, 0, f"scores of {name}")
         summary = summarise(run.series, run.step, rng)
         scores = score(
@@ -194,7 +207,7 @@ def compare(
         verdict = judge(scores, labels)
     return {
         "name": name,
-        "what": CLOSURES[name],
+        "what": about(name),
         "lost": [list(pair) for pair in run.lost],
         "cost": run.cost,
         "summary": plain(summary),
@@ -203,22 +216,59 @@ def compare(
     }
 
 
-def _failure(truth: TruthSide, run: Simulated) -> Verdict | None:
-    """Verdict on a model that gives no statistics, if that is so."""
-    labels = truth.split.resolved.labels
-    if run.lost:
-        first = min(when for _, when in run.lost)
-        reason = (
-            f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
-            f"{first / 86400:.4g} days"
-        )
-    else:
-        # Of each member by itself: they may have come to rest in different places.
-        variance = run.series.var(axis=1).max(axis=0)
-        rest = variance < AT_REST * truth.summary.variance.value
-        if not rest.any():
-            return None
-        reason = f"{labels[int(np.argmax(rest))]} comes to rest: it has no variance"
+def _failed(reason: str) -> Verdict:
     return Verdict(
         word="failed", reason=reason, within_sampling=0, within_tolerance=0, count=0
+    )
+
+
+def _lost(run: Simulated) -> Verdict | None:
+    """Verdict on a model that lost members, if that is so."""
+    if not run.lost:
+        return None
+    first = min(when for _, when in run.lost)
+    return _failed(
+        f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
+        f"{first / 86400:.4g} days"
+    )
+
+
+def _at_rest(truth: TruthSide, run: Simulated) -> np.ndarray:
+    """Modes that do not move any more, shape (mode,)."""
+    # In the second half, by when a slow approach is over; of each member by itself,
+    # for they may have come to rest in different places.
+    variance = _second_half(run).var(axis=1).max(axis=0)
+    return variance < AT_REST * truth.summary.variance.value
+
+
+def _second_half(run: Simulated) -> np.ndarray:
+    return run.series[:, run.series.shape[1] // 2 :]
+
+
+def _resting(config, truth: TruthSide, run: Simulated, mode: int) -> Verdict:
+    """Verdict on a model without noise that comes to rest: its mean can be scored.
+
+    Members that rest in different places give the mean an error of its own.
+    """
+    ends, labels = _second_half(run).mean(axis=1), truth.split.resolved.labels
+    spread = np.zeros(ends.shape[1])
+    if len(ends) > 1:
+        spread = ends.std(axis=0, ddof=1) / np.sqrt(len(ends))
+    mean, deviation = truth.summary.mean, np.sqrt(truth.summary.variance.value)
+    off = np.abs(ends.mean(axis=0) - mean.value)
+    error = np.hypot(mean.error, spread)
+    worst = int(np.argmax(off / deviation))
+    distance = Estimate(off[worst] / deviation[worst], error[worst] / deviation[worst])
+    close = off / deviation < config.benchmark.mean_tolerance
+    return Verdict(
+        word="at rest",
+        reason=(
+            f"without noise {labels[mode]} comes to rest, so only means can be "
+            f"compared: furthest is that of {labels[worst]}, off by {distance} "
+            "standard deviations of the truth; of use for means and for the response "
+            "to forcing"
+        ),
+        within_sampling=int((off < SAMPLING * error).sum()),
+        within_tolerance=int(close.sum()),
+        count=len(off),
     )

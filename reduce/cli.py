@@ -89,6 +89,11 @@ def _add_common(command):
     command.add_argument(
         "--json", action="store_true", help="print JSON instead of a table"
     )
+    command.add_argument(
+        "--allow-hooks",
+        action="store_true",
+        help="let code that the config names as package.module:Name run",
+    )
 
 
 def main(argv: Sequence[str] | None = None) -> int:
@@ -141,7 +146,33 @@ def _read(options):
 
     from .settings import StudyConfig
 
-    return read_config(options.config, StudyConfig, options.overrides)
+    document = read_config(options.config, StudyConfig, options.overrides)
+    _look_up(document, allowed=options.allow_hooks)
+    return document
+
+
+def _look_up(document, *, allowed):
+    """Import the user's own code that a config names, if that is allowed."""
+    from eddyshed.solver.errors import ConfigError, DataError
+    from eddyshed.solver.hooks import load
+
+    hooks, problems = document.config.hooks, []
+    if hooks and not allowed:
+        named = ", ".join(f"{where} {hook.name}" for where, hook in hooks)
+        problem = (
+            f"names code that is not eddyshed's own ({named}); if you trust it, let it "
+            "run with --allow-hooks"
+        )
+        raise ConfigError(document.source, (problem,))
+    if hooks:
+        sys.path.insert(0, os.getcwd())  # as Python itself has it for its own -m
+    for where, hook in hooks:
+        try:
+            load(hook.name)
+        except DataError as error:
+            problems.append(f"{where}: {error}")
+    if problems:
+        raise ConfigError(document.source, tuple(problems))
 
 
 def _check(options):

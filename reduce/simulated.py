@@ -36,6 +36,8 @@ class Simulated:
         Members that blew up, and when [s].
     cost : float
         Processor time over model time, per member.
+    noisy : bool
+        Whether anything random drives the model.
     """
 
     series: np.ndarray
@@ -43,6 +45,7 @@ class Simulated:
     step: float
     lost: tuple[tuple[int, float], ...]
     cost: float
+    noisy: bool = True
 
 
 def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
@@ -64,6 +67,7 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
         "fingerprint": stamp,
         "step": run.step,
         "cost": run.cost,
+        "noisy": int(run.noisy),
         "lost": json.dumps([list(pair) for pair in run.lost]),
     }
     with new_file(path, kind=KIND, title=title, attributes=attributes) as file:
@@ -99,6 +103,7 @@ def load(path: Path, stamp: str) -> Simulated | None:
                     (int(k), float(t)) for k, t in json.loads(file.attrs["lost"])
                 ),
                 cost=float(file.attrs["cost"]),
+                noisy=bool(file.attrs["noisy"]),
             )
     except (DataError, OSError, KeyError, RuntimeError):  # what h5py may raise
         return None

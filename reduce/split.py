@@ -7,11 +7,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from eddyshed.solver.hooks import Hook
 from eddyshed.solver.record import TruthRecord, walk
 
 from .bases.basis import Basis
 from .bases.eof import eof_basis
 from .bases.fourier import fourier_basis
+from .bases.hooked import hooked_basis
 from .contract import Model, dual_vectors, metric, tendency
 from .settings import FourierSettings, StudyConfig
 
@@ -107,6 +109,8 @@ def split_truth(
     mean, variance = _moments(records)
     if isinstance(config.resolved, FourierSettings):
         resolved, remainder = fourier_basis(config.resolved, model, variance)
+    elif isinstance(config.resolved, Hook):
+        resolved, remainder = hooked_basis(config.resolved, model, records, mean)
     else:
         resolved, remainder = eof_basis(config.resolved, model, records, mean)
     unresolved = _enough(remainder, config.unresolved.variance)

@@ -9,9 +9,10 @@ import numpy as np
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
-from eddyshed.solver.errors import DataError
+from eddyshed.solver.errors import ContractError, DataError
 from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
+from eddyshed.solver.hooks import Hook
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.segments import reached_step
@@ -24,9 +25,11 @@ from eddyshed.solver.truth import (
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
+from .bases.hooked import checked_vectors
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
+from .contract import check_model
 from .coupling import coupling, coupling_sizes, covariance
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
@@ -53,13 +56,19 @@ def preflight(config: StudyConfig) -> None:
     ------
     DataError
         If a pattern, a band or the basis does not fit the grid.
+    ContractError
+        If a user's own model or basis breaks its contract.
     """
     ocean = build_ocean(config)
+    if isinstance(config.ocean, Hook):
+        check_model(ocean.model)
     initial_state(config, ocean, 0)
     random_forcing_of(config, ocean, 0)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
+    elif isinstance(config.resolved, Hook):
+        checked_vectors(config.resolved, ocean)
     elif config.resolved.modes >= ocean.size:
         message = (
             f"[resolved] modes = {config.resolved.modes}, but the grid has "
@@ -149,7 +158,8 @@ def run_reduce(study: Study, stamp: str) -> None:
         mean_calibration=config.closures.mean_calibration,
         forced_covariance=covariance(forced[np.newaxis], forced[np.newaxis]),
     )
-    models = {name: _made(name, data) for name in config.closures.use}
+    hooks = config.closures.hooks
+    models = {name: _made(name, hooks.get(name), data) for name in config.closures.use}
     write_all(
         study.path("split.h5"),
         stamp,
@@ -166,15 +176,36 @@ def run_reduce(study: Study, stamp: str) -> None:
     )
 
 
-def _made(name, data):
+def _made(name, hook, data):
     """Make a closure; its notes say what a varying forcing means for it."""
-    model, variation = closure(name)(data), data.operators.variation
+    variation = data.operators.variation
+    if hook is None:
+        model = closure(name)(data)
+    else:
+        model = _checked(name, hook(data), data.operators.nx)
     if variation is None:
         return model
     notes = variation.notes
     if getattr(model, "variation", None) is None:
         notes += ("this closure runs under the mean forcing: it takes no variation",)
     return replace(model, notes=model.notes + notes)
+
+
+def _checked(name, made, nx):
+    """What a user's closure made, under the name that the config has for it."""
+    if not isinstance(made, ReducedModel):
+        message = (
+            f'closure "{name}" returned a {type(made).__name__}, must be a '
+            "ReducedModel of eddyshed.reduce"
+        )
+        raise ContractError(message)
+    if made.nx != nx:
+        message = (
+            f'closure "{name}" returned a model of {made.nx} coordinates, must have '
+            f"the {nx} resolved ones of data.split"
+        )
+        raise ContractError(message)
+    return replace(made, name=name)
 
 
 def read_split(study: Study) -> Split:

@@ -1,7 +1,5 @@
 """Forcing that varies in time: exact responses, and the clock of reduced runs."""
 
-from dataclasses import asdict, replace
-
 import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
