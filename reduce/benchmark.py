@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -9,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.errors import DataError
 from eddyshed.solver.randomness import stream
 
 from .closures import about
@@ -20,12 +22,16 @@ from .simulation import simulate, step_rule
 from .split import Split
 from .statistics.correlation import correlation_function
 from .statistics.estimate import Estimate
+from .step_check import StepCheck, compare_steps
 from .store import plain
+
+log = logging.getLogger(__name__)
 
 LAGS = 120  # of the correlation functions that are kept for the report
 SPIN_UP_TIMES = 5  # of a reduced model, in correlation times of the slowest mode
 RECORD_LENGTHS = 2  # of the truth, in all members of a reduced model together
 LOST_BOUND = 10  # times the largest excursion of the truth: a member is lost
+SHORTER = 8  # times shorter than a run is its check at half the step
 AT_REST = 1e-8  # of the truth's variance: a mode has come to rest
 
 
@@ -154,7 +160,50 @@ def run_closure(
         lost=trajectory.lost,
         cost=seconds / (n_steps * step * members),
         noisy=_has_noise(model),
+        step_check=_half_step(config, model, truth, trajectory, skip),
     )
+
+
+def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
+    """Go on for a short while at half the step, and compare."""
+    variation = getattr(model, "variation", None)
+    if variation is not None and variation.is_transient:
+        return None  # later is not like before
+    series, interval = whole.series[:, skip:], truth.step
+    variance = series.var(axis=1).max(axis=0) if not whole.lost else 0.0
+    if np.any(variance < AT_REST * truth.summary.variance.value):
+        return None
+    step, every = step_rule(
+        model, np.sqrt(truth.split.resolved.variance), interval=interval
+    )
+    memory = float(truth.summary.integral_time.value.max())
+    settle = int(np.ceil(memory / interval))  # the noise starts anew
+    records = settle + int(np.ceil(series.shape[1] / SHORTER))
+    half = simulate(
+        model,
+        series[:, -1],
+        step=step / 2,
+        n_steps=2 * every * records,
+        every=2 * every,
+        streams=[
+            stream(config.seed, k, f"half step of {model.name}")
+            for k in range(len(series))
+        ],
+        start_time=float(whole.times[-1]),
+    )
+    if half.lost:
+        log.warning("%s: blows up at half its step, but not at the step", model.name)
+        return None
+    try:
+        return compare_steps(
+            series,
+            half.series[:, settle:],
+            interval=interval,
+            step=step,
+            rng=stream(config.seed, 0, f"steps of {model.name}"),
+        )
+    except DataError:  # too short for statistics
+        return None
 
 
 def _has_noise(model) -> bool:
@@ -210,9 +259,17 @@ def compare(
         "what": about(name),
         "lost": [list(pair) for pair in run.lost],
         "cost": run.cost,
+        "step": None if run.step_check is None else _step_entry(run, labels),
         "summary": plain(summary),
         "scores": plain(scores),
         "verdict": plain(verdict),
+    }
+
+
+def _step_entry(run: Simulated, labels: tuple[str, ...]) -> dict[str, Any]:
+    return {
+        **plain(run.step_check),
+        "sentence": run.step_check.sentence(labels),
     }
 
 

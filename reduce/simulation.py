@@ -217,8 +217,7 @@ def simulate(
     count = n_steps // every + 1
     series = np.full((members, count, nx), np.nan)
     series[:, 0] = start
-    width = WORKING_MEMORY // (8 * scheme.n_work * COLUMNS) * COLUMNS
-    width = min(max(width, COLUMNS), LARGEST_GROUP)
+    width = group_width(scheme)
     lost = []
     for first in range(0, members, width):
         group = slice(first, first + width)
@@ -246,6 +245,12 @@ def simulate(
         series=series,
         lost=tuple(sorted(lost)),
     )
+
+
+def group_width(scheme: Scheme) -> int:
+    """Members that are stepped together: as many as stay in cache, 16 at least."""
+    width = WORKING_MEMORY // (8 * scheme.n_work * COLUMNS) * COLUMNS
+    return min(max(width, COLUMNS), LARGEST_GROUP)
 
 
 def _steps(scheme, start, start_y, streams, n_steps, bound, clock):

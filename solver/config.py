@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any, Generic, TypeVar, get_origin
 
 from .errors import ConfigError
-from .hooks import FORM, Hook, is_hook, options_problem
+from .hooks import FORM, read_hook
 from .quantities import dimension_name, nearest, parse_quantity, quoted
 from .resolved import as_table, differing_keys, fingerprint, reference
 from .schema import (
@@ -203,7 +203,9 @@ class _Reader:
         kinds = [kind for kind in entry.tables if kind is not None]
         kind = given.get("kind")
         if entry.rules.hooks and isinstance(kind, str) and ":" in kind:
-            return self.hook(given, kind, path)
+            hook, problems = read_hook(given, kind, label(path))
+            self.problems += problems
+            return hook
         if not isinstance(kind, str) or kind not in entry.tables:
             where = label(path, "kind")
             near = nearest(kind, kinds) if isinstance(kind, str) else None
@@ -219,28 +221,6 @@ class _Reader:
             return None
         rest = {key: value for key, value in given.items() if key != "kind"}
         return self.table(rest, entry.tables[kind], path, kind)
-
-    def hook(self, given: dict[str, Any], kind: str, path: Names) -> Hook | None:
-        """Read a table that names a user's own code."""
-        before = len(self.problems)
-        if not is_hook(kind):
-            self.problems.append(
-                f"{label(path, 'kind')} = {shown(kind)} is no name of a hook; write "
-                f"kind = {FORM}"
-            )
-        for key in given:
-            if key not in ("kind", "options"):
-                self.problems.append(
-                    f"unknown key {quoted(key)} in {label(path)}; what a hook is to "
-                    f"know stands in a table: options = {{ {key} = ... }}"
-                )
-        options = given.get("options", {})
-        problem = options_problem(options)
-        if problem:
-            self.problems.append(f"{label(path, 'options')}: {problem}")
-        if len(self.problems) > before:
-            return None
-        return Hook(name=kind, options=options)
 
     def value(self, given: Any, hint: Any, rules: Rules, where: str) -> Any:
         """Read a scalar, or a list element by element."""

@@ -74,6 +74,44 @@ def is_hook(text: Any) -> bool:
     return isinstance(text, str) and PATTERN.fullmatch(text) is not None
 
 
+def read_hook(
+    given: dict[str, Any], kind: str, where: str
+) -> tuple[Hook | None, list[str]]:
+    """Read a table of a config whose kind names a user's own code.
+
+    Parameters
+    ----------
+    given : dict
+        The table.
+    kind : str
+        Its kind.
+    where : str
+        What it is called in messages, such as ``[ocean]``.
+
+    Returns
+    -------
+    Hook or None
+        None if there are problems.
+    list of str
+        The problems.
+    """
+    problems = [
+        f'unknown key "{key}" in {where}; what a hook is to know stands in a table: '
+        f"options = {{ {key} = ... }}"
+        for key in given
+        if key not in ("kind", "options")
+    ]
+    if not is_hook(kind):
+        problems.append(
+            f'{where} kind = "{kind}" is no name of a hook; write kind = {FORM}'
+        )
+    options = given.get("options", {})
+    problem = options_problem(options)
+    if problem:
+        problems.append(f"{where} options: {problem}")
+    return (None if problems else Hook(name=kind, options=options)), problems
+
+
 def options_problem(options: Any) -> str | None:
     """What is wrong with a table of options; None if nothing is."""
     if not isinstance(options, dict):
