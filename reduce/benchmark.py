@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -9,22 +10,28 @@ from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.errors import DataError
 from eddyshed.solver.randomness import stream
 
-from .closures import CLOSURES
+from .closures import about
 from .reduced import ReducedModel
-from .scores import Summary, Verdict, judge, score, summarise
+from .scores import SAMPLING, Summary, Verdict, judge, score, summarise
 from .settings import BenchmarkSettings, StudyConfig
 from .simulated import Simulated
 from .simulation import simulate, step_rule
 from .split import Split
 from .statistics.correlation import correlation_function
+from .statistics.estimate import Estimate
+from .step_check import StepCheck, compare_steps
 from .store import plain
+
+log = logging.getLogger(__name__)
 
 LAGS = 120  # of the correlation functions that are kept for the report
 SPIN_UP_TIMES = 5  # of a reduced model, in correlation times of the slowest mode
 RECORD_LENGTHS = 2  # of the truth, in all members of a reduced model together
 LOST_BOUND = 10  # times the largest excursion of the truth: a member is lost
+SHORTER = 8  # times shorter than a run is its check at half the step
 AT_REST = 1e-8  # of the truth's variance: a mode has come to rest
 
 
@@ -122,8 +129,14 @@ def run_closure(
     duration = member_duration(config.benchmark, split.length)
     spin_up = SPIN_UP_TIMES * float(truth.summary.integral_time.value.max())
     skip = int(np.ceil(spin_up / interval))
+    # All members live by one clock, so they start at one phase of every season.
+    variation = getattr(model, "variation", None)
+    first = slice(None) if variation is None else variation.alike(split.times)
+    if variation is not None and variation.is_transient:
+        # Before and after are not alike: the same window of time as the truth.
+        first, skip, duration = [0], 0, (split.x.shape[1] - 1) * split.step
     n_steps = (skip + int(np.ceil(duration / interval))) * every
-    states = split.x.reshape(-1, split.x.shape[-1])
+    states = split.x[:, first].reshape(-1, split.x.shape[-1])
     starts = stream(seed, 0, f"starts of {model.name}").integers(
         len(states), size=members
     )
@@ -135,7 +148,8 @@ def run_closure(
         n_steps=n_steps,
         every=every,
         streams=[stream(seed, k, f"noise of {model.name}") for k in range(members)],
-        bound=LOST_BOUND * float(np.linalg.norm(states, axis=1).max()),
+        bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=2).max()),
+        start_time=split.start,
         progress=progress,
     )
     seconds = time.process_time() - before
@@ -145,7 +159,56 @@ def run_closure(
         step=interval,
         lost=trajectory.lost,
         cost=seconds / (n_steps * step * members),
+        noisy=_has_noise(model),
+        step_check=_half_step(config, model, truth, trajectory, skip),
     )
+
+
+def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
+    """Go on for a short while at half the step, and compare."""
+    variation = getattr(model, "variation", None)
+    if variation is not None and variation.is_transient:
+        return None  # later is not like before
+    series, interval = whole.series[:, skip:], truth.step
+    variance = series.var(axis=1).max(axis=0) if not whole.lost else 0.0
+    if np.any(variance < AT_REST * truth.summary.variance.value):
+        return None
+    step, every = step_rule(
+        model, np.sqrt(truth.split.resolved.variance), interval=interval
+    )
+    memory = float(truth.summary.integral_time.value.max())
+    settle = int(np.ceil(memory / interval))  # the noise starts anew
+    records = settle + int(np.ceil(series.shape[1] / SHORTER))
+    half = simulate(
+        model,
+        series[:, -1],
+        step=step / 2,
+        n_steps=2 * every * records,
+        every=2 * every,
+        streams=[
+            stream(config.seed, k, f"half step of {model.name}")
+            for k in range(len(series))
+        ],
+        start_time=float(whole.times[-1]),
+    )
+    if half.lost:
+        log.warning("%s: blows up at half its step, but not at the step", model.name)
+        return None
+    try:
+        return compare_steps(
+            series,
+            half.series[:, settle:],
+            interval=interval,
+            step=step,
+            rng=stream(config.seed, 0, f"steps of {model.name}"),
+        )
+    except DataError:  # too short for statistics
+        return None
+
+
+def _has_noise(model) -> bool:
+    """Whether anything random drives a model; any but a ReducedModel has noise."""
+    return not isinstance(model, ReducedModel) or bool(np.any(model.covariance))
 
 
 def compare(
@@ -170,8 +233,14 @@ def compare(
         for a model that gives no statistics.
     """
     labels = truth.split.resolved.labels
-    summary, scores, verdict = None, [], _failure(truth, run)
-    if verdict is None:
+    summary, scores, verdict = None, [], _lost(run)
+    at_rest = _at_rest(truth, run) if verdict is None else None
+    if at_rest is not None and at_rest.any() and not run.noisy:
+        verdict = _resting(config, truth, run, int(np.argmax(at_rest)))
+    elif at_rest is not None and at_rest.any():
+        mode = labels[int(np.argmax(at_rest))]
+        verdict = _failed(f"{mode} comes to rest: it has no variance")
+    elif verdict is None:
         rng = stream(config.seed, 0, f"scores of {name}")
         summary = summarise(run.series, run.step, rng)
         scores = score(
@@ -187,31 +256,76 @@ def compare(
         verdict = judge(scores, labels)
     return {
         "name": name,
-        "what": CLOSURES[name],
+        "what": about(name),
         "lost": [list(pair) for pair in run.lost],
         "cost": run.cost,
+        "step": None if run.step_check is None else _step_entry(run, labels),
         "summary": plain(summary),
         "scores": plain(scores),
         "verdict": plain(verdict),
     }
 
 
-def _failure(truth: TruthSide, run: Simulated) -> Verdict | None:
-    """Verdict on a model that gives no statistics, if that is so."""
-    labels = truth.split.resolved.labels
-    if run.lost:
-        first = min(when for _, when in run.lost)
-        reason = (
-            f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
-            f"{first / 86400:.4g} days"
-        )
-    else:
-        # Of each member by itself: they may have come to rest in different places.
-        variance = run.series.var(axis=1).max(axis=0)
-        rest = variance < AT_REST * truth.summary.variance.value
-        if not rest.any():
-            return None
-        reason = f"{labels[int(np.argmax(rest))]} comes to rest: it has no variance"
+def _step_entry(run: Simulated, labels: tuple[str, ...]) -> dict[str, Any]:
+    return {
+        **plain(run.step_check),
+        "sentence": run.step_check.sentence(labels),
+    }
+
+
+def _failed(reason: str) -> Verdict:
     return Verdict(
         word="failed", reason=reason, within_sampling=0, within_tolerance=0, count=0
+    )
+
+
+def _lost(run: Simulated) -> Verdict | None:
+    """Verdict on a model that lost members, if that is so."""
+    if not run.lost:
+        return None
+    first = min(when for _, when in run.lost)
+    return _failed(
+        f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
+        f"{first / 86400:.4g} days"
+    )
+
+
+def _at_rest(truth: TruthSide, run: Simulated) -> np.ndarray:
+    """Modes that do not move any more, shape (mode,)."""
+    # In the second half, by when a slow approach is over; of each member by itself,
+    # for they may have come to rest in different places.
+    variance = _second_half(run).var(axis=1).max(axis=0)
+    return variance < AT_REST * truth.summary.variance.value
+
+
+def _second_half(run: Simulated) -> np.ndarray:
+    return run.series[:, run.series.shape[1] // 2 :]
+
+
+def _resting(config, truth: TruthSide, run: Simulated, mode: int) -> Verdict:
+    """Verdict on a model without noise that comes to rest: its mean can be scored.
+
+    Members that rest in different places give the mean an error of its own.
+    """
+    ends, labels = _second_half(run).mean(axis=1), truth.split.resolved.labels
+    spread = np.zeros(ends.shape[1])
+    if len(ends) > 1:
+        spread = ends.std(axis=0, ddof=1) / np.sqrt(len(ends))
+    mean, deviation = truth.summary.mean, np.sqrt(truth.summary.variance.value)
+    off = np.abs(ends.mean(axis=0) - mean.value)
+    error = np.hypot(mean.error, spread)
+    worst = int(np.argmax(off / deviation))
+    distance = Estimate(off[worst] / deviation[worst], error[worst] / deviation[worst])
+    close = off / deviation < config.benchmark.mean_tolerance
+    return Verdict(
+        word="at rest",
+        reason=(
+            f"without noise {labels[mode]} comes to rest, so only means can be "
+            f"compared: furthest is that of {labels[worst]}, off by {distance} "
+            "standard deviations of the truth; of use for means and for the response "
+            "to forcing"
+        ),
+        within_sampling=int((off < SAMPLING * error).sum()),
+        within_tolerance=int(close.sum()),
+        count=len(off),
     )

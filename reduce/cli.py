@@ -114,6 +114,11 @@ def _add_common(command):
         action="store_true",
         help="go ahead even if the truth will not fit the disk",
     )
+    command.add_argument(
+        "--allow-hooks",
+        action="store_true",
+        help="let code that the config names as package.module:Name run",
+    )
 
 
 def _slice(text):
@@ -182,7 +187,9 @@ def _read(options):
         overrides.append(f'engine.kind="{options.engine}"')
     if options.workers is not None:
         overrides.append(f"engine.workers={options.workers}")
-    return read_config(options.config, StudyConfig, overrides)
+    document = read_config(options.config, StudyConfig, overrides)
+    _look_up(document, allowed=options.allow_hooks)
+    return document
 
 
 def _members(options, config):
@@ -201,6 +208,30 @@ def _members(options, config):
         )
         raise ConfigError("--members", (problem,))  # noqa: EM101 (not a message)
     return range(asked.start, end)
+
+
+def _look_up(document, *, allowed):
+    """Import the user's own code that a config names, if that is allowed."""
+    from eddyshed.solver.errors import ConfigError, DataError
+    from eddyshed.solver.hooks import load
+
+    hooks, problems = document.config.hooks, []
+    if hooks and not allowed:
+        named = ", ".join(f"{where} {hook.name}" for where, hook in hooks)
+        problem = (
+            f"names code that is not eddyshed's own ({named}); if you trust it, let it "
+            "run with --allow-hooks"
+        )
+        raise ConfigError(document.source, (problem,))
+    if hooks:
+        sys.path.insert(0, os.getcwd())  # as Python itself has it for its own -m
+    for where, hook in hooks:
+        try:
+            load(hook.name)
+        except DataError as error:
+            problems.append(f"{where}: {error}")
+    if problems:
+        raise ConfigError(document.source, tuple(problems))
 
 
 def _check(options):
@@ -224,7 +255,7 @@ def _check(options):
     from .tables import forecast_json, forecast_table
     from .truth_stage import refuse_full_disk
 
-    preflight(document.config, "check")
+    preflight(document.config)
     found = forecast_run(document.config)
     free = free_bytes(options.runs)
     if options.json:
@@ -248,7 +279,7 @@ def _stage(options):
     from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
     from .tables import stage_json, stage_table, truth_json, truth_table
 
-    preflight(document.config, options.command)
+    preflight(document.config)
 
     with _log_on_stderr(options.quiet), _signals() as caught:
         study = Study(

@@ -39,6 +39,11 @@ class Model(Protocol):
         most of the work in :func:`eddyshed.reduce.operators.galerkin`.
     ``labels : tuple of str``
         Names of the coordinates.
+    ``variations : tuple of (function, pattern)``
+        How F depends on time, if it does: pairs of a ``Seasonal``, ``Ramp`` or
+        ``Step`` of :mod:`eddyshed.solver.time_functions` and an array of shape
+        (size,), such that F less the sum of ``function.factor(t) * pattern``
+        is the same at all times. A reduction needs it.
     """
 
     @property

@@ -30,6 +30,9 @@ def coupling(split: Split, operators: Operators) -> np.ndarray:
         + x @ operators.A11.T
         + np.einsum("ijk,...j,...k->...i", operators.B111, x, x, optimize=True)
     )
+    variation = operators.variation
+    if variation is not None:
+        truncated += variation.factors(split.times) @ variation.resolved
     return split.tendency - truncated
 
 

@@ -64,9 +64,11 @@ def in_product(model: Any, name: str) -> Any:
     DataError
         If the model has no such product.
     """
+    if name == "energy":
+        return model
     try:
         product = model.inner_product(name)
     except DataError as error:
         message = f"[resolved] {error}"
         raise DataError(message) from error
-    return model if name == "energy" else Weighted(model, product)
+    return Weighted(model, product)

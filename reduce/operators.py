@@ -10,6 +10,7 @@ import numpy as np
 from eddyshed.solver.errors import ContractError, DataError
 
 from .contract import Model, conserves_energy, dual_vectors
+from .variation import Variation, mean_forcing, project_variation
 
 # A basis from an eigenvalue problem is orthonormal to 1e-13; one that is off
 # by more than this was made in another inner product.
@@ -35,7 +36,9 @@ class Operators:
         dx/dt = F1 + A11 x + B111(x, x) + A12 y + 2 B112(x, y) + B122(y, y)
         dy/dt = F2 + A21 x + B211(x, x) + 2 B212(x, y) + ...
 
-    where the dots are what y does to itself, which is not projected.
+    where the dots are what y does to itself, which is not projected. Where the
+    forcing varies, F1 and F2 hold its time mean over the truth, and `variation`
+    the rest.
 
     Attributes
     ----------
@@ -58,6 +61,8 @@ class Operators:
         Largest sum of ``B[a, b, c]`` over its three cyclic permutations,
         as it was before any correction, relative to the largest coefficient.
         Zero if the quadratic terms conserve energy.
+    variation : Variation or None
+        How F1 and F2 depart from their means; None for a steady forcing.
     """
 
     F1: np.ndarray
@@ -71,6 +76,7 @@ class Operators:
     B211: np.ndarray
     B212: np.ndarray
     cyclic_residual: float
+    variation: Variation | None = None
 
     @property
     def nx(self) -> int:
@@ -89,7 +95,7 @@ def galerkin(
     unresolved: np.ndarray,
     mean: np.ndarray,
     *,
-    t: float = 0.0,
+    times: np.ndarray | float = 0.0,
     batch: int | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> Operators:
@@ -104,8 +110,8 @@ def galerkin(
         Orthonormal columns, also to the resolved ones; there may be none.
     mean : ndarray, shape (size,)
         State that x and y are departures from.
-    t : float
-        Time at which the forcing is taken [s].
+    times : ndarray, shape (time,), or float
+        Times that the forcing is averaged over [s]: those of the truth's records.
     batch : int, optional
         States in one call of the model; by default as many as fill 32 MB.
     progress : callable, optional
@@ -121,7 +127,7 @@ def galerkin(
         If shapes do not fit or the columns are not orthonormal.
     ContractError
         If the model declares that it conserves energy but its coefficients
-        do not.
+        do not, or if its forcing varies in time and it does not declare how.
 
     Notes
     -----
@@ -150,7 +156,9 @@ def galerkin(
     more = (PROBES if ny else 0) if conserving else ny * (ny + 1) // 2
     work = _Evaluations(model, batch, progress, total=1 + nx + ny + pairs + more)
 
-    start, columns = _about_mean(work, states, mean, t, dual)
+    times = np.atleast_1d(np.asarray(times, dtype=float))
+    forcing = mean_forcing(model, times)
+    start, columns = _about_mean(work, states, mean, forcing, dual)
     b111, b112, b211, b212 = _interactions(work, states, dual, nx)
     scale = _largest(b111, b112, b211, b212)
     sums = _cyclic_sums(b111, b112, b211)
@@ -177,6 +185,7 @@ def galerkin(
         B211=b211,
         B212=b212,
         cyclic_residual=residual,
+        variation=project_variation(model, times, dual[:, :nx], dual[:, nx:]),
     )
 
 
@@ -227,10 +236,10 @@ class _Evaluations:
         return (slice(i, i + self.batch) for i in range(0, count, self.batch))
 
 
-def _about_mean(work, states, mean, t, dual):
+def _about_mean(work, states, mean, forcing, dual):
     """Tendency of the mean state, and linear operator about it."""
     model, mean = work.model, mean[np.newaxis]
-    start = (model.forcing(t) + model.linear(mean) + work(mean, mean))[0] @ dual
+    start = (forcing + model.linear(mean) + work(mean, mean))[0] @ dual
     columns = np.empty((len(states), len(states)))
     for part in work.parts(len(states)):
         made = model.linear(states[part]) + 2 * work(mean, states[part])

@@ -11,6 +11,8 @@ from scipy import sparse
 
 from eddyshed.solver.errors import DataError
 
+from .variation import Variation
+
 # Below this share of non-zero entries a compressed sparse matrix times a
 # block of columns beats a dense product (measured for 10^2 to 10^3 rows).
 SPARSE = 0.1
@@ -84,6 +86,9 @@ class ReducedModel:
         Damping and rotation of y [s-1].
     covariance : ndarray, shape (ny, ny)
         [state unit squared]
+    variation : Variation or None
+        How `x_forcing` and `y_forcing` vary in time, about the constants above;
+        None if they do not.
     notes : tuple of str
         What a reader of results must know about this model.
     facts : dict of str to float
@@ -109,6 +114,7 @@ class ReducedModel:
     y_from_xy: np.ndarray = ABSENT
     rate: np.ndarray = ABSENT
     covariance: np.ndarray = ABSENT
+    variation: Variation | None = None
     notes: tuple[str, ...] = ()
     facts: dict[str, float] = field(default_factory=dict)
 
@@ -129,6 +135,14 @@ class ReducedModel:
             if not np.all(np.isfinite(array)):
                 self._refuse(f"{name} has values that are not finite")
             object.__setattr__(self, name, array)
+        if self.variation is not None:
+            resolved, unresolved = self.variation.resolved, self.variation.unresolved
+            shapes = (resolved.shape[1], unresolved.shape[1])
+            if shapes != (sizes[X], sizes[Y]):
+                self._refuse(
+                    f"variation for {shapes[0]} and {shapes[1]} coordinates, must be "
+                    f"for {sizes[X]} (x) and {sizes[Y]} (y)"
+                )
         asymmetry = np.abs(self.covariance - self.covariance.T).max(initial=0.0)
         # A product of matrices is symmetric only to round-off.
         if asymmetry > 1e-12 * np.abs(self.covariance).max(initial=0.0):

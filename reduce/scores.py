@@ -74,7 +74,8 @@ class Verdict:
     Attributes
     ----------
     word : str
-        ``indistinguishable``, ``close``, ``undecided``, ``off`` or ``failed``.
+        ``indistinguishable``, ``close``, ``undecided``, ``off``, ``at rest`` or
+        ``failed``.
     reason : str
         Why, in a sentence.
     within_sampling, within_tolerance, count : int

@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from eddyshed.solver.config import setting
+from eddyshed.solver.hooks import Hook, is_hook, options_problem
 from eddyshed.solver.inner_products import INNER_PRODUCTS
 from eddyshed.solver.settings import TruthConfig
 
@@ -103,7 +104,15 @@ class ClosuresSettings:
     """Which closures are made."""
 
     use: tuple[str, ...] = setting(
-        default=tuple(CLOSURES), choices=tuple(CLOSURES), doc="closures to make"
+        default=tuple(CLOSURES),
+        choices=tuple(CLOSURES),
+        hooks=True,
+        doc="closures to make",
+    )
+    options: dict | None = setting(
+        default=None,
+        doc="for closures of your own, a table of keys for each: "
+        '{ "package.module:Name" = { key = 1.0 } }',
     )
     mean_calibration: bool = setting(
         default=True,
@@ -117,6 +126,24 @@ class ClosuresSettings:
             yield f"use is empty; name at least one of {', '.join(CLOSURES)}"
         if len(set(self.use)) < len(self.use):
             yield "use names a closure twice"
+        for name, options in (self.options or {}).items():
+            if name not in self.use or not is_hook(name):
+                yield (
+                    f'options are given for "{name}", which is no closure of your own '
+                    "among those in use"
+                )
+            elif options_problem(options):
+                yield f'options of "{name}": {options_problem(options)}'
+
+    @property
+    def hooks(self) -> dict[str, Hook]:
+        """Closures of the user's own among those in use."""
+        options = self.options or {}
+        return {
+            name: Hook(name=name, options=options.get(name, {}))
+            for name in self.use
+            if is_hook(name)
+        }
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -190,9 +217,11 @@ class BenchmarkSettings:
 class StudyConfig(TruthConfig):
     """A whole study: the truth, and what is done with it."""
 
-    resolved: FourierSettings | EofSettings = setting(
+    resolved: FourierSettings | EofSettings | Hook = setting(
         kinds={"fourier": FourierSettings, "eof": EofSettings},
-        doc="the modes that are kept",
+        hooks=True,
+        doc='the modes that are kept; or kind = "package.module:Name", a basis of '
+        "your own, made with the keys of the table `options`",
     )
     unresolved: UnresolvedSettings = setting(
         default=UnresolvedSettings, doc="the modes that noise stands in for"
@@ -209,3 +238,24 @@ class StudyConfig(TruthConfig):
     benchmark: BenchmarkSettings = setting(
         default=BenchmarkSettings, doc="how the reduced models are scored"
     )
+
+    def problems(self):
+        """Rules that go across sections."""
+        # No plain super(): a dataclass with slots is a second class.
+        yield from TruthConfig.problems(self)
+        if isinstance(self.ocean, Hook) and isinstance(self.resolved, FourierSettings):
+            yield (
+                '[resolved] kind = "fourier" needs waves, and a model of your own has '
+                'none; use kind = "eof", or a basis of your own'
+            )
+
+    @property
+    def hooks(self) -> tuple[tuple[str, Hook], ...]:
+        """All of the user's own code that the config names, with where it stands."""
+        places = (("[ocean] kind", self.ocean), ("[resolved] kind", self.resolved))
+        closures = (("[closures] use", h) for h in self.closures.hooks.values())
+        return tuple(
+            (where, hook)
+            for where, hook in (*places, *closures)
+            if isinstance(hook, Hook)
+        )

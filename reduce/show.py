@@ -75,9 +75,11 @@ def _truth(file):
         facts["members asked for"] = str(file.attrs["members_asked"])
     facts |= {
         "ocean": str(config["ocean"]["kind"]),
-        "grid": " x ".join(str(n) for n in config["grid"]["points"]),
-        "box": " x ".join(format_quantity(v, "m") for v in config["grid"]["lengths"]),
     }
+    if "grid" in config:
+        grid = config["grid"]
+        facts["grid"] = " x ".join(map(str, grid["points"]))
+        facts["box"] = " x ".join(format_quantity(v, "m") for v in grid["lengths"])
     if "steps_done" in file.attrs:
         done, total = int(file.attrs["steps_done"]), int(file.attrs["steps_total"])
         facts["reached"] = _reached(done, total, step)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
 
 import numpy as np
@@ -16,6 +16,8 @@ from eddyshed.solver.files import (
     new_file,
     open_file,
 )
+
+from .step_check import StepCheck
 
 KIND = "simulated"
 
@@ -36,6 +38,10 @@ class Simulated:
         Members that blew up, and when [s].
     cost : float
         Processor time over model time, per member.
+    noisy : bool
+        Whether anything random drives the model.
+    step_check : StepCheck or None
+        What half the step changes; None where there are no statistics to compare.
     """
 
     series: np.ndarray
@@ -43,6 +49,8 @@ class Simulated:
     step: float
     lost: tuple[tuple[int, float], ...]
     cost: float
+    noisy: bool = True
+    step_check: StepCheck | None = None
 
 
 def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
@@ -64,6 +72,8 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
         "fingerprint": stamp,
         "step": run.step,
         "cost": run.cost,
+        "noisy": int(run.noisy),
+        "step_check": json.dumps(run.step_check and asdict(run.step_check)),
         "lost": json.dumps([list(pair) for pair in run.lost]),
     }
     with new_file(path, kind=KIND, title=title, attributes=attributes) as file:
@@ -77,6 +87,10 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
             run.series,
             long_name="resolved coordinates",
         )
+
+
+def _check_of(table: dict | None) -> StepCheck | None:
+    return None if table is None else StepCheck(**table)
 
 
 def load(path: Path, stamp: str) -> Simulated | None:
@@ -99,6 +113,8 @@ def load(path: Path, stamp: str) -> Simulated | None:
                     (int(k), float(t)) for k, t in json.loads(file.attrs["lost"])
                 ),
                 cost=float(file.attrs["cost"]),
+                noisy=bool(file.attrs["noisy"]),
+                step_check=_check_of(json.loads(file.attrs["step_check"])),
             )
     except (DataError, OSError, KeyError, RuntimeError):  # what h5py may raise
         return None

@@ -58,8 +58,8 @@ class Scheme(Protocol):
     def colour(self, normals: np.ndarray) -> np.ndarray:
         """Increments from normals, both (n_normals, steps, member)."""
 
-    def advance(self, state: np.ndarray, increment: np.ndarray) -> None:
-        """Step all members in place, with an increment (n_normals, member)."""
+    def advance(self, state: np.ndarray, increment: np.ndarray, time: float) -> None:
+        """Step all members in place from `time` [s]: increment (n_normals, member)."""
 
 
 @singledispatch
@@ -138,7 +138,8 @@ def step_rule(
     step's ends only. c is the largest norm among the linear operators of the
     coupling: on x alone, its linear part and its quadratic part at the
     amplitude of x; on y, the modulation by x. For amplitudes with independent
-    signs norms add in squares.
+    signs norms add in squares. The angular frequency of a seasonal forcing
+    counts as well.
     """
     scale = np.square(x_scale)
 
@@ -150,6 +151,7 @@ def step_rule(
         np.linalg.norm(model.x_from_x, ord=2),
         modulated(model.x_from_xx),
         modulated(model.y_from_xy),
+        0.0 if model.variation is None else model.variation.fastest,
     )
     noise = np.abs(np.linalg.eigvals(model.rate)).max(initial=0.0)
     fastest = max(noise / ACCURACY, coupling / STABILITY)
@@ -194,7 +196,7 @@ def simulate(
         finite numbers, is lost: it is recorded and stopped, never clipped,
         and the others go on.
     start_time : float
-        Time of the start [s].
+        Time of the start, on the clock of the forcing [s].
     progress : callable, optional
         Called as ``progress(done, total)`` with numbers of member-steps.
 
@@ -215,8 +217,7 @@ def simulate(
     count = n_steps // every + 1
     series = np.full((members, count, nx), np.nan)
     series[:, 0] = start
-    width = WORKING_MEMORY // (8 * scheme.n_work * COLUMNS) * COLUMNS
-    width = min(max(width, COLUMNS), LARGEST_GROUP)
+    width = group_width(scheme)
     lost = []
     for first in range(0, members, width):
         group = slice(first, first + width)
@@ -224,7 +225,13 @@ def simulate(
         own_y = None if start_y is None else np.asarray(start_y, dtype=float)[group]
         largest = HUGE if bound is None else bound
         for done, x, alive, gone in _steps(
-            scheme, start[group], own_y, own_streams, n_steps, largest
+            scheme,
+            start[group],
+            own_y,
+            own_streams,
+            n_steps,
+            largest,
+            lambda done: start_time + done * step,
         ):
             lost += [(first + int(m), start_time + done * step) for m in gone]
             if done % every == 0:
@@ -240,7 +247,13 @@ def simulate(
     )
 
 
-def _steps(scheme, start, start_y, streams, n_steps, bound):
+def group_width(scheme: Scheme) -> int:
+    """Members that are stepped together: as many as stay in cache, 16 at least."""
+    width = WORKING_MEMORY // (8 * scheme.n_work * COLUMNS) * COLUMNS
+    return min(max(width, COLUMNS), LARGEST_GROUP)
+
+
+def _steps(scheme, start, start_y, streams, n_steps, bound, clock):
     """Step one group of members; yield x, who is alive and who was just lost."""
     members = len(streams)
     columns = -(-members // COLUMNS) * COLUMNS  # filled up with members at rest
@@ -267,7 +280,7 @@ def _steps(scheme, start, start_y, streams, n_steps, bound):
         increments = scheme.colour(draw(steps, scheme.n_normals, alive))
         for done in range(first + 1, first + steps + 1):
             with np.errstate(over="ignore", invalid="ignore"):
-                scheme.advance(state, increments[:, done - first - 1])
+                scheme.advance(state, increments[:, done - first - 1], clock(done - 1))
                 is_good = np.einsum("im,im->m", x, x)[alive] <= bound**2  # no NaN
             gone, alive = alive[~is_good], alive[is_good]
             yield done, x, alive, gone

@@ -7,11 +7,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from eddyshed.solver.hooks import Hook
 from eddyshed.solver.record import TruthRecord, walk
 
 from .bases.basis import Basis
 from .bases.eof import eof_basis
 from .bases.fourier import fourier_basis
+from .bases.hooked import hooked_basis
 from .contract import Model, dual_vectors, metric, tendency
 from .settings import FourierSettings, StudyConfig
 
@@ -34,6 +36,8 @@ class Split:
         Full tendency of the resolved coordinates [state unit s-1].
     step : float
         Interval between records [s].
+    start : float
+        Time of the first record, on the clock that forcing varies by [s].
     fine_x : ndarray, shape (member, fine_time, nx)
         Resolved coordinates at the interval of the fine stream, less the same
         mean; `x` itself where the stream does not hold them.
@@ -54,6 +58,12 @@ class Split:
     fine_step: float
     total_variance: float
     left_out_variance: float
+    start: float = 0.0
+
+    @property
+    def times(self) -> np.ndarray:
+        """Times of the records [s], the same for all members."""
+        return self.start + self.step * np.arange(self.x.shape[1])
 
     @property
     def shares(self) -> tuple[float, float, float]:
@@ -99,6 +109,8 @@ def split_truth(
     mean, variance = _moments(records)
     if isinstance(config.resolved, FourierSettings):
         resolved, remainder = fourier_basis(config.resolved, model, variance)
+    elif isinstance(config.resolved, Hook):
+        resolved, remainder = hooked_basis(config.resolved, model, records, mean)
     else:
         resolved, remainder = eof_basis(config.resolved, model, records, mean)
     unresolved = _enough(remainder, config.unresolved.variance)
@@ -132,6 +144,7 @@ def split_truth(
         fine_step=step if fine_x is None else fine_step,
         total_variance=total,
         left_out_variance=max(0.0, total - kept),
+        start=float(records[0].times[0]),
     )
 
 

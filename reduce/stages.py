@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 import logging
+from dataclasses import replace
 from typing import Any
+
+import numpy as np
 
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
-from eddyshed.solver.driven import is_random
-from eddyshed.solver.errors import DataError
+from eddyshed.solver.errors import ContractError, DataError
 from eddyshed.solver.exponential import stepper_of
 from eddyshed.solver.forecast import seconds_per_step
+from eddyshed.solver.hooks import Hook
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
-from eddyshed.solver.time_functions import Steady
 from eddyshed.solver.truth import (
     initial_state,
     random_forcing_of,
@@ -21,9 +23,11 @@ from eddyshed.solver.truth import (
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
+from .bases.hooked import checked_vectors
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
+from .contract import check_model
 from .coupling import coupling, coupling_sizes, covariance
 from .flow.measure import measure_flow
 from .flow.parts import write_flow
@@ -50,44 +54,36 @@ def model_of(config: StudyConfig) -> Any:
     DataError
         If a pattern does not fit the grid, or the product the ocean.
     """
-    return in_product(build_ocean(config), config.resolved.inner_product)
+    product = getattr(config.resolved, "inner_product", "energy")
+    return in_product(build_ocean(config), product)
 
 
-def preflight(config: StudyConfig, command: str) -> None:
+def preflight(config: StudyConfig) -> None:
     """Refuse now what would fail only after the truth was run.
 
     Parameters
     ----------
     config : StudyConfig
         The config.
-    command : str
-        The command that was given: a truth run may do what a reduction of it
-        cannot.
 
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, the inner product
-        the ocean, or a reduction is asked for under a forcing that varies.
+        If a pattern, a band or the basis does not fit the grid, or the inner
+        product the ocean.
+    ContractError
+        If a user's own model or basis breaks its contract.
     """
-    varying = [
-        name
-        for name, pattern in config.forcing.items()
-        if not is_random(pattern) and not isinstance(pattern.time, Steady)
-    ]
-    if varying and command not in ("truth", "check"):
-        message = (
-            f"[forcing.{varying[0]}] varies in time, and the reduced models are made "
-            "for a steady forcing; make it steady, or run only the truth: eddyshed "
-            "truth"
-        )
-        raise DataError(message)
     ocean = model_of(config)
+    if isinstance(config.ocean, Hook):
+        check_model(ocean.model)
     initial_state(config, ocean, config.ensemble.members - 1)
     random_forcing_of(config, ocean, 0)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
+    elif isinstance(config.resolved, Hook):
+        checked_vectors(config.resolved, ocean)
     elif config.resolved.modes >= ocean.size:
         message = (
             f"[resolved] modes = {config.resolved.modes}, but the grid has "
@@ -98,12 +94,14 @@ def preflight(config: StudyConfig, command: str) -> None:
 
 def run_flow(study: Study, stamp: str) -> None:
     """Measure what the truth did."""
-    with progress("flow", 1, quiet=study.quiet) as shown:
-        found = measure_flow(
-            build_ocean(study.config), study.records(), progress=shown.to
-        )
+    ocean, path = build_ocean(study.config), study.path("flow.h5")
     title = f"{study.config.name}: fields, spectra, fluxes and budgets of the truth"
-    write_flow(study.path("flow.h5"), stamp, title, found)
+    if ocean.waves is None:  # a user's own model: nothing is known of its space
+        write_all(path, stamp, title, "flow", {})
+        return
+    with progress("flow", 1, quiet=study.quiet) as shown:
+        found = measure_flow(ocean, study.records(), progress=shown.to)
+    write_flow(path, stamp, title, found)
 
 
 def run_reduce(study: Study, stamp: str) -> None:
@@ -126,6 +124,7 @@ def run_reduce(study: Study, stamp: str) -> None:
             split.resolved.vectors,
             split.unresolved.vectors,
             split.mean,
+            times=split.times,
             progress=lambda done, total: shown.to(done / total),
         )
     window = config.noise.window
@@ -143,8 +142,11 @@ def run_reduce(study: Study, stamp: str) -> None:
     match = config.noise.match
     if match == "auto":
         match = "product" if quadratic > linear else "integral"
+    variation, forced = operators.variation, np.zeros((len(split.times), y.shape[2]))
+    if variation is not None:
+        forced = variation.cycle(y, split.times)
     noise = fit_ornstein_uhlenbeck(
-        y,
+        y - forced,
         split.step,
         window=window,
         match=match,
@@ -159,8 +161,10 @@ def run_reduce(study: Study, stamp: str) -> None:
         covariance_y=covariance(y, y),
         covariance_xy=covariance(split.x, y),
         mean_calibration=config.closures.mean_calibration,
+        forced_covariance=covariance(forced[np.newaxis], forced[np.newaxis]),
     )
-    models = {name: closure(name)(data) for name in config.closures.use}
+    hooks = config.closures.hooks
+    models = {name: _made(name, hooks.get(name), data) for name in config.closures.use}
     write_all(
         study.path("split.h5"),
         stamp,
@@ -175,6 +179,38 @@ def run_reduce(study: Study, stamp: str) -> None:
         "closures",
         {"operators": operators, "noise": noise, **models},
     )
+
+
+def _made(name, hook, data):
+    """Make a closure; its notes say what a varying forcing means for it."""
+    variation = data.operators.variation
+    if hook is None:
+        model = closure(name)(data)
+    else:
+        model = _checked(name, hook(data), data.operators.nx)
+    if variation is None:
+        return model
+    notes = variation.notes
+    if getattr(model, "variation", None) is None:
+        notes += ("this closure runs under the mean forcing: it takes no variation",)
+    return replace(model, notes=model.notes + notes)
+
+
+def _checked(name, made, nx):
+    """What a user's closure made, under the name that the config has for it."""
+    if not isinstance(made, ReducedModel):
+        message = (
+            f'closure "{name}" returned a {type(made).__name__}, must be a '
+            "ReducedModel of eddyshed.reduce"
+        )
+        raise ContractError(message)
+    if made.nx != nx:
+        message = (
+            f'closure "{name}" returned a model of {made.nx} coordinates, must have '
+            f"the {nx} resolved ones of data.split"
+        )
+        raise ContractError(message)
+    return replace(made, name=name)
 
 
 def read_split(study: Study) -> Split:

@@ -53,6 +53,11 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "B211": ("y", "x", "x"),
         "B212": ("y", "x", "y"),
     },
+    "Variation": {
+        "means": ("pattern",),
+        "resolved": ("pattern", "x"),
+        "unresolved": ("pattern", "y"),
+    },
     "OrnsteinUhlenbeck": {"rate": ("mode", "mode"), "covariance": ("mode", "mode")},
     "Estimate": {"value": ("mode",), "error": ("mode",)},
     "Spectrum": {
@@ -202,6 +207,9 @@ def unpack(group: h5py.Group, kind: type) -> Any:
     values = {}
     for field in dataclasses.fields(kind):
         hint = hints[field.name]
+        if group.attrs.get(field.name) == "null":  # an optional part that is absent
+            values[field.name] = None
+            continue
         if isinstance(hint, types.UnionType):
             hint = next(h for h in typing.get_args(hint) if h is not type(None))
         origin = typing.get_origin(hint) or hint

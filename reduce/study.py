@@ -149,11 +149,18 @@ def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
             "stage": name,
             "version": version("eddyshed"),
             "config": {key: table.get(key) for key in stage.sections},
+            **_foreign(study.config, stage),
             "after": {
                 other: fingerprint_of(study, stages, other) for other in stage.after
             },
         }
     )
+
+
+def _foreign(config, stage):
+    """The user's own closures, if the stage makes them: the bytes of their modules."""
+    hooks = config.closures.hooks if "closures" in stage.sections else {}
+    return {"hooks": [hook.table() for hook in hooks.values()]} if hooks else {}
 
 
 def is_fresh(study: Study, stages: dict[str, Stage], name: str) -> tuple[bool, str]:

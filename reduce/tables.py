@@ -266,6 +266,11 @@ def _benchmark(study):
             ]
         )
     reasons = [f"{e['name']}: {e['verdict']['reason']}" for e in found["closures"]]
+    reasons += [
+        f"{e['name']}: {e['step']['sentence']}"
+        for e in found["closures"]
+        if e["step"] is not None
+    ]
     return "\n\n".join([columns(rows), columns(verdicts), "\n".join(reasons)])
 
 

@@ -7,10 +7,12 @@ from typing import Any
 
 from .driven import driven_ocean
 from .forcing import vorticity_source
+from .hooks import Hook
 from .oceans.barotropic import Barotropic, BarotropicSettings
 from .oceans.barotropic_current import BarotropicCurrent
 from .oceans.boussinesq import Boussinesq
 from .oceans.boussinesq_waves import BoussinesqSettings
+from .oceans.hooked import HookedModel
 from .oceans.two_layer import TwoLayer, TwoLayerSettings
 from .settings import GridSettings, TruthConfig
 from .spaces.basin import Basin
@@ -83,7 +85,11 @@ def build_with(config: TruthConfig, patterns: Mapping[str, Any]) -> Any:
     ------
     DataError
         If a pattern does not fit the space, or the space the ocean.
+    ContractError
+        If a model of the user's own is none.
     """
+    if isinstance(config.ocean, Hook):
+        return HookedModel(config.ocean)
     build = OCEANS[type(config.ocean)]
     return build(config.ocean, build_space(config.grid), patterns)
 

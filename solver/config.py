@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import Any, Generic, TypeVar, get_origin
 
 from .errors import ConfigError
+from .hooks import FORM, read_hook
 from .quantities import dimension_name, nearest, parse_quantity, quoted
 from .resolved import as_table, differing_keys, fingerprint, reference
 from .schema import (
@@ -201,10 +202,16 @@ class _Reader:
             return self.table(given, entry.tables[None], path, None)
         kinds = [kind for kind in entry.tables if kind is not None]
         kind = given.get("kind")
+        if entry.rules.hooks and isinstance(kind, str) and ":" in kind:
+            hook, problems = read_hook(given, kind, label(path))
+            self.problems += problems
+            return hook
         if not isinstance(kind, str) or kind not in entry.tables:
             where = label(path, "kind")
             near = nearest(kind, kinds) if isinstance(kind, str) else None
             known = f"known: {', '.join(map(quoted, kinds))}"
+            if entry.rules.hooks:
+                known += f", or your own {FORM}"
             self.problems.append(
                 f'{where} is missing; give kind = "{kinds[0]}" ({known})'
                 if kind is None

@@ -53,6 +53,11 @@ class Driven:
             raise AttributeError(name)
         return getattr(self._ocean, name)
 
+    @property
+    def variations(self) -> tuple[tuple[TimeFunction, np.ndarray], ...]:
+        """Each function of time with what its pattern adds to F, shape (size,)."""
+        return tuple(self._patterns)
+
     def _varying(self, t: float) -> np.ndarray:
         """Sum of the varying patterns at time t, shape (size,)."""
         return sum(

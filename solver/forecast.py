@@ -188,6 +188,8 @@ def scales_of(
     warnings : list of str
         What the grid or the step does not resolve, and by how much.
     """
+    if ocean.waves is None:  # a model of the user's own: nothing is known of it
+        return [], []
     scales = list(ocean.scales())
     warnings = list(unresolved_lengths(scales))
     start = initial_state(config, ocean, 0)
@@ -255,6 +257,10 @@ def _bytes(stream):
 def _warnings(config: TruthConfig, ocean, plan: Plan):
     """What to look at before running."""
     step = config.time.step
+    if plan.total - plan.spin_up < 1000 * round(config.output.state_every / step):
+        yield "under a thousand states will be recorded: too few to fit noise to"
+    if ocean.waves is None:
+        return
     damping = ocean.damping
     total = np.hypot(*ocean.waves.T)
     edge = damping[total >= total.max() - 1].max()
@@ -271,5 +277,3 @@ def _warnings(config: TruthConfig, ocean, plan: Plan):
             f"the fastest wave turns by {frequency * step:.2g} radians in a step; "
             f"try a step of {0.5 / frequency:.3g} s"
         )
-    if plan.total - plan.spin_up < 1000 * round(config.output.state_every / step):
-        yield "under a thousand states will be recorded: too few to fit noise to"

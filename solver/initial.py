@@ -250,10 +250,14 @@ def _end_of_run(path, ocean):
                 f"{ocean.labels[-1]}); use the ocean and grid of that run"
             )
             raise DataError(message)
-        lengths = tuple(json.loads(file.attrs["config_json"])["grid"]["lengths"])
-        if lengths != ocean.space.lengths:
+        if ocean.waves is None:  # a model of the user's own has no box
+            lengths = here = ()
+        else:
+            made = json.loads(file.attrs["config_json"])
+            lengths, here = tuple(made["grid"]["lengths"]), ocean.space.lengths
+        if lengths != here:
             message = (
-                f"{path}: a box of {lengths} m, here it is {ocean.space.lengths} m; "
+                f"{path}: a box of {lengths} m, here it is {here} m; "
                 "use the box of that run"
             )
             raise DataError(message)

@@ -9,6 +9,7 @@ import textwrap
 from collections.abc import Mapping
 from typing import Any, get_args, get_origin
 
+from .hooks import Hook
 from .quantities import dimension_name, format_quantity
 from .schema import (
     WORDS,
@@ -95,6 +96,8 @@ def differing_keys(
 
 def _kind_table(value: Any, entry: Entry) -> dict[str, Any]:
     """Resolved values of one section, with its kind if it has one."""
+    if isinstance(value, Hook):
+        return value.table()
     kinds = {section: kind for kind, section in entry.tables.items()}
     kind = kinds[type(value)]
     return ({} if kind is None else {"kind": kind}) | as_table(value)

@@ -17,12 +17,19 @@ from functools import cache
 from types import NoneType, UnionType
 from typing import Any, Union, get_args, get_origin, get_type_hints
 
+from .hooks import FORM, is_hook
 from .quantities import example_quantity, format_quantity, parse_quantity, quoted
 
 Names = tuple[str, ...]
 
 LARGEST = 2**63  # integers are below it: TOML 1.0.0, "Integer", has 64 bits
-WORDS = {int: "a whole number", float: "a number", str: "text", bool: "true or false"}
+WORDS = {
+    int: "a whole number",
+    float: "a number",
+    str: "text",
+    bool: "true or false",
+    dict: "a table",
+}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -39,6 +46,7 @@ class Rules:
     length: tuple[int, int | None]
     kinds: Mapping[str, type] | None
     infinite: bool
+    hooks: bool
 
 
 def setting(
@@ -54,6 +62,7 @@ def setting(
     length: int | tuple[int, int | None] = (0, None),
     kinds: Mapping[str, type] | None = None,
     infinite: bool = False,
+    hooks: bool = False,
 ) -> Any:
     """Field of a section; the name of the field is the key in TOML.
 
@@ -77,6 +86,9 @@ def setting(
         Sections that the key ``kind`` of the table chooses from.
     infinite : bool
         Whether a float may be infinite, written ``"inf"`` or ``inf``.
+    hooks : bool
+        Whether a user's own code, ``"package.module:Name"``, may stand in the place
+        of a kind or of a choice.
 
     Returns
     -------
@@ -97,6 +109,7 @@ def setting(
         length=(length, length) if isinstance(length, int) else length,
         kinds=kinds,
         infinite=infinite,
+        hooks=hooks,
     )
     metadata = {"rules": rules}
     if default is MISSING:
@@ -324,7 +337,8 @@ def allowed(rules: Rules) -> str:
     """The range or the choices of a key; empty if there are none."""
     if rules.choices is not None:
         many = "one of " if len(rules.choices) > 1 else ""
-        return many + ", ".join(shown(choice) for choice in rules.choices)
+        text = many + ", ".join(shown(choice) for choice in rules.choices)
+        return f"{text}, or your own {FORM}" if rules.hooks else text
     bounds = {
         "at least": rules.minimum,
         "above": rules.above,
@@ -343,7 +357,11 @@ def allowed(rules: Rules) -> str:
 def is_allowed(value: Any, rules: Rules) -> bool:
     """Whether a value is in the range, or among the choices, of a key."""
     return (
-        (rules.choices is None or value in rules.choices)
+        (
+            rules.choices is None
+            or value in rules.choices
+            or (rules.hooks and is_hook(value))
+        )
         and (rules.minimum is None or value >= rules.minimum)
         and (rules.above is None or value > rules.above)
         and (rules.maximum is None or value <= rules.maximum)
@@ -362,6 +380,8 @@ def example(hint: Any, rules: Rules) -> str:
         return '"text"'
     if hint is bool:
         return "true"
+    if hint is dict:
+        return "{ name = 1.0 }"
     if rules.unit is not None:
         everyday = example_quantity(rules.unit)
         if is_allowed(parse_quantity(everyday, rules.unit), rules):

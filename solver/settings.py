@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import re
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TypeAlias
 
@@ -12,7 +13,14 @@ from .config import setting
 from .driven import is_random
 from .exponential import SCHEMES
 from .forcing import Wave, Wind
-from .initial import INITIAL_KINDS, InitialSettings, NoiseSettings, RestSettings
+from .hooks import Hook
+from .initial import (
+    INITIAL_KINDS,
+    FieldSettings,
+    InitialSettings,
+    NoiseSettings,
+    RestSettings,
+)
 from .oceans.barotropic import BarotropicSettings
 from .oceans.boussinesq_waves import BoussinesqSettings
 from .oceans.two_layer_waves import TwoLayerSettings
@@ -216,14 +224,19 @@ class TruthConfig:
     seed: int = setting(
         default=1, minimum=0, doc="entropy of every random stream of the study"
     )
-    grid: GridSettings = setting(doc="the box and its grid")
-    ocean: BarotropicSettings | TwoLayerSettings | BoussinesqSettings = setting(
+    grid: GridSettings | None = setting(
+        default=None,
+        doc="the box and its grid, which every ocean but a model of your own needs",
+    )
+    ocean: BarotropicSettings | TwoLayerSettings | BoussinesqSettings | Hook = setting(
         kinds={
             "barotropic": BarotropicSettings,
             "two_layer": TwoLayerSettings,
             "boussinesq": BoussinesqSettings,
         },
-        doc="the flow that is run",
+        hooks=True,
+        doc='the flow that is run; or kind = "package.module:Name", a model of your '
+        "own, made with the keys of the table `options`",
     )
     forcing: dict[str, Wave | Wind | SurfaceBuoyancy | GustBand] = setting(
         default=dict,
@@ -288,6 +301,13 @@ class TruthConfig:
                     f"[output.boxes] {name!r} must be usable as the name of a "
                     "variable: letters, digits and underscore, at most 64"
                 )
+        if isinstance(self.ocean, Hook):
+            yield from _beyond_a_hook(self)
+        elif self.grid is None:
+            yield (
+                "[grid] is missing: the box and its grid; write a table [grid] with "
+                "points, lengths"
+            )
         is_slice = isinstance(self.ocean, BoussinesqSettings)
         for name, pattern in self.forcing.items():
             if is_slice and isinstance(pattern, Wind):
@@ -329,6 +349,27 @@ class TruthConfig:
                 f"[ensemble] members = {self.ensemble.members} would all be the same "
                 "run: nothing of it is random; add a table [ensemble.perturbation] "
                 "with energy and band"
+            )
+
+
+def _beyond_a_hook(config: TruthConfig) -> Iterator[str]:
+    """What is asked for that a model without a space cannot give."""
+    asked = {
+        "[grid]": config.grid is not None,
+        "[forcing]": bool(config.forcing),
+        "[stirring]": config.stirring is not None,
+        "[output.resolved]": config.output.resolved is not None,
+        "[output] fields_every": config.output.fields_every is not None,
+        "[output.boxes]": bool(config.output.boxes),
+        "[ensemble.perturbation]": config.ensemble.perturbation is not None,
+        '[initial] kind = "noise"': isinstance(config.initial, NoiseSettings),
+        '[initial] kind = "field"': isinstance(config.initial, FieldSettings),
+    }
+    for where, is_asked in asked.items():
+        if is_asked:
+            yield (
+                f"{where} needs a grid, and a model of your own has none; leave it "
+                "out" + (', or use kind = "mode"' if "initial" in where else "")
             )
 
 

@@ -218,7 +218,7 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
             [labels[i] for i in chosen],
             long_name="part and wavenumbers in x and y",
         )
-        for axis, letter in enumerate("xy"):
+        for axis, letter in enumerate("xy" if ocean.waves is not None else ""):
             add_variable(
                 group,
                 f"{prefix}waves_{letter}",

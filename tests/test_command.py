@@ -366,10 +366,32 @@ def test_a_closed_pipe_is_no_error():
     assert "Traceback" not in result.stderr
 
 
-def test_a_reduction_under_varying_forcing_is_refused(tmp_path, capsys):
-    season = 'forcing.trades.time={kind="seasonal", period="360 d", amplitude=0.2}'
-    arguments = [str(TINY), "--runs", str(tmp_path), "--set", season]
-    assert main(["reduce", *arguments]) == 2
-    assert "[forcing.trades] varies in time" in capsys.readouterr().err
-    assert not list(tmp_path.rglob("*.h5"))
-    assert main(["check", *arguments[:1], *arguments[3:]]) == 0
+@pytest.mark.parametrize(
+    ("time", "start", "word"),
+    [
+        (
+            '{kind="seasonal", period="360 d", amplitude=0.2}',
+            None,
+            "whatever the season",
+        ),
+        # A reduced model then runs from the end of the spin-up to that of the truth.
+        ('{kind="step", at="4000 d", before=0.9}', 1600 * 86400.0, "for good"),
+    ],
+)
+def test_a_reduction_under_forcing_that_varies(time, start, word, tmp_path):
+    arguments = [str(TINY), "--runs", str(tmp_path), "--set"]
+    assert main(["benchmark", *arguments, f"forcing.trades.time={time}"]) == 0
+    folder = tmp_path / "tiny"
+    with h5py.File(folder / "closures.h5") as file:
+        for name in ("bare", "residual", "coloured"):
+            assert file[name]["variation"]["resolved"].shape == (1, 2)
+            assert word in file[name].attrs["notes"]
+            assert bool(np.any(file[name]["variation"]["unresolved"][...])) == (
+                name == "coloured"
+            )
+        # The pattern is a wave of three, which is not among the resolved.
+        assert not np.any(file["operators/variation/resolved"][...])
+    with h5py.File(folder / "simulated" / "coloured.h5") as file:
+        if start is not None:
+            assert file["time"][0] == start
+            assert file["time"][-1] == start + 8000 * 86400.0

@@ -3,20 +3,37 @@
 Each module has one function ``close(data: ClosureData) -> ReducedModel`` and
 says in its docstring what it assumes. To add one, write the module and add
 its name here; the config, the benchmark and the report pick it up.
+
+A closure of a user's own is any function ``close(data, **options)``, or class
+called in the same way, that the config names as ``"package.module:Name"``. It
+gets a :class:`~.data.ClosureData` and returns a
+:class:`~eddyshed.reduce.reduced.ReducedModel` for the resolved coordinates of
+``data.split``; the first line of its docstring is what reports say of it.
 """
 
 from __future__ import annotations
 
 from importlib import import_module
 
+from eddyshed.solver.hooks import is_hook, load
+
 # name -> what it is, in a line
 CLOSURES = {
     "bare": "truncation: the unresolved modes are set to zero",
     "bare_mean": "truncation: the unresolved modes are held at their mean",
+    "damped": "linear damping fitted to the unresolved tendency, without noise",
     "residual": "red noise and linear damping fitted to the unresolved tendency",
     "coloured": "the unresolved modes are simulated as the fitted noise, and "
     "driven and modulated by the resolved ones",
 }
+
+
+def about(name: str) -> str:
+    """What a closure is, in a line."""
+    if not is_hook(name):
+        return CLOSURES[name]
+    first, _, _ = (load(name).__doc__ or "").strip().partition("\n")
+    return first.rstrip(".") or "a closure of the user's own"
 
 
 def closure(name: str):
@@ -25,7 +42,8 @@ def closure(name: str):
     Parameters
     ----------
     name : str
-        One of `CLOSURES`.
+        One of `CLOSURES`. (One of a user's own is a
+        :class:`~eddyshed.solver.hooks.Hook`, which is called in the same way.)
 
     Returns
     -------

@@ -35,10 +35,17 @@ def close(data: ClosureData) -> ReducedModel:
     """
     vectors = data.split.resolved.vectors
     kept_mean = vectors @ project(data.model, vectors, data.split.mean)
-    operators = galerkin(data.model, vectors, np.zeros((len(vectors), 0)), kept_mean)
+    operators = galerkin(
+        data.model,
+        vectors,
+        np.zeros((len(vectors), 0)),
+        kept_mean,
+        times=data.split.times,
+    )
     return ReducedModel(
         name="bare",
         x_forcing=operators.F1,
         x_from_x=operators.A11,
         x_from_xx=operators.B111,
+        variation=operators.variation,
     )

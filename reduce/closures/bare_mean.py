@@ -28,4 +28,5 @@ def close(data: ClosureData) -> ReducedModel:
         x_forcing=operators.F1,
         x_from_x=operators.A11,
         x_from_xx=operators.B111,
+        variation=data.resolved_variation(),
     )

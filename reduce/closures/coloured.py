@@ -46,11 +46,17 @@ def close(data: ClosureData) -> ReducedModel:
     in what is in no mode at all; the shift is reported. The constant of y is
     ``-(B211:Cx + 2 B212:Cxy)``, by the second identity, which stands for F2
     and for the mean of the self-interaction that the noise replaces.
+
+    Where the forcing varies, its unresolved part drives y about that mean. The
+    noise was fitted to y less what follows the clock of the forcing, so the
+    covariance of that part counts beside that of the noise.
     """
     operators = data.operators
     covariance = data.noise.process.covariance
     covariance_x, covariance_xy = data.covariance_x, data.covariance_xy
     noise_mean = np.einsum("imn,mn->i", operators.B122, covariance)
+    if data.forced_covariance is not None:
+        noise_mean += np.einsum("imn,mn->i", operators.B122, data.forced_covariance)
     mixed_mean = 2 * np.einsum("ijm,jm->i", operators.B112, covariance_xy)
     own_mean = np.einsum("ijk,jk->i", operators.B111, covariance_x)
     balanced = -(own_mean + mixed_mean + noise_mean)
@@ -82,6 +88,7 @@ def close(data: ClosureData) -> ReducedModel:
         y_from_xy=operators.B212,
         rate=data.noise.process.rate,
         covariance=covariance,
+        variation=operators.variation,
         notes=tuple(notes),
         facts={"mean calibration [share of rms tendency]": shift},
     )

@@ -11,6 +11,7 @@ from ..coupling import coupling, covariance
 from ..noise.fit import NoiseFit
 from ..operators import Operators
 from ..split import Split
+from ..variation import Variation
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -34,6 +35,9 @@ class ClosureData:
     mean_calibration : bool
         Whether constants are shifted so that mean tendencies vanish over the
         truth.
+    forced_covariance : ndarray, shape (ny, ny), optional
+        Part of `covariance_y` that follows the clock of a varying forcing. The
+        noise is fitted to the rest, and what drives y brings this part back.
     """
 
     model: Model
@@ -43,11 +47,17 @@ class ClosureData:
     covariance_y: np.ndarray
     covariance_xy: np.ndarray
     mean_calibration: bool
+    forced_covariance: np.ndarray | None = None
 
     @property
     def covariance_x(self) -> np.ndarray:
         """Covariance of the resolved coordinates, shape (nx, nx)."""
         return covariance(self.split.x, self.split.x)
+
+    def resolved_variation(self, ny: int = 0) -> Variation | None:
+        """Variation of the forcing for a closure that does not force its y."""
+        variation = self.operators.variation
+        return None if variation is None else variation.without_unresolved(ny)
 
     @property
     def coupling(self) -> np.ndarray:

@@ -32,8 +32,8 @@ class Evidence:
         The model that made the truth, in the inner product of the reduction.
     records : list of TruthRecord
         The members of the truth.
-    flow : Flow
-        What it did.
+    flow : Flow or None
+        What it did; None of a user's own model, which has no space.
     split : Split
         The truth divided.
     noise : NoiseFit
@@ -55,7 +55,7 @@ class Evidence:
     study: Study
     ocean: Any
     records: list[TruthRecord]
-    flow: Flow
+    flow: Flow | None
     split: Split
     noise: NoiseFit
     findings: list[dict[str, Any]]
@@ -109,11 +109,12 @@ def gather(study: Study) -> Evidence:
     benchmark = read_json(study.path("benchmark.json"))
     found = dict(benchmark["correlation"])
     lags = np.array(found.pop("lags"))
+    ocean = model_of(study.config)
     return Evidence(
         study=study,
-        ocean=model_of(study.config),
+        ocean=ocean,
         records=study.records(),
-        flow=read_flow(study.path("flow.h5")),
+        flow=None if ocean.waves is None else read_flow(study.path("flow.h5")),
         split=read_split(study),
         noise=read_noise(study),
         findings=read_json(study.path("audit.json"))["findings"],

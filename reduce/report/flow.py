@@ -50,6 +50,9 @@ SLICES = {
 
 def flow(note: Note, evidence: Evidence) -> str:
     """What the ocean looks like and what it lives on."""
+    if evidence.ocean.waves is None:
+        words = f"The model is {text(in_words(evidence))}."
+        return section("The model", paragraphs(words))
     return section(
         "The flow",
         paragraphs(f"The ocean is {text(in_words(evidence))}. {_speed(evidence)}"),
@@ -65,6 +68,10 @@ def in_words(evidence: Evidence) -> str:
     """Ocean and space, such as ``a vertical slice ..., in a box of 4 m by 1 m ...``."""
     config, directions = evidence.study.config, _directions(evidence.ocean)
     kind = as_table(config)["ocean"]["kind"]
+    if kind not in OCEANS:
+        return (
+            f"{kind}, a model of the user's own, of {evidence.ocean.size} coordinates"
+        )
     sides = " by ".join(
         f"{format_quantity(side, 'm')} in {name}"
         for side, name in zip(config.grid.lengths, directions, strict=True)

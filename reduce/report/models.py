@@ -32,6 +32,7 @@ def models(note: Note, evidence: Evidence) -> str:
             f"truth, for {span(member_duration(settings, evidence.length))} each after "
             "a spin-up of their own."
         ),
+        _steps(evidence),
         "<p>Without scores, and so without curves, because they give no statistics:"
         f"</p>\n<ul>{failed}</ul>"
         if failed
@@ -39,6 +40,21 @@ def models(note: Note, evidence: Evidence) -> str:
         _correlations(note, evidence),
         _distributions(note, evidence),
         _scores(note, evidence),
+    )
+
+
+def _steps(evidence):
+    """What half the time step changes, for each closure that has statistics."""
+    lines = [
+        f"<li><code>{text(entry['name'])}</code>: {text(found['sentence'])}</li>"
+        for entry in evidence.closures
+        if (found := entry["step"]) is not None
+    ]
+    if not lines:
+        return ""
+    return (
+        "<p>A short run of each at half its time step, compared in means and "
+        f"variances:</p>\n<ul>{''.join(lines)}</ul>"
     )
 
 

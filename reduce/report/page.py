@@ -127,9 +127,11 @@ def opening(evidence: Evidence) -> str:
     known = number(
         ratio, ratio * float(times.error[slowest]) / float(times.value[slowest])
     )
-    points = " × ".join(str(count) for count in config.grid.points)
+    points = ""
+    if config.grid is not None:
+        points = f", on {' × '.join(map(str, config.grid.points))} grid points"
     return paragraphs(
-        f"This is {text(in_words(evidence))}, on {points} grid points; it was run for "
+        f"This is {text(in_words(evidence))}{points}; it was run for "
         f"{span(evidence.length)} after a spin-up of {span(config.time.spin_up)}: "
         f"{known} correlation times of its slowest resolved mode, "
         f"{text(resolved.labels[slowest])}. Of its "
@@ -203,8 +205,9 @@ def verdict(note: Note, evidence: Evidence) -> str:
             "said; <em>close</em> one whose means, variances and distributions all "
             "lie within tolerance, whatever its integral times; <em>off</em> one of "
             "which any of these is beyond its tolerance by more than two standard "
-            "errors; <em>undecided</em> any other; <em>failed</em> one that blew up or "
-            "came to rest."
+            "errors; <em>undecided</em> any other; <em>at rest</em> one without noise "
+            "that comes to rest, of which only the means are compared; <em>failed</em> "
+            "one that blew up, or came to rest in spite of its noise."
         ),
     )
 

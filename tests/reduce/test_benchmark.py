@@ -195,7 +195,26 @@ def test_a_model_at_rest_has_failed(truth):
     assert reason == "slow 1 comes to rest: it has no variance"
 
 
-def test_members_at_rest_in_different_places_have_failed(truth):
+def test_a_model_without_noise_at_rest_is_scored_by_its_mean(truth):
+    # It rests at its fixed point: 0.2 / 0.1 and 0.01 / 0.1 from the truth's mean.
+    deviation = np.sqrt(truth.summary.variance.value)
+    forced = silent(x_forcing=np.array([0.2 * deviation[0], 0.01]) * DAMPING)
+    found = run(forced, truth, duration=500.0, members=4)
+    verdict = compare(settings(), "damped", truth, found)["verdict"]
+    assert verdict["word"] == "at rest"
+    assert verdict["count"] == 2
+    # Both lie within the tolerance of 0.25; a shift by a third does not.
+    assert verdict["within_tolerance"] == 2
+    assert "of slow 0, off by 0.2" in verdict["reason"]
+    assert "response to forcing" in verdict["reason"]
+    far = silent(x_forcing=np.array([-0.33 * deviation[0], 0.0]) * DAMPING)
+    found = run(far, truth, duration=500.0, members=4)
+    verdict = compare(settings(), "damped", truth, found)["verdict"]
+    assert verdict["within_tolerance"] == 1
+    assert "of slow 0, off by 0.33" in verdict["reason"]
+
+
+def test_members_at_rest_in_different_places_are_at_rest(truth):
     # dx = x / 2 - x y, dy = x^2 - y: two points of rest, each reached by some.
     tensor = np.zeros((2, 2, 2))
     tensor[0, 0, 1] = tensor[0, 1, 0] = -0.5
@@ -205,8 +224,9 @@ def test_members_at_rest_in_different_places_have_failed(truth):
     ends = found.series[:, -1, 0] - MEAN[0]
     np.testing.assert_allclose(np.abs(ends), np.sqrt(0.5), atol=1e-9)
     assert set(np.sign(ends)) == {-1, 1}
-    reason = failed(compare(settings(), "bare", truth, found))
-    assert reason == "slow 0 comes to rest: it has no variance"
+    verdict = compare(settings(), "bare", truth, found)["verdict"]
+    assert verdict["word"] == "at rest"
+    assert verdict["reason"].startswith("without noise slow 0 comes to rest")
 
 
 def test_a_mode_that_never_moves_cannot_be_compared(truth):

@@ -10,6 +10,7 @@ from toys import Quadratic, orthonormal_vectors, random_model, random_weights
 
 from eddyshed.reduce.closures import CLOSURES, closure
 from eddyshed.reduce.closures.data import ClosureData
+from eddyshed.reduce.closures.instrumental import instrumental_fit
 from eddyshed.reduce.contract import tendency
 from eddyshed.reduce.coupling import covariance
 from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
@@ -445,3 +446,62 @@ def test_the_lag_is_shortened_where_it_is_too_long():
     assert model.facts["condition of the lagged covariance"] < 1e3
     # Three integral times of the noise would be nine.
     assert model.facts["lag of the instrument [s]"] < 1
+
+
+# --- Damped -----------------------------------------------------------------
+
+
+def test_damped_closure_is_the_residual_one_without_its_noise(residual_truths):
+    data = residual_truths[0]
+    damped, residual = closure("damped")(data), closure("residual")(data)
+    assert damped.ny == 0
+    for name in ("x_forcing", "x_from_x", "x_from_xx"):
+        np.testing.assert_array_equal(getattr(damped, name), getattr(residual, name))
+    # What it is good for: a state decays as the linear equation says.
+    decay = -np.linalg.eigvals(damped.x_from_x).real.max()
+    assert damped.facts["slowest decay time [s]"] == pytest.approx(1 / decay)
+    run = simulate(
+        damped,
+        np.ones((1, 2)),
+        step=0.1,
+        n_steps=100,
+        every=100,
+        streams=[stream(1, 0, "none")],
+    )
+    expected = linalg.expm(10 * damped.x_from_x) @ np.ones(2)
+    # Order four with h L = 0.02.
+    np.testing.assert_allclose(run.series[0, -1], expected, rtol=1e-6)
+
+
+def test_errors_of_the_fitted_damping_are_its_scatter(residual_truths):
+    fits = [
+        instrumental_fit(data.split.x, data.coupling, data.split.step, "test")
+        for data in residual_truths
+    ]
+    scatter = np.std([fit.damping.value for fit in fits], axis=0, ddof=1)
+    stated = np.sqrt(np.mean([fit.damping.error**2 for fit in fits], axis=0))
+    # The scatter of twelve is known to a fifth, the lag adds a little to it; four
+    # entries. A factor of two is beyond three such errors.
+    assert np.all(np.abs(np.log(stated / scatter)) < np.log(2))
+
+
+def test_a_lag_outlasts_the_memory_of_the_noise_not_that_of_the_coupling():
+    # Noise of memory 5 against damping of 0.1: what the noise drives comes back in
+    # r = L x + xi with the opposite sign, and shortens the memory of r.
+    eye = np.eye(2)
+    rate = np.block([[0.1 * eye, -eye], [0 * eye, 0.2 * eye]])
+    covariance = linalg.solve_continuous_lyapunov(rate, np.diag([0, 0, 0.4, 0.4]))
+    process = OrnsteinUhlenbeck(rate=rate, covariance=covariance)
+    joint = process.simulate(20_000, 0.5, np.random.default_rng(76))
+    x = joint[..., :2] - joint[..., :2].mean(axis=1)
+    fit = instrumental_fit(x, joint[..., 2:] - 0.1 * x, 0.5, "test")
+    assert 3 * 5 * 0.7 < fit.lag < 3 * 5 * 1.4
+
+
+def test_a_damping_known_poorly_says_so():
+    rng = np.random.default_rng(77)
+    process = OrnsteinUhlenbeck(rate=np.eye(2) / 10, covariance=np.eye(2))
+    x = process.simulate(2000, 0.2, rng)[0]
+    x -= x.mean(axis=0)
+    model = closure("damped")(residual_data(x, rng.standard_normal(x.shape)))
+    assert any("known poorly" in note for note in model.notes)

@@ -19,6 +19,7 @@ from toys import (
 from eddyshed.reduce.contract import check_model, tendency
 from eddyshed.reduce.operators import galerkin, memory_bytes
 from eddyshed.solver.errors import ContractError, DataError
+from eddyshed.solver.time_functions import Ramp
 
 SIZE, NX, NY = 12, 3, 7
 
@@ -165,20 +166,60 @@ def test_rotated_bases_give_rotated_tensors(rng):
         )
 
 
-def test_forcing_is_taken_at_its_time(rng):
+def test_forcing_is_averaged_over_its_times(rng):
     model = random_model(rng, SIZE)
     u, v, mean = split(model, rng)
-    seasonal = Seasonal(**vars(model))
-    early, late = (galerkin(seasonal, u, v, mean, t=t) for t in (0.0, 2.0))
+    steady = galerkin(model, u, v, mean)
+    assert steady.variation is None
+    growing = Growing(**vars(model))
+    late = galerkin(growing, u, v, mean, times=np.array([0.0, 1.0, 5.0]))
+    # The factor of the ramp is 0, 1 and 5: of mean two.
     np.testing.assert_allclose(
-        late.F1 - early.F1, 2 * u.T @ model.constant, rtol=0, atol=1e-13
+        late.F1 - steady.F1, 2 * u.T @ model.constant, rtol=0, atol=1e-13
     )
-    np.testing.assert_allclose(late.A11, early.A11, rtol=0, atol=0)
+    np.testing.assert_allclose(
+        late.F2 - steady.F2, 2 * v.T @ model.constant, rtol=0, atol=1e-13
+    )
+    np.testing.assert_allclose(late.A11, steady.A11, rtol=0, atol=0)
+    np.testing.assert_allclose(
+        late.variation.driver()(7.0),
+        5 * np.hstack([u, v]).T @ model.constant,
+        rtol=0,
+        atol=1e-13,
+    )
 
 
-class Seasonal(Quadratic):
+class Growing(Quadratic):
+    @property
+    def variations(self):
+        ramp = Ramp(start=0.0, end=10.0, before=0.0, after=10.0)
+        return ((ramp, self.constant),)
+
     def forcing(self, t):
         return self.constant * (1 + t)
+
+
+class Undeclared(Growing):
+    variations = ()
+
+
+class Misdeclared(Growing):
+    def forcing(self, t):
+        return self.constant * (1 + 1.001 * t)
+
+
+@pytest.mark.parametrize(
+    ("kind", "complaint"),
+    [
+        (Undeclared, "its forcing varies: .*let the member variations be pairs"),
+        (Misdeclared, "does not vary as its variations say"),
+    ],
+)
+def test_forcing_that_varies_must_say_how(kind, complaint, rng):
+    model = random_model(rng, SIZE)
+    u, v, mean = split(model, rng)
+    with pytest.raises(ContractError, match=complaint):
+        galerkin(kind(**vars(model)), u, v, mean, times=np.arange(5.0))
 
 
 # --- work and memory --------------------------------------------------------
