@@ -8,6 +8,7 @@ from importlib import import_module
 
 _PUBLIC = {
     "as_table": "config",
+    "box_averages": "boxes",
     "build_ocean": "build",
     "budget_of": "diagnostics",
     "forecast_run": "forecast",
@@ -24,6 +25,8 @@ _PUBLIC = {
     "Barotropic": "oceans.barotropic",
     "Basin": "spaces.basin",
     "Boussinesq": "oceans.boussinesq",
+    "BoxAverages": "boxes",
+    "BoxSettings": "boxes",
     "Channel": "spaces.channel",
     "EddyshedError": "errors",
     "ExponentialDifferencingRK4": "exponential",

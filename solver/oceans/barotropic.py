@@ -25,6 +25,7 @@ import numpy as np
 from ..errors import DataError
 from .barotropic_scales import scales_of_flow, scales_of_settings
 from .barotropic_settings import BarotropicSettings, friction
+from .linear_fields import LinearField, flow_fields
 
 __all__ = ["Barotropic", "BarotropicSettings"]
 
@@ -311,6 +312,18 @@ class Barotropic:
     def field_units(self) -> dict[str, str]:
         """Unit of each field."""
         return {"streamfunction": "m2 s-1", "vorticity": "s-1"}
+
+    @property
+    def linear_fields(self) -> dict[str, LinearField]:
+        """Fields that are linear in the state, less the mean current and h."""
+        psi = self._to_psi[np.newaxis]
+        vorticity = LinearField(
+            unit="s-1",
+            long_name="potential vorticity",
+            weights=-self._stiffness * psi,
+        )
+        flow = flow_fields(psi, self.space.k_squared)
+        return flow | {"potential_vorticity": vorticity}
 
     def largest_speed(self, z: np.ndarray) -> float:
         """Largest of |u|/dx + |v|/dy on the grid [s-1], for the CFL number."""

@@ -28,6 +28,7 @@ from ..block_functions import block_function
 from .boussinesq_budget import budget_of_state, units_of_budget
 from .boussinesq_scales import scales_of_flow, scales_of_settings
 from .boussinesq_waves import BoussinesqSettings, check_space, linear_blocks
+from .linear_fields import LinearField, flow_fields
 
 NAMES = ("streamfunction", "buoyancy", "cross_velocity")
 
@@ -321,6 +322,19 @@ class Boussinesq:
         """Unit of each field."""
         units = {"streamfunction": "m2 s-1", "vorticity": "s-1", "buoyancy": "m s-2"}
         return units | ({"cross_velocity": "m s-1"} if self.n_fields == 3 else {})
+
+    @property
+    def linear_fields(self) -> dict[str, LinearField]:
+        """Fields that are linear in the state; b is the departure, as in `fields`."""
+        parts = np.eye(self.n_fields)[:, :, np.newaxis] / self._scale
+        found = flow_fields(parts[0], self.space.k_squared, "upward")
+        for name, weights in zip(self.prognostic[1:], parts[1:], strict=True):
+            found[name] = LinearField(
+                unit=self.field_units[name],
+                long_name=name.replace("_", " "),
+                weights=weights,
+            )
+        return found
 
     def largest_speed(self, z: np.ndarray) -> float:
         """Largest of |u|/dx + |w|/dz on the grid [s-1], for the CFL number."""

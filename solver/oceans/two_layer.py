@@ -26,6 +26,7 @@ import numpy as np
 from ..block_functions import block_function
 from ..errors import DataError
 from . import two_layer_measures as measures
+from .linear_fields import LinearField
 from .two_layer_waves import (
     TwoLayerSettings,
     dissipation,
@@ -326,6 +327,11 @@ class TwoLayer:
     def field_units(self) -> dict[str, str]:
         """Unit of each field."""
         return dict(measures.FIELD_UNITS)
+
+    @property
+    def linear_fields(self) -> dict[str, LinearField]:
+        """Fields of the eddies in each layer that are linear in the state."""
+        return measures.linear_fields(self, self._layers)
 
     def scales(self, z: np.ndarray | None = None) -> Iterable[tuple[str, float, str]]:
         """Derived scales as (name, value, unit), the flow's own if `z` is given."""

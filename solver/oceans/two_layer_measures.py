@@ -8,10 +8,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from .linear_fields import LinearField, flow_fields
 from .two_layer_waves import most_unstable, stiffness
 
 if TYPE_CHECKING:
@@ -161,3 +163,32 @@ def scales_of_flow(ocean: TwoLayer, z: np.ndarray) -> Iterator[tuple[str, float,
     if settings.beta > 0 and barotropic > 0:
         rhines = 2 * np.pi * math.sqrt(barotropic / settings.beta)
         yield "Rhines wavelength of the barotropic flow", rhines, "m"
+
+
+def linear_fields(ocean: TwoLayer, layers: np.ndarray) -> dict[str, LinearField]:
+    """Fields of the eddies in each layer that are linear in the state.
+
+    Parameters
+    ----------
+    ocean : TwoLayer
+        The ocean.
+    layers : ndarray, shape (2, 2, n_real)
+        What multiplies the state on the way to the layers' streamfunctions.
+
+    Returns
+    -------
+    dict of str to LinearField
+    """
+    # The second axis, of the modes, takes the place of several states.
+    vorticities = ocean.potential_vorticity(layers.swapaxes(0, 1)).swapaxes(0, 1)
+    found = {}
+    for layer, psi, vorticity in zip(LAYERS, layers, vorticities, strict=True):
+        of_layer = flow_fields(psi, ocean.space.k_squared)
+        of_layer["potential_vorticity"] = LinearField(
+            unit="s-1", long_name="potential vorticity", weights=vorticity
+        )
+        for name, field in of_layer.items():
+            found[f"{layer}_{name}"] = replace(
+                field, long_name=f"{field.long_name} of the {layer} layer"
+            )
+    return found

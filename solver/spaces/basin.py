@@ -14,6 +14,7 @@ import numpy as np
 
 from ..errors import DataError
 from ..transforms import WallTransform
+from .averages import Interval, mean_sine
 
 # Multiplications in one product of matrices. OpenBLAS shares larger ones out to
 # threads, which wait for each other whenever another process runs.
@@ -96,6 +97,22 @@ class Basin:
         pairs = zip(self.points, self.lengths, strict=True)
         x, y = ((np.arange(n) + 0.5) * (length / n) for n, length in pairs)
         return x, y
+
+    def averages(self, x: Interval, y: Interval) -> np.ndarray:
+        """Average of each coordinate's function over a rectangle, exact.
+
+        Parameters
+        ----------
+        x, y : tuple of float
+            From and to [m]; if they are equal, the average is along a line.
+
+        Returns
+        -------
+        ndarray, shape (n_real,)
+            The average of a field f is ``averages @ f``.
+        """
+        along = mean_sine(self.wavenumber_x, x)
+        return along * mean_sine(self.wavenumber_y, y)
 
     def _matrix(self, f):
         """View a vector as coefficients over (l, k)."""

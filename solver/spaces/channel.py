@@ -15,6 +15,7 @@ import numpy as np
 
 from ..errors import DataError
 from ..transforms import WallTransform
+from .averages import Interval, mean_sine, mean_wave
 
 
 class Channel:
@@ -107,6 +108,25 @@ class Channel:
             np.arange(nx) * (self.lengths[0] / nx),
             (np.arange(ny) + 0.5) * (self.lengths[1] / ny),
         )
+
+    def averages(self, x: Interval, y: Interval) -> np.ndarray:
+        """Average of each coordinate's function over a rectangle, exact.
+
+        Parameters
+        ----------
+        x, y : tuple of float
+            From and to [m]; if they are equal, the average is along a line.
+
+        Returns
+        -------
+        ndarray, shape (n_real,)
+            The average of a field f is ``averages @ f``.
+        """
+        cy = self.cutoff[1]
+        up = mean_sine(self.wavenumber_y, y)
+        along = 2 * mean_wave(self.wavenumber_x[cy::2], x).conj()
+        up[cy:] *= along.view(float)
+        return up
 
     def _unpack(self, f):
         """Coefficients over (l, k); the same memory at each call."""

@@ -17,6 +17,7 @@ import numpy as np
 
 from ..errors import DataError
 from ..transforms import ComplexTransform
+from .averages import Interval, mean_wave
 
 
 class Periodic:
@@ -102,6 +103,22 @@ class Periodic:
             np.arange(nx) * (self.lengths[0] / nx),
             np.arange(ny) * (self.lengths[1] / ny),
         )
+
+    def averages(self, x: Interval, y: Interval) -> np.ndarray:
+        """Average of each coordinate's function over a rectangle, exact.
+
+        Parameters
+        ----------
+        x, y : tuple of float
+            From and to [m]; if they are equal, the average is along a line.
+
+        Returns
+        -------
+        ndarray, shape (n_real,)
+            The average of a field f is ``averages @ f``.
+        """
+        along = mean_wave(self.wavenumber_x[::2], x)
+        return (2 * along * mean_wave(self.wavenumber_y[::2], y)).conj().view(float)
 
     def _scatter(self, at_wave, at_minus):
         """Place coefficients of k and of -k in the transform's input."""
