@@ -12,6 +12,7 @@ import numpy as np
 from eddyshed.solver.randomness import stream
 
 from .closures import CLOSURES
+from .measured import measured_statistics
 from .reduced import ReducedModel
 from .scores import Summary, Verdict, judge, score, summarise
 from .settings import BenchmarkSettings, StudyConfig
@@ -166,11 +167,12 @@ def compare(
     -------
     dict
         Plain data: ``name``, ``what`` it is, members ``lost``, ``cost``,
-        ``verdict``, and ``summary`` and ``scores``, which are None and empty
-        for a model that gives no statistics.
+        ``verdict``, and ``summary``, ``scores`` and ``measured``, which are None,
+        empty and None for a model that gives no statistics; the last also where
+        nothing is measured.
     """
     labels = truth.split.resolved.labels
-    summary, scores, verdict = None, [], _failure(truth, run)
+    summary, scores, measured, verdict = None, [], None, _failure(truth, run)
     if verdict is None:
         rng = stream(config.seed, 0, f"scores of {name}")
         summary = summarise(run.series, run.step, rng)
@@ -185,6 +187,12 @@ def compare(
             rng,
         )
         verdict = judge(scores, labels)
+        measured = measured_statistics(
+            truth.split.resolved,
+            run.series,
+            run.step,
+            stream(config.seed, 0, f"measured of {name}"),
+        )
     return {
         "name": name,
         "what": CLOSURES[name],
@@ -192,6 +200,7 @@ def compare(
         "cost": run.cost,
         "summary": plain(summary),
         "scores": plain(scores),
+        "measured": measured,
         "verdict": plain(verdict),
     }
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from eddyshed.solver.boxes import BoxSettings
 from eddyshed.solver.config import setting
 from eddyshed.solver.settings import TruthConfig
 
@@ -23,10 +24,14 @@ class FourierSettings:
     up_to: float | None = setting(
         default=None,
         minimum=1,
-        doc="largest wavenumber kept, in waves per box (isotropic, zonal)",
+        doc="largest wavenumber kept (isotropic, zonal), in waves per box where the "
+        "space repeats and half waves between walls, the root of the sum of squares "
+        "over the two directions",
     )
     waves: tuple[tuple[int, int], ...] = setting(
-        default=(), doc="waves per box in x and y, one pair for each wave (listed)"
+        default=(),
+        doc="waves per box, or half waves between walls, in x and y, one pair for "
+        "each wave (listed)",
     )
 
     def problems(self):
@@ -48,6 +53,49 @@ class EofSettings:
     """Keep the leading empirical orthogonal functions of the truth."""
 
     modes: int = setting(minimum=1, maximum=1000, doc="how many modes are kept")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BoxesSettings:
+    """Keep averages over rectangles, as instruments measure them."""
+
+    boxes: dict[str, BoxSettings] = setting(
+        doc="a rectangle and the field that is averaged over it, under a name"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if not self.boxes:
+            yield "boxes is empty; write at least one table [resolved.boxes.NAME]"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FileSettings:
+    """Keep vectors that a file holds, made orthonormal in their order."""
+
+    path: str = setting(doc="an HDF5 or netCDF-4 file")
+    variable: str = setting(
+        default="vectors",
+        doc="the variable in it, of shape (coordinate, mode), with the coordinates of "
+        "a truth on this grid; split/resolved/vectors in a split.h5",
+    )
+    modes: int | None = setting(
+        default=None, minimum=1, doc="how many are kept, from the first; absent: all"
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LimitsSettings:
+    """What the reduction may use of the machine."""
+
+    memory: float = setting(
+        default=4e9,
+        unit="B",
+        minimum=2.5e8,
+        doc="memory that the reduction may take, with the program's own; a truth "
+        "that is larger is read in blocks, and what would not fit is refused "
+        "beforehand",
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -176,8 +224,13 @@ class BenchmarkSettings:
 class StudyConfig(TruthConfig):
     """A whole study: the truth, and what is done with it."""
 
-    resolved: FourierSettings | EofSettings = setting(
-        kinds={"fourier": FourierSettings, "eof": EofSettings},
+    resolved: FourierSettings | EofSettings | BoxesSettings | FileSettings = setting(
+        kinds={
+            "fourier": FourierSettings,
+            "eof": EofSettings,
+            "boxes": BoxesSettings,
+            "file": FileSettings,
+        },
         doc="the modes that are kept",
     )
     unresolved: UnresolvedSettings = setting(
@@ -194,4 +247,7 @@ class StudyConfig(TruthConfig):
     )
     benchmark: BenchmarkSettings = setting(
         default=BenchmarkSettings, doc="how the reduced models are scored"
+    )
+    limits: LimitsSettings = setting(
+        default=LimitsSettings, doc="what the reduction may use of the machine"
     )

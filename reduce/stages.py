@@ -23,16 +23,19 @@ from eddyshed.solver.truth import (
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
+from .bases.spectrum import spectrum_notes
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes, covariance
+from .measured import measured_names, measured_statistics
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
-from .settings import FourierSettings, StudyConfig
+from .settings import EofSettings, FourierSettings, StudyConfig
 from .simulated import load, save
-from .split import Split, split_truth, unresolved_series
+from .split import Split, prescribed_basis, split_truth, unresolved_series
+from .stationarity import stationarity, stationarity_notes
 from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Interrupted, Stage, Study, fingerprint_of
@@ -75,6 +78,8 @@ def preflight(config: StudyConfig, command: str) -> None:
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
+    elif not isinstance(config.resolved, EofSettings):
+        prescribed_basis(config.resolved, ocean)
     elif config.resolved.modes >= ocean.size:
         message = (
             f"[resolved] modes = {config.resolved.modes}, but the grid has "
@@ -118,13 +123,16 @@ def run_reduce(study: Study, stamp: str) -> None:
         split.unresolved.n_modes,
         shares,
     )
-    y = unresolved_series(split, ocean, records)
+    for note in split_notes(config, split):
+        log.info("reduce: %s", note)
+    y = unresolved_series(split, ocean, records, config.limits.memory)
     with progress("operators", 1, quiet=study.quiet) as shown:
         operators = galerkin(
             ocean,
             split.resolved.vectors,
             split.unresolved.vectors,
             split.mean,
+            memory=config.limits.memory,
             progress=lambda done, total: shown.to(done / total),
         )
     window = config.noise.window
@@ -176,6 +184,14 @@ def run_reduce(study: Study, stamp: str) -> None:
     )
 
 
+def split_notes(config: StudyConfig, split: Split) -> list[str]:
+    """What is to be said of a divided truth: stationarity, degenerate functions."""
+    notes = stationarity_notes(stationarity(split.x, split.step), split.resolved.labels)
+    if isinstance(config.resolved, EofSettings):
+        notes += spectrum_notes(split.resolved, split.unresolved, split.x, split.step)
+    return notes
+
+
 def read_split(study: Study) -> Split:
     """Read the divided truth."""
     return read_one(study.path("split.h5"), "split", "split", Split)
@@ -223,7 +239,14 @@ def run_benchmark(study: Study, stamp: str) -> None:
         {
             "modes": list(split.resolved.labels),
             "unit": build_ocean(config).unit,
+            "measured": measured_names(split.resolved),
             "truth": {
+                "measured": measured_statistics(
+                    split.resolved,
+                    truth.series,
+                    truth.step,
+                    stream(config.seed, 0, "measured truth"),
+                ),
                 "length": truth.series.shape[1] * truth.step,
                 "summary": plain(truth.summary),
                 "cost": seconds_per_step(config) / config.time.step,
@@ -287,7 +310,7 @@ STAGES = {
         ),
         Stage(
             name="reduce",
-            sections=("resolved", "unresolved", "noise", "closures"),
+            sections=("resolved", "unresolved", "noise", "closures", "limits"),
             after=("truth",),
             outputs=("split.h5", "closures.h5"),
             run=run_reduce,

@@ -21,6 +21,7 @@ from eddyshed.solver.spaces.periodic import Periodic
 
 # Sums of some hundred products of numbers of order one.
 ROUND_OFF = 1e-12
+PLENTY = 4e9  # bytes
 
 
 @dataclass(frozen=True)
@@ -28,7 +29,6 @@ class Record:
     """A truth in memory, with the members that a basis is made from."""
 
     states: np.ndarray
-    stretch: int = 37
 
     @property
     def times(self):
@@ -38,10 +38,8 @@ class Record:
     def size(self):
         return self.states.shape[1]
 
-    def chunks(self):
-        for start in range(0, len(self.states), self.stretch):
-            where = slice(start, min(start + self.stretch, len(self.states)))
-            yield where, self.states[where]
+    def read(self, start, stop):
+        return self.states[start:stop]
 
 
 @dataclass(frozen=True)
@@ -94,9 +92,9 @@ def both(found):
 
 def eofs(record, modes, weights=None):
     model = plain(record.size, weights)
-    return eof_basis(
-        EofSettings(modes=modes), model, [record], record.states.mean(axis=0)
-    )
+    mean = record.states.mean(axis=0)
+    settings = EofSettings(modes=modes)
+    return eof_basis(settings, model, [record], mean, share=1.0, memory=PLENTY)
 
 
 # --- Fourier ----------------------------------------------------------------
@@ -133,7 +131,7 @@ def test_fourier_bases_are_orthonormal_and_complete(family, weighted):
         weights = np.random.default_rng(2).uniform(0.1, 10, model.size)
         model = Waves(model, weights)
     variance = variance_of(model)
-    resolved, remainder = fourier_basis(FAMILIES[family], model, variance)
+    resolved, remainder = fourier_basis(FAMILIES[family], model, variance, share=1.0)
     vectors, found = both((resolved, remainder))
     # Orthonormal, and as many as there are coordinates: they span everything.
     products = model.inner(vectors.T[:, np.newaxis], vectors.T)
@@ -151,7 +149,9 @@ def test_both_parts_of_a_wave_are_kept_side_by_side():
     model = ocean()
     # One part of each wave carries hardly anything, and waves have equal variances.
     variance = np.tile([2.0, 1e-9, 1.0, 1.0 + 1e-9], model.size // 4)
-    resolved, remainder = fourier_basis(FAMILIES["isotropic"], model, variance)
+    resolved, remainder = fourier_basis(
+        FAMILIES["isotropic"], model, variance, share=1.0
+    )
     for basis in (resolved, remainder):
         waves = waves_of(model, basis)
         np.testing.assert_array_equal(waves[::2], waves[1::2])
@@ -168,7 +168,9 @@ def test_both_parts_of_a_wave_are_kept_side_by_side():
 
 def test_remainder_is_ordered_by_the_variance_of_waves():
     model = ocean()
-    _, remainder = fourier_basis(FAMILIES["zonal"], model, variance_of(model))
+    _, remainder = fourier_basis(
+        FAMILIES["zonal"], model, variance_of(model), share=1.0
+    )
     pairs = remainder.variance.reshape(-1, 2).sum(axis=1)
     assert np.all(np.diff(pairs) <= 0)
     assert np.ptp(pairs) > 0.5
@@ -194,7 +196,8 @@ def test_half_a_pair_is_no_pair():
     [
         (
             {"family": "listed", "waves": ((1, 0), (6, 1))},
-            r"[resolved] waves: [6, 1] is not on this grid, which keeps up to [5, 3]",
+            "[resolved] waves: [6, 1] is not on this grid, which keeps waves up to "
+            "[5, 3]",
         ),
         (
             {"up_to": 6.0},
@@ -219,7 +222,12 @@ def test_waves_that_are_not_orthogonal_are_refused():
     model = ocean((8, 8))
     weights = random_weights(np.random.default_rng(1), model.size)
     with pytest.raises(DataError, match="not orthogonal in its inner product"):
-        fourier_basis(FAMILIES["zonal"], Skewed(model, weights), variance_of(model))
+        fourier_basis(
+            FAMILIES["zonal"],
+            Skewed(model, weights),
+            variance_of(model),
+            share=1.0,
+        )
 
 
 # --- Empirical orthogonal functions -----------------------------------------
