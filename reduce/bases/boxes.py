@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import combinations
+
 import numpy as np
 from scipy import linalg
 
@@ -13,6 +15,7 @@ from ..settings import BoxesSettings
 from .basis import Basis, Flat, Measured, dependent
 
 SECTION = "resolved.boxes"
+EDGE = 1e-9  # of the domain: sides that share no more have an edge in common
 NOTHING = 1e-9  # of a usual representer: an average that is zero but for round-off
 
 
@@ -35,8 +38,8 @@ def boxes_basis(settings: BoxesSettings, model: Model) -> Basis:
     Raises
     ------
     DataError
-        If a box does not fit the ocean, if one is a combination of others, or
-        if there is nothing in it that the grid resolves.
+        If a box does not fit the ocean, if two overlap, if one is a combination
+        of others, or if its average is always zero.
 
     Notes
     -----
@@ -49,6 +52,7 @@ def boxes_basis(settings: BoxesSettings, model: Model) -> Basis:
     exactly, and what is unresolved has none of them.
     """
     averages = box_averages(model, settings.boxes, SECTION)
+    _check_apart(settings.boxes, model)
     flat = Flat.of(model)
     found = flat.representers(averages.rows)
     _check_independent(found, averages, model, settings.boxes)
@@ -83,13 +87,48 @@ def _inverse_root(matrix):
     return (vectors / np.sqrt(values)) @ vectors.T
 
 
+def _check_apart(boxes, model):
+    """Refuse boxes of one field that overlap."""
+    for (one, first), (other, second) in combinations(boxes.items(), 2):
+        if first.field == second.field and all(
+            _meet(getattr(first, name), getattr(second, name), length)
+            for name, length in zip(
+                _directions(model), model.space.lengths, strict=True
+            )
+        ):
+            message = (
+                f"[{SECTION}.{one}] and [{SECTION}.{other}] overlap, and average the "
+                "same field; move or shrink one of them, or leave it out"
+            )
+            raise DataError(message)
+
+
+def _directions(model):
+    """What the two directions of an ocean are called."""
+    return getattr(model, "directions", ("x", "y"))
+
+
+def _meet(one, other, length):
+    """Whether two sides, which may wrap around, have more than an edge in common."""
+
+    def pieces(side):
+        start, end = (0.0, length) if side is None else side
+        return [(start, end)] if start < end else [(start, length), (0.0, end)]
+
+    return any(
+        min(a[1], b[1]) - max(a[0], b[0]) > EDGE * length
+        for a in pieces(one)
+        for b in pieces(other)
+    )
+
+
 def _check_independent(representers, averages, model, boxes):
     """Refuse boxes of which one says nothing, or nothing that others do not."""
     names = averages.names
     length = np.linalg.norm(representers, axis=0)
     # The same fields over a ninth of the domain, which is no period of any wave.
     x, y = model.space.lengths
-    up = getattr(model, "directions", ("x", "y"))[1]
+    up = _directions(model)[1]
     ninths = {
         name: BoxSettings(field=box.field, **{"x": (0.0, x / 3), up: (0.0, y / 3)})
         for name, box in boxes.items()

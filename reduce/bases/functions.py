@@ -82,8 +82,13 @@ class Anomalies:
                 wanted = max(start, first) - first, min(stop, last) - first
                 parts.append(record.read(*wanted))
             first = last
-        states = parts[0] if len(parts) == 1 else np.concatenate(parts)
-        found = self.flat.states(states - self.mean)
+        found = parts[0] if len(parts) == 1 else np.concatenate(parts)
+        del parts
+        found -= self.mean
+        if self.flat.root.ndim == 1:  # in place: blocks are as large as they can be
+            found *= self.flat.root
+        else:
+            found = self.flat.states(found)
         if self.removed.shape[1]:
             found -= (found @ self.removed) @ self.removed.T
         return found
@@ -231,15 +236,17 @@ def _from_snapshots(truth, modes, share, rank):
     )
     products = np.empty((states, states))
     left = spare_bytes(truth.memory) - 8 * states**2
-    rows = max(1, int(left / 6 // (8 * size)))  # two blocks, and work on one
+    # One large block, which takes its size again while it is made, and small ones
+    # that go past it.
+    rows = max(1, int(left / 2 // (8 * size)))
     for one in truth.blocks(rows):
         first = truth.read(one.start, one.stop)
         products[one, one] = first @ first.T
-        for other in truth.blocks(rows):
-            if other.start > one.start:
-                second = truth.read(other.start, other.stop)
-                products[one, other] = first @ second.T
-                products[other, one] = products[one, other].T
+        for start in range(one.stop, states, max(1, rows // 4)):
+            other = slice(start, min(start + max(1, rows // 4), states))
+            products[one, other] = first @ truth.read(other.start, other.stop).T
+            products[other, one] = products[one, other].T
+        del first
     products /= states
     variance, in_time = linalg.eigh(products.T, overwrite_a=True)
     del products
