@@ -155,7 +155,8 @@ def galerkin(
         f"projecting the equation on {nx} resolved and {ny} unresolved modes",
         "keep fewer modes, or less of the variance by [unresolved] variance",
     )
-    states = np.vstack([resolved.T, unresolved.T])  # rows u_i, then v_m
+    # Rows u_i, then v_m, each in one piece of memory, which stacking does not promise.
+    states = np.ascontiguousarray(np.vstack([resolved.T, unresolved.T]))
     dual = dual_vectors(model, states.T)
     _check_orthonormal(states @ dual, nx)
     conserving = conserves_energy(model)

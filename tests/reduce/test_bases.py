@@ -16,6 +16,8 @@ from eddyshed.reduce.contract import metric
 from eddyshed.reduce.settings import EofSettings, FourierSettings
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
+from eddyshed.solver.spaces.basin import Basin
+from eddyshed.solver.spaces.channel import Channel
 from eddyshed.solver.spaces.periodic import Periodic
 
 # Sums of some hundred products of numbers of order one.
@@ -227,6 +229,79 @@ def test_waves_that_are_not_orthogonal_are_refused():
             variance_of(model),
             share=1.0,
         )
+
+
+# Between walls: half waves there, and sines only.
+
+
+def walled(space):
+    return Barotropic(BarotropicSettings(), space((12, 8), (1.0, 1.0)))
+
+
+@pytest.mark.parametrize(
+    ("space", "settings", "names"),
+    [
+        (
+            Channel,
+            FourierSettings(family="zonal", up_to=2),
+            ["sin 1y", "sin 2y"],
+        ),
+        (
+            Channel,
+            FourierSettings(family="isotropic", up_to=1.5),
+            ["sin 1y", "cos 1x sin 1y", "sin 1x sin 1y"],
+        ),
+        (
+            Channel,
+            FourierSettings(family="listed", waves=((2, 3),)),
+            ["cos 2x sin 3y", "sin 2x sin 3y"],
+        ),
+        (
+            Basin,
+            FourierSettings(family="isotropic", up_to=2.5),
+            ["sin 1x sin 1y", "sin 2x sin 1y", "sin 1x sin 2y"],
+        ),
+        (
+            Basin,
+            FourierSettings(family="listed", waves=((1, 2), (3, 1))),
+            ["sin 3x sin 1y", "sin 1x sin 2y"],
+        ),
+    ],
+)
+def test_families_between_walls_are_of_sines(space, settings, names):
+    model = walled(space)
+    resolved, rest = fourier_basis(settings, model, variance_of(model), share=1.0)
+    assert list(resolved.labels) == names
+    vectors, _ = both((resolved, rest))
+    products = model.inner(vectors.T[:, np.newaxis], vectors.T)
+    np.testing.assert_allclose(products, np.eye(model.size), atol=ROUND_OFF)
+    # A wave turns in x where that repeats; nothing turns between four walls.
+    turning = [k for k, name in enumerate(names) if space is Channel and "x" in name]
+    np.testing.assert_array_equal(np.flatnonzero(resolved.partners >= 0), turning)
+    # As functions: the first mode is the sine it is named after, of energy 1 / 2.
+    x, y = (axis * np.pi for axis in model.space.grid_axes)
+    field = model.space.to_grid(model.streamfunction(resolved.vectors[:, 0]))
+    k, m = (re.findall(rf"(\d+){axis}", names[0]) for axis in "xy")
+    kind = np.cos if names[0].startswith("cos") else np.sin
+    along = kind((2 if space is Channel else 1) * int(k[0]) * x) if k else 1 + 0 * x
+    shape = np.sin(int(m[0]) * y)[:, np.newaxis] * along
+    size = np.sum(field * shape) / np.sum(shape**2)
+    np.testing.assert_allclose(field, size * shape, atol=1e-13)
+
+
+@pytest.mark.parametrize(
+    ("settings", "words"),
+    [
+        ({"family": "zonal", "up_to": 3.0}, "between walls in x every mode varies in"),
+        (
+            {"family": "listed", "waves": ((0, 1),)},
+            "[0, 1] is not on this grid, which keeps waves from [1, 1] up to [7, 5]",
+        ),
+    ],
+)
+def test_families_that_a_basin_lacks_are_refused(settings, words):
+    with pytest.raises(DataError, match=re.escape(words)):
+        kept_coordinates(FourierSettings(**settings), walled(Basin).waves)
 
 
 # --- Empirical orthogonal functions -----------------------------------------
