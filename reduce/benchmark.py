@@ -14,6 +14,7 @@ from eddyshed.solver.errors import DataError
 from eddyshed.solver.randomness import stream
 
 from .closures import about
+from .measured import measured_statistics
 from .reduced import ReducedModel
 from .scores import SAMPLING, Summary, Verdict, judge, score, summarise
 from .settings import BenchmarkSettings, StudyConfig
@@ -229,11 +230,12 @@ def compare(
     -------
     dict
         Plain data: ``name``, ``what`` it is, members ``lost``, ``cost``,
-        ``verdict``, and ``summary`` and ``scores``, which are None and empty
-        for a model that gives no statistics.
+        ``verdict``, and ``summary``, ``scores`` and ``measured``, which are None,
+        empty and None for a model that gives no statistics; the last also where
+        nothing is measured.
     """
     labels = truth.split.resolved.labels
-    summary, scores, verdict = None, [], _lost(run)
+    summary, scores, measured, verdict = None, [], None, _lost(run)
     at_rest = _at_rest(truth, run) if verdict is None else None
     if at_rest is not None and at_rest.any() and not run.noisy:
         verdict = _resting(config, truth, run, int(np.argmax(at_rest)))
@@ -254,6 +256,12 @@ def compare(
             rng,
         )
         verdict = judge(scores, labels)
+        measured = measured_statistics(
+            truth.split.resolved,
+            run.series,
+            run.step,
+            stream(config.seed, 0, f"measured of {name}"),
+        )
     return {
         "name": name,
         "what": about(name),
@@ -262,6 +270,7 @@ def compare(
         "step": None if run.step_check is None else _step_entry(run, labels),
         "summary": plain(summary),
         "scores": plain(scores),
+        "measured": measured,
         "verdict": plain(verdict),
     }
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -10,6 +11,7 @@ import numpy as np
 from eddyshed.solver.errors import ContractError, DataError
 
 from .contract import Model, conserves_energy, dual_vectors
+from .memory import check_memory, spare_bytes
 from .variation import Variation, mean_forcing, project_variation
 
 # A basis from an eigenvalue problem is orthonormal to 1e-13; one that is off
@@ -97,6 +99,7 @@ def galerkin(
     *,
     times: np.ndarray | float = 0.0,
     batch: int | None = None,
+    memory: float = math.inf,
     progress: Callable[[int, int], None] | None = None,
 ) -> Operators:
     """Project a model on a basis, about a mean state.
@@ -113,7 +116,10 @@ def galerkin(
     times : ndarray, shape (time,), or float
         Times that the forcing is averaged over [s]: those of the truth's records.
     batch : int, optional
-        States in one call of the model; by default as many as fill 32 MB.
+        States in one call of the model; by default as many as fill 32 MB, or a
+        sixteenth of what `memory` leaves.
+    memory : float
+        Budget [B], refused beforehand if it is too small.
     progress : callable, optional
         Called as ``progress(done, total)`` with numbers of evaluations of B.
 
@@ -148,13 +154,21 @@ def galerkin(
     Fourier modes as sparse as they are.
     """
     nx, ny = _checked_counts(model, resolved, unresolved, mean)
-    states = np.vstack([resolved.T, unresolved.T])  # rows u_i, then v_m
+    batch_bytes = batch_bytes_of(memory) if batch is None else 8 * model.size * batch
+    check_memory(
+        memory_bytes(model.size, nx, ny, batch_bytes),
+        memory,
+        f"projecting the equation on {nx} resolved and {ny} unresolved modes",
+        "keep fewer modes, or less of the variance by [unresolved] variance",
+    )
+    # Rows u_i, then v_m, each in one piece of memory, which stacking does not promise.
+    states = np.ascontiguousarray(np.vstack([resolved.T, unresolved.T]))
     dual = dual_vectors(model, states.T)
     _check_orthonormal(states @ dual, nx)
     conserving = conserves_energy(model)
     pairs = nx * (nx + 1) // 2 + nx * ny
     more = (PROBES if ny else 0) if conserving else ny * (ny + 1) // 2
-    work = _Evaluations(model, batch, progress, total=1 + nx + ny + pairs + more)
+    work = _Evaluations(model, batch_bytes, progress, total=1 + nx + ny + pairs + more)
 
     times = np.atleast_1d(np.asarray(times, dtype=float))
     forcing = mean_forcing(model, times)
@@ -189,31 +203,38 @@ def galerkin(
     )
 
 
-def memory_bytes(n: int, nx: int, ny: int) -> int:
+def batch_bytes_of(memory: float) -> float:
+    """Size of a batch of states in a budget [B]."""
+    return min(BATCH_BYTES, spare_bytes(memory) / 16)
+
+
+def memory_bytes(n: int, nx: int, ny: int, batch_bytes: float = BATCH_BYTES) -> int:
     """Forecast the largest memory that :func:`galerkin` takes.
 
     Parameters
     ----------
     n, nx, ny : int
         Numbers of coordinates: of the state, resolved, unresolved.
+    batch_bytes : float
+        Size of a batch of states.
 
     Returns
     -------
     int
-        Bytes for the tensors, the basis and its dual, and one default batch
-        with the work arrays of a typical model.
+        Bytes for the tensors, the basis and its dual, and one batch with the
+        work arrays of a typical model.
     """
     k = nx + ny
     tensors = nx**3 + 2 * nx**2 * ny + 2 * nx * ny**2 + nx * ny**2 + k**2
-    return 8 * (tensors + 3 * n * k) + 6 * max(BATCH_BYTES, 8 * n)
+    return 8 * (tensors + 3 * n * k) + 6 * max(int(batch_bytes), 8 * n)
 
 
 class _Evaluations:
     """Batches of B(u, w), counted."""
 
-    def __init__(self, model, batch, progress, total):
+    def __init__(self, model, batch_bytes, progress, total):
         self.model = model
-        self.batch = max(1, BATCH_BYTES // (8 * model.size)) if batch is None else batch
+        self.batch = max(1, int(batch_bytes // (8 * model.size)))
         self.largest = 0.0
         self._progress, self._total, self._done = progress, total, 0
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from eddyshed.solver.boxes import BoxSettings
 from eddyshed.solver.config import setting
 from eddyshed.solver.hooks import Hook, is_hook, options_problem
 from eddyshed.solver.inner_products import INNER_PRODUCTS
@@ -36,10 +37,14 @@ class FourierSettings:
     up_to: float | None = setting(
         default=None,
         minimum=1,
-        doc="largest wavenumber kept, in waves per box (isotropic, zonal)",
+        doc="largest wavenumber kept (isotropic, zonal), in waves per box where the "
+        "space repeats and half waves between walls, the root of the sum of squares "
+        "over the two directions",
     )
     waves: tuple[tuple[int, int], ...] = setting(
-        default=(), doc="waves per box in x and y, one pair for each wave (listed)"
+        default=(),
+        doc="waves per box, or half waves between walls, in x and y, one pair for "
+        "each wave (listed)",
     )
     inner_product: str = inner_product_setting()
 
@@ -63,6 +68,51 @@ class EofSettings:
 
     modes: int = setting(minimum=1, maximum=1000, doc="how many modes are kept")
     inner_product: str = inner_product_setting()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BoxesSettings:
+    """Keep averages over rectangles, as instruments measure them."""
+
+    boxes: dict[str, BoxSettings] = setting(
+        doc="a rectangle and the field that is averaged over it, under a name"
+    )
+    inner_product: str = inner_product_setting()
+
+    def problems(self):
+        """Rules that go across keys."""
+        if not self.boxes:
+            yield "boxes is empty; write at least one table [resolved.boxes.NAME]"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class FileSettings:
+    """Keep vectors that a file holds, made orthonormal in their order."""
+
+    path: str = setting(doc="an HDF5 or netCDF-4 file")
+    variable: str = setting(
+        default="vectors",
+        doc="the variable in it, of shape (coordinate, mode), with the coordinates of "
+        "a truth on this grid; split/resolved/vectors in a split.h5",
+    )
+    modes: int | None = setting(
+        default=None, minimum=1, doc="how many are kept, from the first; absent: all"
+    )
+    inner_product: str = inner_product_setting()
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class LimitsSettings:
+    """What the reduction may use of the machine."""
+
+    memory: float = setting(
+        default=4e9,
+        unit="B",
+        minimum=2.5e8,
+        doc="memory that the reduction may take, with the program's own; a truth "
+        "that is larger is read in blocks, and what would not fit is refused "
+        "beforehand",
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -217,11 +267,18 @@ class BenchmarkSettings:
 class StudyConfig(TruthConfig):
     """A whole study: the truth, and what is done with it."""
 
-    resolved: FourierSettings | EofSettings | Hook = setting(
-        kinds={"fourier": FourierSettings, "eof": EofSettings},
-        hooks=True,
-        doc='the modes that are kept; or kind = "package.module:Name", a basis of '
-        "your own, made with the keys of the table `options`",
+    resolved: FourierSettings | EofSettings | BoxesSettings | FileSettings | Hook = (
+        setting(
+            kinds={
+                "fourier": FourierSettings,
+                "eof": EofSettings,
+                "boxes": BoxesSettings,
+                "file": FileSettings,
+            },
+            hooks=True,
+            doc='the modes that are kept; or kind = "package.module:Name", a basis of '
+            "your own, made with the keys of the table `options`",
+        )
     )
     unresolved: UnresolvedSettings = setting(
         default=UnresolvedSettings, doc="the modes that noise stands in for"
@@ -238,15 +295,20 @@ class StudyConfig(TruthConfig):
     benchmark: BenchmarkSettings = setting(
         default=BenchmarkSettings, doc="how the reduced models are scored"
     )
+    limits: LimitsSettings = setting(
+        default=LimitsSettings, doc="what the reduction may use of the machine"
+    )
 
     def problems(self):
         """Rules that go across sections."""
         # No plain super(): a dataclass with slots is a second class.
         yield from TruthConfig.problems(self)
-        if isinstance(self.ocean, Hook) and isinstance(self.resolved, FourierSettings):
+        spatial = {FourierSettings: "fourier", BoxesSettings: "boxes"}
+        if isinstance(self.ocean, Hook) and type(self.resolved) in spatial:
             yield (
-                '[resolved] kind = "fourier" needs waves, and a model of your own has '
-                'none; use kind = "eof", or a basis of your own'
+                f'[resolved] kind = "{spatial[type(self.resolved)]}" needs a space, '
+                'and a model of your own has none; use kind = "eof", or a basis of '
+                "your own"
             )
 
     @property

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -11,11 +12,23 @@ from eddyshed.solver.hooks import Hook
 from eddyshed.solver.record import TruthRecord, walk
 
 from .bases.basis import Basis
-from .bases.eof import eof_basis
+from .bases.boxes import boxes_basis
+from .bases.eof import eof_basis, remainder_basis
+from .bases.file_vectors import file_basis
 from .bases.fourier import fourier_basis
 from .bases.hooked import hooked_basis
 from .contract import Model, dual_vectors, metric, tendency
-from .settings import FourierSettings, StudyConfig
+from .memory import check_memory, spare_bytes, stretch_rows
+from .operators import batch_bytes_of, memory_bytes
+from .settings import (
+    BoxesSettings,
+    EofSettings,
+    FileSettings,
+    FourierSettings,
+    StudyConfig,
+)
+
+SERIES = 4  # copies of the unresolved series that the fit of the noise takes
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -90,7 +103,7 @@ def split_truth(
     Parameters
     ----------
     config : StudyConfig
-        Sections ``[resolved]`` and ``[unresolved]``.
+        Sections ``[resolved]``, ``[unresolved]`` and ``[limits]``.
     model : Model
         The equation that made the truth.
     records : sequence of TruthRecord
@@ -104,32 +117,34 @@ def split_truth(
     Raises
     ------
     DataError
-        If the basis cannot be made from this truth.
+        If the basis cannot be made from this truth, or what comes of it does
+        not fit into the memory that is allowed.
     """
-    mean, variance = _moments(records)
-    if isinstance(config.resolved, FourierSettings):
-        resolved, remainder = fourier_basis(config.resolved, model, variance)
-    elif isinstance(config.resolved, Hook):
-        resolved, remainder = hooked_basis(config.resolved, model, records, mean)
+    memory, share = config.limits.memory, config.unresolved.variance
+    settings, size = config.resolved, records[0].size
+    mean, variance, total = _moments(model, records, memory)
+    how = {"share": share, "memory": memory}
+    if isinstance(settings, FourierSettings):
+        resolved, unresolved = fourier_basis(settings, model, variance, share=share)
+    elif isinstance(settings, EofSettings):
+        resolved, unresolved = eof_basis(settings, model, records, mean, **how)
     else:
-        resolved, remainder = eof_basis(config.resolved, model, records, mean)
-    unresolved = _enough(remainder, config.unresolved.variance)
-    weights = metric(model)
-    if weights.ndim == 1:
-        total = float(variance @ weights)
-    else:
-        total = float(resolved.variance.sum() + remainder.variance.sum())
-    kept = float(resolved.variance.sum() + unresolved.variance.sum())
+        resolved = prescribed_basis(settings, model)
+        unresolved = remainder_basis(resolved.vectors, model, records, mean, **how)
+    _check_series(resolved, unresolved, records, memory)
     dual = dual_vectors(model, resolved.vectors)
     x = np.empty((len(records), len(records[0].times), resolved.n_modes))
     rate = np.empty_like(x)
-    for member, where, states in walk(records):
+    for member, where, states in walk(records, stretch_rows(memory, size)):
         x[member, where] = (states - mean) @ dual
         times = records[member].times[where]
         rates = np.array(
             [tendency(model, t, z) for t, z in zip(times, states, strict=True)]
         )
         rate[member, where] = rates @ dual
+    if not resolved.variance.any():  # a basis that knew nothing of the truth
+        resolved = replace(resolved, variance=np.square(x).mean(axis=(0, 1)))
+    kept = float(resolved.variance.sum() + unresolved.variance.sum())
     fine_x, fine_step = _fine(records, dual, mean)
     step = records[0].step
     return Split(
@@ -148,39 +163,73 @@ def split_truth(
     )
 
 
+def prescribed_basis(
+    settings: BoxesSettings | FileSettings | Hook, model: Model
+) -> Basis:
+    """Resolved modes that need no truth to be known, without their variances."""
+    if isinstance(settings, Hook):
+        return hooked_basis(settings, model)
+    if isinstance(settings, BoxesSettings):
+        return boxes_basis(settings, model)
+    return file_basis(settings, model)
+
+
 def unresolved_series(
-    split: Split, model: Model, records: Sequence[TruthRecord]
+    split: Split,
+    model: Model,
+    records: Sequence[TruthRecord],
+    memory: float = math.inf,
 ) -> np.ndarray:
-    """Unresolved coordinates, less their mean, shape (member, time, ny)."""
+    """Unresolved coordinates, less their mean, shape (member, time, ny).
+
+    The budget `memory` [B] tells how much of the truth is read at once.
+    """
     dual = dual_vectors(model, split.unresolved.vectors)
     y = np.empty((len(records), len(records[0].times), split.unresolved.n_modes))
-    for member, where, states in walk(records):
+    for member, where, states in walk(records, stretch_rows(memory, len(dual))):
         y[member, where] = (states - split.mean) @ dual
     return y
 
 
-def _moments(records):
-    """Mean and variance of every coordinate, from stretches of the records."""
+def _moments(model, records, memory):
+    """Mean and variance of every coordinate, and variance of the whole state."""
     count = sum(len(record.times) for record in records)
-    mean = np.zeros(records[0].size)
-    for _, _, states in walk(records):
+    size = records[0].size
+    rows = stretch_rows(memory, size)
+    mean = np.zeros(size)
+    for _, _, states in walk(records, rows):
         mean += states.sum(axis=0) / count
-    variance = np.zeros(records[0].size)
-    for _, _, states in walk(records):
-        variance += ((states - mean) ** 2).sum(axis=0) / count
-    return mean, variance
+    variance, total = np.zeros(size), 0.0
+    weights = metric(model)
+    for _, _, states in walk(records, rows):
+        anomalies = states - mean
+        variance += (anomalies**2).sum(axis=0) / count
+        if weights.ndim == 2:
+            total += float(np.sum(anomalies * (anomalies @ weights))) / count
+    return mean, variance, float(variance @ weights) if weights.ndim == 1 else total
 
 
-def _enough(remainder: Basis, share: float) -> Basis:
-    """Leading modes of the remainder that hold a share of its variance."""
-    gathered = np.cumsum(remainder.variance)
-    # A rounding error below the share must not cost another hundred modes.
-    count = int(np.searchsorted(gathered, share * gathered[-1] * (1 - 1e-12))) + 1
-    count = min(count, remainder.n_modes)
-    partner = remainder.partners[count - 1]
-    if partner >= count:  # keep the two parts of a wave together
-        count = int(partner) + 1
-    return remainder.take(np.arange(count))
+def _check_series(resolved, unresolved, records, memory):
+    """Refuse unresolved series that would not fit, and say which share would."""
+    states = sum(len(record.times) for record in records)
+    size, nx, ny = records[0].size, resolved.n_modes, unresolved.n_modes
+
+    def needed(ny):
+        # Vectors and duals; tensors; x, its tendency and the series of y.
+        series = 8 * states * (2 * nx + SERIES * ny)
+        return memory_bytes(size, nx, ny, batch_bytes_of(memory)) + series
+
+    fits = [k for k in range(1, ny + 1) if needed(k) <= spare_bytes(memory)]
+    held = unresolved.variance[: len(fits)].sum() / unresolved.variance.sum()
+    held = np.floor(1000 * held) / 1000  # of the share that was asked for
+    instead = "record fewer states, or keep fewer modes"
+    if fits:
+        instead = (
+            f"keep {len(fits)} by a [unresolved] variance that is at most {held:g} "
+            f"times as large, or record fewer states"
+        )
+    what = f"{ny} unresolved modes at {states} states"
+    check_memory(needed(ny), memory, what, instead)
 
 
 def _fine(records, dual, mean):

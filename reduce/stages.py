@@ -23,7 +23,7 @@ from eddyshed.solver.truth import (
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
-from .bases.hooked import checked_vectors
+from .bases.spectrum import spectrum_notes
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
@@ -32,12 +32,14 @@ from .coupling import coupling, coupling_sizes, covariance
 from .flow.measure import measure_flow
 from .flow.parts import write_flow
 from .inner_products import in_product
+from .measured import measured_names, measured_statistics
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
-from .settings import FourierSettings, StudyConfig
+from .settings import EofSettings, FourierSettings, StudyConfig
 from .simulated import load, save
-from .split import Split, split_truth, unresolved_series
+from .split import Split, prescribed_basis, split_truth, unresolved_series
+from .stationarity import stationarity, stationarity_notes
 from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Stage, Study, fingerprint_of
@@ -82,8 +84,8 @@ def preflight(config: StudyConfig) -> None:
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
-    elif isinstance(config.resolved, Hook):
-        checked_vectors(config.resolved, ocean)
+    elif not isinstance(config.resolved, EofSettings):
+        prescribed_basis(config.resolved, ocean)
     elif config.resolved.modes >= ocean.size:
         message = (
             f"[resolved] modes = {config.resolved.modes}, but the grid has "
@@ -117,7 +119,9 @@ def run_reduce(study: Study, stamp: str) -> None:
         split.unresolved.n_modes,
         shares,
     )
-    y = unresolved_series(split, model, records)
+    for note in split_notes(config, split):
+        log.info("reduce: %s", note)
+    y = unresolved_series(split, model, records, config.limits.memory)
     with progress("operators", 1, quiet=study.quiet) as shown:
         operators = galerkin(
             model,
@@ -125,6 +129,7 @@ def run_reduce(study: Study, stamp: str) -> None:
             split.unresolved.vectors,
             split.mean,
             times=split.times,
+            memory=config.limits.memory,
             progress=lambda done, total: shown.to(done / total),
         )
     window = config.noise.window
@@ -213,6 +218,14 @@ def _checked(name, made, nx):
     return replace(made, name=name)
 
 
+def split_notes(config: StudyConfig, split: Split) -> list[str]:
+    """What is to be said of a divided truth: stationarity, degenerate functions."""
+    notes = stationarity_notes(stationarity(split.x, split.step), split.resolved.labels)
+    if isinstance(config.resolved, EofSettings):
+        notes += spectrum_notes(split.resolved, split.unresolved, split.x, split.step)
+    return notes
+
+
 def read_split(study: Study) -> Split:
     """Read the divided truth."""
     return read_one(study.path("split.h5"), "split", "split", Split)
@@ -260,7 +273,14 @@ def run_benchmark(study: Study, stamp: str) -> None:
         {
             "modes": list(split.resolved.labels),
             "unit": model_of(config).unit,
+            "measured": measured_names(split.resolved),
             "truth": {
+                "measured": measured_statistics(
+                    split.resolved,
+                    truth.series,
+                    truth.step,
+                    stream(config.seed, 0, "measured truth"),
+                ),
                 "length": truth.series.shape[1] * truth.step,
                 "summary": plain(truth.summary),
                 "cost": seconds_per_step(config) / config.time.step,
@@ -331,7 +351,7 @@ STAGES = {
         ),
         Stage(
             name="reduce",
-            sections=("resolved", "unresolved", "noise", "closures"),
+            sections=("resolved", "unresolved", "noise", "closures", "limits"),
             after=("truth",),
             outputs=("split.h5", "closures.h5"),
             run=run_reduce,

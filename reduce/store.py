@@ -34,6 +34,7 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "partners": ("mode",),
         "variance": ("mode",),
     },
+    "Measured": {"matrix": ("measured", "mode")},
     "Split": {
         "mean": ("coordinate",),
         "resolved_mean": ("resolved_mode",),
@@ -122,6 +123,7 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "covariance": ("y", "y"),
     },
 }
+NOTHING = json.dumps(None)  # an optional field that is not there
 
 # Units of arrays, where they are known: class name -> field -> unit, or the field
 # that holds the unit. An array whose one axis bears its own name is the coordinate
@@ -167,8 +169,8 @@ def pack(group: h5py.Group, value: Any) -> None:
     group : h5py.Group
         An empty group.
     value : dataclass instance
-        Its fields are arrays, text, numbers, tuples of text, dicts of numbers
-        or dataclasses.
+        Its fields are arrays, text, numbers, tuples of text, dicts of numbers,
+        dataclasses, or None.
     """
     axes = AXES.get(type(value).__name__, {})
     units = UNITS.get(type(value).__name__, {})
@@ -206,14 +208,14 @@ def unpack(group: h5py.Group, kind: type) -> Any:
     hints = typing.get_type_hints(kind)
     values = {}
     for field in dataclasses.fields(kind):
-        hint = hints[field.name]
-        if group.attrs.get(field.name) == "null":  # an optional part that is absent
-            values[field.name] = None
-            continue
+        hint, optional = hints[field.name], False
         if isinstance(hint, types.UnionType):
+            optional = True
             hint = next(h for h in typing.get_args(hint) if h is not type(None))
         origin = typing.get_origin(hint) or hint
-        if dataclasses.is_dataclass(hint):
+        if optional and group.attrs.get(field.name) == NOTHING:
+            values[field.name] = None
+        elif dataclasses.is_dataclass(hint):
             values[field.name] = unpack(group[field.name], hint)
         elif origin is np.ndarray:
             stored = group[field.name][...]

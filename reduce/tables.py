@@ -13,7 +13,8 @@ from eddyshed.solver.progress import clock
 from eddyshed.solver.quantities import format_quantity
 from eddyshed.solver.settings import TruthConfig
 
-from .stages import read_noise, read_split
+from .measured import measured_rows
+from .stages import read_noise, read_split, split_notes
 from .store import plain, read_json
 from .study import Study, available_memory, members_text
 
@@ -208,7 +209,8 @@ def _reduce(study):
         f"noise: {noise.structure}, matches the {noise.match} over a window of "
         f"{format_quantity(noise.window, 's')}"
     )
-    return "\n".join([text, *(f"note: {note}" for note in noise.notes)])
+    notes = [*split_notes(study.config, split), *noise.notes]
+    return "\n".join([text, *(f"note: {note}" for note in notes)])
 
 
 def _audit(study):
@@ -252,6 +254,10 @@ def _benchmark(study):
                 for summary in series.values()
             ]
             rows.append([title if mode == 0 else "", label, *cells])
+    measured = [["measured", "box", *series]]
+    for quantity, unit, label, pairs in measured_rows(found):
+        cells = [pair(*each) for each in pairs]
+        measured.append([f"{quantity} [{unit}]", label, *cells])
     verdicts = [["closure", "verdict", "within sampling", "within tolerance", "speed"]]
     for entry in found["closures"]:
         verdict = entry["verdict"]
@@ -271,7 +277,8 @@ def _benchmark(study):
         for e in found["closures"]
         if e["step"] is not None
     ]
-    return "\n\n".join([columns(rows), columns(verdicts), "\n".join(reasons)])
+    tables = [rows, measured, verdicts] if len(measured) > 1 else [rows, verdicts]
+    return "\n\n".join([*map(columns, tables), "\n".join(reasons)])
 
 
 def _report(study):

@@ -6,7 +6,7 @@ and a fingerprint of a config does not depend on the units it was written in.
 
 Units and their sizes: BIPM, The International System of Units, 9th edition,
 tables 2, 4, 7 and 8; the year is the Julian year of 365.25 days (G. A. Wilkins,
-The IAU Style Manual, 1989).
+The IAU Style Manual, 1989). A kilobyte is 1000 bytes (IEC 80000-13).
 """
 
 from __future__ import annotations
@@ -17,25 +17,30 @@ from collections.abc import Iterable
 from difflib import get_close_matches
 from fractions import Fraction
 
-Dimensions = tuple[int, int, int, int]  # powers of metre, second, kilogram, kelvin
+# Powers of metre, second, kilogram, kelvin, byte.
+Dimensions = tuple[int, int, int, int, int]
 
 UNITS: dict[str, tuple[Fraction, Dimensions]] = {
-    "mm": (Fraction(1, 1000), (1, 0, 0, 0)),
-    "cm": (Fraction(1, 100), (1, 0, 0, 0)),
-    "m": (Fraction(1), (1, 0, 0, 0)),
-    "km": (Fraction(1000), (1, 0, 0, 0)),
-    "s": (Fraction(1), (0, 1, 0, 0)),
-    "min": (Fraction(60), (0, 1, 0, 0)),
-    "h": (Fraction(3600), (0, 1, 0, 0)),
-    "d": (Fraction(86400), (0, 1, 0, 0)),
-    "yr": (Fraction(31557600), (0, 1, 0, 0)),
-    "g": (Fraction(1, 1000), (0, 0, 1, 0)),
-    "kg": (Fraction(1), (0, 0, 1, 0)),
-    "K": (Fraction(1), (0, 0, 0, 1)),
-    "N": (Fraction(1), (1, -2, 1, 0)),
-    "Pa": (Fraction(1), (-1, -2, 1, 0)),
-    "J": (Fraction(1), (2, -2, 1, 0)),
-    "W": (Fraction(1), (2, -3, 1, 0)),
+    "mm": (Fraction(1, 1000), (1, 0, 0, 0, 0)),
+    "cm": (Fraction(1, 100), (1, 0, 0, 0, 0)),
+    "m": (Fraction(1), (1, 0, 0, 0, 0)),
+    "km": (Fraction(1000), (1, 0, 0, 0, 0)),
+    "s": (Fraction(1), (0, 1, 0, 0, 0)),
+    "min": (Fraction(60), (0, 1, 0, 0, 0)),
+    "h": (Fraction(3600), (0, 1, 0, 0, 0)),
+    "d": (Fraction(86400), (0, 1, 0, 0, 0)),
+    "yr": (Fraction(31557600), (0, 1, 0, 0, 0)),
+    "g": (Fraction(1, 1000), (0, 0, 1, 0, 0)),
+    "kg": (Fraction(1), (0, 0, 1, 0, 0)),
+    "K": (Fraction(1), (0, 0, 0, 1, 0)),
+    "N": (Fraction(1), (1, -2, 1, 0, 0)),
+    "Pa": (Fraction(1), (-1, -2, 1, 0, 0)),
+    "J": (Fraction(1), (2, -2, 1, 0, 0)),
+    "W": (Fraction(1), (2, -3, 1, 0, 0)),
+    "B": (Fraction(1), (0, 0, 0, 0, 1)),
+    "kB": (Fraction(10**3), (0, 0, 0, 0, 1)),
+    "MB": (Fraction(10**6), (0, 0, 0, 0, 1)),
+    "GB": (Fraction(10**9), (0, 0, 0, 0, 1)),
 }
 
 # What people write instead, in small letters; only used to suggest the symbol.
@@ -57,35 +62,40 @@ _NAMES = {symbol.lower(): symbol for symbol in UNITS} | {
     "pascal": "Pa",
     "joule": "J",
     "watt": "W",
+    "byte": "B",
+    "kilobyte": "kB",
+    "megabyte": "MB",
+    "gigabyte": "GB",
 }
 _OFFSET_UNITS = ("degc", "°c", "celsius", "degf", "°f", "fahrenheit")
 
 _COMMON: dict[Dimensions, tuple[str, str]] = {
-    (0, 0, 0, 0): ("a number without unit", "0.5"),
-    (1, 0, 0, 0): ("a length", "20 km"),
-    (2, 0, 0, 0): ("an area", "100 km2"),
-    (3, 0, 0, 0): ("a volume", "1 km3"),
-    (-1, 0, 0, 0): ("an inverse length", "1e-5 1/m"),
-    (0, 1, 0, 0): ("a time", "6 h"),
-    (0, -1, 0, 0): ("a rate", "0.01 1/d"),
-    (0, -2, 0, 0): ("a rate squared", "1e-11 s-2"),
-    (1, -1, 0, 0): ("a velocity", "0.1 m/s"),
-    (1, -2, 0, 0): ("an acceleration", "9.81 m/s2"),
-    (-1, -1, 0, 0): ("a rate per length", "2e-11 1/m/s"),
-    (2, -1, 0, 0): ("a viscosity", "100 m2/s"),
-    (4, -1, 0, 0): ("a biharmonic viscosity", "1e10 m4/s"),
-    (6, -1, 0, 0): ("a viscosity of order six", "1e20 m6/s"),
-    (8, -1, 0, 0): ("a viscosity of order eight", "1e32 m8/s"),
-    (2, -2, 0, 0): ("an energy per mass", "0.01 m2/s2"),
-    (2, -3, 0, 0): ("a power per mass", "1e-9 m2/s3"),
-    (0, 0, 1, 0): ("a mass", "1 kg"),
-    (-3, 0, 1, 0): ("a density", "1025 kg/m3"),
-    (0, 0, 0, 1): ("a temperature", "280 K"),
-    (1, -2, 1, 0): ("a force", "1 N"),
-    (-1, -2, 1, 0): ("a pressure or stress", "0.1 Pa"),
-    (2, -2, 1, 0): ("an energy", "1 J"),
-    (2, -3, 1, 0): ("a power", "1 W"),
-    (0, -3, 1, 0): ("a power per area", "100 W/m2"),
+    (0, 0, 0, 0, 0): ("a number without unit", "0.5"),
+    (1, 0, 0, 0, 0): ("a length", "20 km"),
+    (2, 0, 0, 0, 0): ("an area", "100 km2"),
+    (3, 0, 0, 0, 0): ("a volume", "1 km3"),
+    (-1, 0, 0, 0, 0): ("an inverse length", "1e-5 1/m"),
+    (0, 1, 0, 0, 0): ("a time", "6 h"),
+    (0, -1, 0, 0, 0): ("a rate", "0.01 1/d"),
+    (0, -2, 0, 0, 0): ("a rate squared", "1e-11 s-2"),
+    (1, -1, 0, 0, 0): ("a velocity", "0.1 m/s"),
+    (1, -2, 0, 0, 0): ("an acceleration", "9.81 m/s2"),
+    (-1, -1, 0, 0, 0): ("a rate per length", "2e-11 1/m/s"),
+    (2, -1, 0, 0, 0): ("a viscosity", "100 m2/s"),
+    (4, -1, 0, 0, 0): ("a biharmonic viscosity", "1e10 m4/s"),
+    (6, -1, 0, 0, 0): ("a viscosity of order six", "1e20 m6/s"),
+    (8, -1, 0, 0, 0): ("a viscosity of order eight", "1e32 m8/s"),
+    (2, -2, 0, 0, 0): ("an energy per mass", "0.01 m2/s2"),
+    (2, -3, 0, 0, 0): ("a power per mass", "1e-9 m2/s3"),
+    (0, 0, 1, 0, 0): ("a mass", "1 kg"),
+    (-3, 0, 1, 0, 0): ("a density", "1025 kg/m3"),
+    (0, 0, 0, 1, 0): ("a temperature", "280 K"),
+    (1, -2, 1, 0, 0): ("a force", "1 N"),
+    (-1, -2, 1, 0, 0): ("a pressure or stress", "0.1 Pa"),
+    (2, -2, 1, 0, 0): ("an energy", "1 J"),
+    (2, -3, 1, 0, 0): ("a power", "1 W"),
+    (0, -3, 1, 0, 0): ("a power per area", "100 W/m2"),
+    (0, 0, 0, 0, 1): ("an amount of memory", "4 GB"),
 }
 
 _QUANTITY = re.compile(
@@ -156,7 +166,7 @@ def parse_quantity(text: str, unit: str) -> float:
 def format_quantity(value: float, unit: str) -> str:
     """Text of a quantity for people, with up to six significant digits.
 
-    Lengths and times are in the largest unit that gives a short number of at
+    Lengths, times and memory are in the largest unit that gives a short number of at
     least one, else in the largest unit that gives at least one; any other
     quantity is in SI.
 
@@ -175,7 +185,11 @@ def format_quantity(value: float, unit: str) -> str:
     """
     if not math.isfinite(value):
         return f"{value:g}"
-    ladder = {"m": ("km", "m", "cm", "mm"), "s": ("yr", "d", "h", "min", "s")}.get(unit)
+    ladder = {
+        "m": ("km", "m", "cm", "mm"),
+        "s": ("yr", "d", "h", "min", "s"),
+        "B": ("GB", "MB", "kB", "B"),
+    }.get(unit)
     if ladder is None or value == 0:
         return f"{value + 0.0:.6g} {unit}"
     sized = [(value / float(UNITS[symbol][0]), symbol) for symbol in ladder]
@@ -211,8 +225,8 @@ def nearest(word: str, known: Iterable[str]) -> str | None:
 
 def _name(dimensions: Dimensions) -> str:
     """Name of a dimension with, where it is not plain, its SI unit."""
-    metre, second, kilogram, kelvin = dimensions
-    named = {"kg": kilogram, "m": metre, "s": second, "K": kelvin}
+    metre, second, kilogram, kelvin, byte = dimensions
+    named = {"kg": kilogram, "m": metre, "s": second, "K": kelvin, "B": byte}
     unit = " ".join(
         symbol if power == 1 else f"{symbol}{power}"
         for symbol, power in named.items()
@@ -240,7 +254,7 @@ def _parse_unit(text: str) -> tuple[Fraction, Dimensions]:
         raise ValueError(message)
     if above == ["1"]:
         above = []
-    scale, powers = Fraction(1), [0, 0, 0, 0]
+    scale, powers = Fraction(1), [0, 0, 0, 0, 0]
     factors = [(1, word) for word in above] + [(-1, part[0]) for part in below]
     for sign, word in factors:
         match = _FACTOR.fullmatch(word)
@@ -257,7 +271,7 @@ def _parse_unit(text: str) -> tuple[Fraction, Dimensions]:
             raise ValueError(message)
         scale *= size ** (sign * power)
         powers = [p + sign * power * d for p, d in zip(powers, dimensions, strict=True)]
-    return scale, (powers[0], powers[1], powers[2], powers[3])
+    return scale, tuple(powers)
 
 
 def _unit(symbol: str) -> tuple[Fraction, Dimensions]:

@@ -61,8 +61,13 @@ class TruthRecord:
         with open_file(self.path, kind="truth") as file:
             return file["state"][start:stop]
 
-    def chunks(self) -> Iterator[tuple[slice, np.ndarray]]:
-        """Walk through all full states in stretches of at most 64 MB.
+    def chunks(self, rows: int | None = None) -> Iterator[tuple[slice, np.ndarray]]:
+        """Walk through all full states, a stretch at a time.
+
+        Parameters
+        ----------
+        rows : int, optional
+            States in a stretch; as many as 64 MB hold by default.
 
         Yields
         ------
@@ -71,7 +76,7 @@ class TruthRecord:
         ndarray, shape (n, size)
             Their states.
         """
-        rows = max(1, CHUNK_BYTES // (8 * self.size))
+        rows = rows or max(1, CHUNK_BYTES // (8 * self.size))
         with open_file(self.path, kind="truth") as file:
             for start in range(0, len(self.times), rows):
                 where = slice(start, min(start + rows, len(self.times)))
@@ -129,9 +134,16 @@ def _parts(file):
 
 
 def walk(
-    records: Sequence[TruthRecord],
+    records: Sequence[TruthRecord], rows: int | None = None
 ) -> Iterator[tuple[int, slice, np.ndarray]]:
     """Walk through all full states of all members, a stretch at a time.
+
+    Parameters
+    ----------
+    records : sequence of TruthRecord
+        The members.
+    rows : int, optional
+        As for `TruthRecord.chunks`.
 
     Yields
     ------
@@ -143,7 +155,7 @@ def walk(
         Their states.
     """
     for member, record in enumerate(records):
-        for where, states in record.chunks():
+        for where, states in record.chunks(rows):
             yield member, where, states
 
 

@@ -250,7 +250,7 @@ def test_foreign_code_runs_only_if_it_is_allowed(folder):
         ("ocean.options={when=2020-01-01}", "holds a date"),
         ("resolved={kind='mine:Skewed'}", "off from orthonormal by"),
         ("resolved={kind='mine:Flat'}", r"shape \(3, 3\), must be \(3, n\)"),
-        ("resolved={kind='fourier', up_to=2}", "needs waves"),
+        ("resolved={kind='fourier', up_to=2}", "needs a space"),
         ("closures.use=['mine:none']", "no class or function none"),
         ("output.fields_every=0.1 s", "needs a grid"),
         ("initial={kind='noise', energy='1 m2 s-2', band=[1, 2]}", "use kind = .mode"),

@@ -5,16 +5,14 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 import numpy as np
-from scipy import linalg
 
 from eddyshed.solver.errors import DataError
-from eddyshed.solver.record import TruthRecord, walk
+from eddyshed.solver.record import TruthRecord
 
-from ..contract import Model, metric
+from ..contract import Model
 from ..settings import EofSettings
-from .basis import Basis
-
-LARGEST = 8192  # rows of the matrix whose eigenvectors are taken: 512 MB
+from .basis import Basis, Flat
+from .functions import Anomalies, leading_functions
 
 
 def eof_basis(
@@ -22,105 +20,122 @@ def eof_basis(
     model: Model,
     records: Sequence[TruthRecord],
     mean: np.ndarray,
+    *,
+    share: float,
+    memory: float,
 ) -> tuple[Basis, Basis]:
     """Find the empirical orthogonal functions in the model's inner product.
 
     Parameters
     ----------
     settings : EofSettings
-        How many are kept.
+        How many are resolved.
     model : Model
         Gives the inner product.
     records : sequence of TruthRecord
-        The members of the truth, read in stretches.
+        The members of the truth, read in blocks.
     mean : ndarray, shape (size,)
         Its mean.
+    share : float
+        Share of the variance beyond them that further functions must hold.
+    memory : float
+        Budget [B]; see :func:`~.functions.leading_functions` for the three
+        ways of which it is the judge.
 
     Returns
     -------
-    resolved, remainder : Basis
-        The leading functions, and all others that carry variance, by falling
+    resolved, unresolved : Basis
+        The leading functions, and as many more as hold the share, by falling
         variance. Each function's largest component is positive, which fixes
         its sign.
 
     Raises
     ------
     DataError
-        If more are asked for than there are states or coordinates, or if both
-        are beyond 8192.
-
-    Notes
-    -----
-    Eigenvectors of the covariance matrix where there are fewer coordinates
-    than states, else of the states' matrix of inner products (Sirovich 1987,
-    Quart. Appl. Math. 45:561). The covariance is gathered from stretches of
-    the record; in the second case all anomalies are held in memory.
+        If more are asked for than there are states or coordinates, or than
+        fit into the budget.
     """
-    lengths = [len(record.times) for record in records]
-    n_time, size = sum(lengths), records[0].size
-    rank = min(size, n_time - 1)
+    truth = anomalies(model, records, mean, np.zeros((len(mean), 0)), memory)
+    count, size = truth.count, len(mean)
+    rank = min(size, count - 1)
     if settings.modes >= rank:
         message = (
-            f"[resolved] modes = {settings.modes}, but {n_time} states of {size} "
+            f"[resolved] modes = {settings.modes}, but {count} states of {size} "
             f"coordinates have {rank} functions, and some must be left unresolved; "
             "ask for fewer"
         )
         raise DataError(message)
-    if min(size, n_time) > LARGEST:
-        message = (
-            f'[resolved] kind = "eof": {n_time} states of {size} coordinates need a '
-            f"matrix of order {min(size, n_time)}, above {LARGEST}; record fewer "
-            "states or use a coarser grid"
-        )
-        raise DataError(message)
-    # In y = root z the model's inner product is the plain dot product.
-    weights = metric(model)
-    root = np.sqrt(weights) if weights.ndim == 1 else linalg.cholesky(weights)
-
-    def flat(states):
-        anomalies = states - mean
-        return anomalies * root if root.ndim == 1 else anomalies @ root.T
-
-    if size <= n_time:
-        covariance = np.zeros((size, size))
-        for _, _, states in walk(records):
-            anomalies = flat(states)
-            covariance += anomalies.T @ anomalies
-        variance, vectors = linalg.eigh(covariance / n_time)
-    else:
-        anomalies = np.empty((n_time, size))
-        start = 0
-        for _, _, states in walk(records):
-            anomalies[start : start + len(states)] = flat(states)
-            start += len(states)
-        variance, weights_in_time = linalg.eigh(anomalies @ anomalies.T / n_time)
-        vectors = anomalies.T @ weights_in_time
-    variance, vectors = variance[::-1][:rank], vectors[:, ::-1][:, :rank]
-    varying = variance > 1e-12 * variance[0]  # beyond it eigenvectors are round-off
-    if varying.sum() <= settings.modes:
-        message = (
-            f"[resolved] modes = {settings.modes}, but the truth varies in "
-            f"{varying.sum()} directions only; ask for fewer"
-        )
-        raise DataError(message)
-    variance, vectors = variance[varying], vectors[:, varying]
-    # Products of states with weights lose orthogonality by the ratio of variances.
-    vectors, _ = linalg.qr(vectors, mode="economic")
-    vectors = (
-        vectors / root[:, np.newaxis]
-        if root.ndim == 1
-        else linalg.solve_triangular(root, vectors)
-    )
-    largest = np.abs(vectors).argmax(axis=0)
-    vectors = vectors * np.sign(vectors[largest, np.arange(len(largest))])
-    everything = Basis(
-        vectors=vectors,
-        labels=tuple(f"EOF {i + 1}" for i in range(len(variance))),
-        partners=np.full(len(variance), -1),
-        variance=variance,
-    )
-    chosen = np.arange(len(variance))
+    everything = basis_of_functions(truth, settings.modes, share)
+    chosen = np.arange(everything.n_modes)
     return (
         everything.take(chosen[: settings.modes]),
         everything.take(chosen[settings.modes :]),
+    )
+
+
+def remainder_basis(
+    resolved: np.ndarray,
+    model: Model,
+    records: Sequence[TruthRecord],
+    mean: np.ndarray,
+    *,
+    share: float,
+    memory: float,
+) -> Basis:
+    """Find the empirical orthogonal functions of what some vectors leave.
+
+    Parameters
+    ----------
+    resolved : ndarray, shape (size, nx)
+        Columns, orthonormal in the model's inner product.
+    model, records, mean, share, memory
+        As for :func:`eof_basis`.
+
+    Returns
+    -------
+    Basis
+        As many as hold the share of the variance that is left, named
+        ``remainder 1, 2, ...``.
+
+    Raises
+    ------
+    DataError
+        If nothing is left, or they do not fit into the budget.
+    """
+    flat = Flat.of(model).states(resolved.T).T
+    truth = anomalies(model, records, mean, flat, memory)
+    if min(len(mean) - resolved.shape[1], truth.count - 1) < 1:
+        message = (
+            f"[resolved] keeps {resolved.shape[1]} modes of {len(mean)} coordinates, "
+            "and some must be left unresolved; keep fewer"
+        )
+        raise DataError(message)
+    return basis_of_functions(truth, 0, share, name="remainder")
+
+
+def anomalies(model, records, mean, removed, memory) -> Anomalies:
+    """Departures of a truth in the coordinates of a model's inner product."""
+    return Anomalies(
+        records=records,
+        mean=mean,
+        flat=Flat.of(model),
+        removed=removed,
+        memory=memory,
+    )
+
+
+def basis_of_functions(
+    truth: Anomalies, modes: int, share: float, name: str = "EOF"
+) -> Basis:
+    """Leading functions of a truth as a basis; see `leading_functions`."""
+    found = leading_functions(truth, modes, share)
+    vectors = truth.flat.vectors(found.vectors)
+    largest = np.abs(vectors).argmax(axis=0)
+    vectors *= np.sign(vectors[largest, np.arange(len(largest))])
+    count = len(found.variance)
+    return Basis(
+        vectors=vectors,
+        labels=tuple(f"{name} {i + 1}" for i in range(count)),
+        partners=np.full(count, -1),
+        variance=found.variance,
     )

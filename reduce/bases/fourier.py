@@ -8,11 +8,11 @@ from eddyshed.solver.errors import DataError
 
 from ..contract import Model, metric
 from ..settings import FourierSettings
-from .basis import Basis
+from .basis import Basis, count_for_share
 
 
 def fourier_basis(
-    settings: FourierSettings, model: Model, variance: np.ndarray
+    settings: FourierSettings, model: Model, variance: np.ndarray, *, share: float
 ) -> tuple[Basis, Basis]:
     """Divide the model's coordinates into kept waves and the rest.
 
@@ -24,14 +24,16 @@ def fourier_basis(
         Must name its `waves`, `partners` and `labels`.
     variance : ndarray, shape (size,)
         Variance of the truth in each coordinate.
+    share : float
+        Share of the variance of all other waves that is wanted.
 
     Returns
     -------
     resolved : Basis
         The kept waves, in the model's order.
-    remainder : Basis
-        All others, by falling variance; the two parts of a wave stay
-        together.
+    unresolved : Basis
+        As many others as hold the share, by falling variance; the two parts of
+        a wave stay together.
 
     Raises
     ------
@@ -40,6 +42,9 @@ def fourier_basis(
 
     Notes
     -----
+    Between walls the waves are sines, counted in half waves; there "zonal" keeps
+    the modes of a channel that do not vary in x, and nothing in a basin.
+
     The two parts of a wave are marked as a rotating pair only where the wave has
     two and varies in x: the oceans here are statistically homogeneous in x, but a
     forcing that varies in y tells sine from cosine in the waves that do not.
@@ -56,19 +61,32 @@ def fourier_basis(
         raise DataError(message)
     partners = np.where(waves[:, 0] != 0, model.partners, -1)
     scaled = variance * weights
-    everything = Basis(
-        vectors=np.diag(1 / np.sqrt(weights)),
-        labels=model.labels,
-        partners=partners,
-        variance=scaled,
-    )
     # A wave's rank is that of its two parts together.
     alone = model.partners < 0
     wave_variance = scaled + np.where(alone, 0.0, scaled[model.partners])
     order = np.lexsort((np.arange(size), -wave_variance))
+    others = order[~kept[order]]
+    count = count_for_share(scaled[others], share, scaled[others].sum())
+    count = min(count, len(others))
+    partner = partners[others[count - 1]]
+    if partner >= 0 and partner not in others[:count]:
+        count += 1  # its other half is the next
     return (
-        everything.take(np.flatnonzero(kept)),
-        everything.take(order[~kept[order]]),
+        _coordinates(model, weights, partners, scaled, np.flatnonzero(kept)),
+        _coordinates(model, weights, partners, scaled, others[:count]),
+    )
+
+
+def _coordinates(model, weights, partners, variance, chosen):
+    """Some of the model's coordinates as a basis."""
+    position = {int(old): new for new, old in enumerate(chosen)}
+    vectors = np.zeros((len(weights), len(chosen)))
+    vectors[chosen, np.arange(len(chosen))] = 1 / np.sqrt(weights[chosen])
+    return Basis(
+        vectors=vectors,
+        labels=tuple(model.labels[i] for i in chosen),
+        partners=np.array([position.get(int(partners[i]), -1) for i in chosen], int),
+        variance=variance[chosen],
     )
 
 
@@ -98,9 +116,11 @@ def kept_coordinates(settings: FourierSettings, waves: np.ndarray) -> np.ndarray
         for wave in settings.waves:
             same = np.all(waves == wave, axis=1) | np.all(-waves == wave, axis=1)
             if not same.any():
+                low = np.abs(waves).min(axis=0).tolist()
+                between = f" from {low}" if max(low) > 0 else ""
                 message = (
                     f"[resolved] waves: {list(wave)} is not on this grid, which keeps "
-                    f"up to {largest} in x and y"
+                    f"waves{between} up to {largest} in x and y"
                 )
                 raise DataError(message)
             kept |= same
@@ -114,6 +134,12 @@ def kept_coordinates(settings: FourierSettings, waves: np.ndarray) -> np.ndarray
         kept = total <= settings.up_to + 1e-9
         if settings.family == "zonal":
             kept &= waves[:, 0] == 0
+            if not np.any(waves[:, 0] == 0):
+                message = (
+                    '[resolved] family = "zonal": between walls in x every mode varies '
+                    'in x; use family = "isotropic" or "listed"'
+                )
+                raise DataError(message)
     if kept.all() or not kept.any():
         message = (
             f"[resolved] keeps {'every' if kept.all() else 'no'} wave of the "

@@ -10,6 +10,7 @@ import numpy as np
 from eddyshed.solver.record import TruthRecord
 
 from ..flow.parts import Flow, read_flow
+from ..measured import measured_rows
 from ..noise.fit import NoiseFit
 from ..scores import Summary
 from ..simulated import load
@@ -46,6 +47,8 @@ class Evidence:
         Its processor time over model time.
     closures : list of dict
         As the benchmark wrote them.
+    measured : list
+        Rows of what is measured, as `eddyshed.reduce.measured.measured_rows`.
     lags : ndarray, shape (lag,)
         Lags of the correlation functions [s].
     correlations : dict of str to ndarray, shape (lag, mode)
@@ -62,6 +65,7 @@ class Evidence:
     truth: Summary
     truth_cost: float
     closures: list[dict[str, Any]]
+    measured: list[list[Any]]
     lags: np.ndarray
     correlations: dict[str, np.ndarray]
 
@@ -121,6 +125,7 @@ def gather(study: Study) -> Evidence:
         truth=summary_of(benchmark["truth"]["summary"]),
         truth_cost=benchmark["truth"]["cost"],
         closures=benchmark["closures"],
+        measured=measured_rows(benchmark),
         lags=lags,
         correlations={name: np.array(values) for name, values in found.items()},
     )

@@ -7,6 +7,9 @@ import numpy as np
 from eddyshed.solver.config import as_table
 from eddyshed.solver.quantities import format_quantity
 
+from ..bases.spectrum import distances, sampling_errors
+from ..settings import EofSettings
+from ..stages import split_notes
 from ..statistics.estimate import Estimate
 from .evidence import Evidence
 from .flow_fields import last_state
@@ -245,6 +248,9 @@ def split(note: Note, evidence: Evidence) -> str:
         ]
         for k, label in enumerate(resolved.labels)
     ]
+    notes = "".join(
+        f"<li>{text(note)}</li>" for note in split_notes(evidence.study.config, divided)
+    )
     return section(
         "The split",
         paragraphs(
@@ -272,6 +278,35 @@ def split(note: Note, evidence: Evidence) -> str:
             caption="The resolved modes in the truth. Integral time: that of the "
             "correlation function up to where it falls below 0.05.",
         ),
+        _spectrum(note, evidence)
+        if isinstance(evidence.study.config.resolved, EofSettings)
+        else "",
+        f"<ul>{notes}</ul>" if notes else "",
+    )
+
+
+def _spectrum(note, evidence):
+    """How well the empirical orthogonal functions are told apart."""
+    divided = evidence.split
+    found = sampling_errors(divided.resolved, divided.x, divided.step)
+    apart = distances(divided.resolved, divided.unresolved)
+    rows = [
+        [
+            unbroken(label),
+            number(found.value[k], found.error[k]),
+            number(found.error[k], 0.0),
+            number(apart[k], 0.0),
+        ]
+        for k, label in enumerate(divided.resolved.labels)
+    ]
+    squared = f"[({unit(evidence.ocean.unit)})<sup>2</sup>]"
+    return note.table(
+        ["function", f"variance {squared}", "sampling error", "distance to the next"],
+        [rows],
+        caption="Spectrum of the empirical orthogonal functions, with errors by the "
+        "rule of thumb of North et al. (1982, Mon. Weather Rev. 110:699): the root of "
+        "two over the number of independent samples, times the variance. Two that are "
+        "no further apart than the error are not told from each other.",
     )
 
 

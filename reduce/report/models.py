@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from ..benchmark import member_duration
+from ..measured import QUANTITIES
 from .curves import BARTLETT, Correlation, Distribution, density, large_lag_error
 from .evidence import Evidence, summary_of
 from .markup import Note, listed, number, paragraphs, section, span, text, unit
@@ -40,6 +41,35 @@ def models(note: Note, evidence: Evidence) -> str:
         _correlations(note, evidence),
         _distributions(note, evidence),
         _scores(note, evidence),
+        _measured(note, evidence) if evidence.measured else "",
+    )
+
+
+def _measured(note, evidence):
+    """What is measured, in its own units."""
+    names = evidence.split.resolved.measured
+    rows = [
+        [
+            f"{quantity} [{unit(units)}]",
+            text(label),
+            *(number(value, error) for value, error in pairs),
+        ]
+        for quantity, units, label, pairs in evidence.measured
+    ]
+    groups = [
+        [row for row in rows if row[0].startswith(quantity)] for quantity in QUANTITIES
+    ]
+    what = "; ".join(
+        f"{text(label)}: {text(long_name)}"
+        for label, long_name in zip(names.labels, names.long_names, strict=True)
+    )
+    closures = [f"<code>{text(e['name'])}</code>" for _, e in evidence.scored]
+    return note.table(
+        ["quantity", "box", "truth", *closures],
+        groups,
+        words=(0, 1),
+        caption="What is measured, in its own units, with standard errors; it is a "
+        f"linear function of the resolved modes, exactly. {what}.",
     )
 
 

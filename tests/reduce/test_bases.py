@@ -9,7 +9,6 @@ import pytest
 from scipy import linalg, optimize
 from toys import Quadratic, random_weights
 
-from eddyshed.reduce.bases import eof
 from eddyshed.reduce.bases.basis import Basis
 from eddyshed.reduce.bases.eof import eof_basis
 from eddyshed.reduce.bases.fourier import fourier_basis, kept_coordinates
@@ -17,10 +16,13 @@ from eddyshed.reduce.contract import metric
 from eddyshed.reduce.settings import EofSettings, FourierSettings
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
+from eddyshed.solver.spaces.basin import Basin
+from eddyshed.solver.spaces.channel import Channel
 from eddyshed.solver.spaces.periodic import Periodic
 
 # Sums of some hundred products of numbers of order one.
 ROUND_OFF = 1e-12
+PLENTY = 4e9  # bytes
 
 
 @dataclass(frozen=True)
@@ -28,7 +30,6 @@ class Record:
     """A truth in memory, with the members that a basis is made from."""
 
     states: np.ndarray
-    stretch: int = 37
 
     @property
     def times(self):
@@ -38,10 +39,8 @@ class Record:
     def size(self):
         return self.states.shape[1]
 
-    def chunks(self):
-        for start in range(0, len(self.states), self.stretch):
-            where = slice(start, min(start + self.stretch, len(self.states)))
-            yield where, self.states[where]
+    def read(self, start, stop):
+        return self.states[start:stop].copy()
 
 
 @dataclass(frozen=True)
@@ -94,9 +93,9 @@ def both(found):
 
 def eofs(record, modes, weights=None):
     model = plain(record.size, weights)
-    return eof_basis(
-        EofSettings(modes=modes), model, [record], record.states.mean(axis=0)
-    )
+    mean = record.states.mean(axis=0)
+    settings = EofSettings(modes=modes)
+    return eof_basis(settings, model, [record], mean, share=1.0, memory=PLENTY)
 
 
 # --- Fourier ----------------------------------------------------------------
@@ -133,7 +132,7 @@ def test_fourier_bases_are_orthonormal_and_complete(family, weighted):
         weights = np.random.default_rng(2).uniform(0.1, 10, model.size)
         model = Waves(model, weights)
     variance = variance_of(model)
-    resolved, remainder = fourier_basis(FAMILIES[family], model, variance)
+    resolved, remainder = fourier_basis(FAMILIES[family], model, variance, share=1.0)
     vectors, found = both((resolved, remainder))
     # Orthonormal, and as many as there are coordinates: they span everything.
     products = model.inner(vectors.T[:, np.newaxis], vectors.T)
@@ -151,7 +150,9 @@ def test_both_parts_of_a_wave_are_kept_side_by_side():
     model = ocean()
     # One part of each wave carries hardly anything, and waves have equal variances.
     variance = np.tile([2.0, 1e-9, 1.0, 1.0 + 1e-9], model.size // 4)
-    resolved, remainder = fourier_basis(FAMILIES["isotropic"], model, variance)
+    resolved, remainder = fourier_basis(
+        FAMILIES["isotropic"], model, variance, share=1.0
+    )
     for basis in (resolved, remainder):
         waves = waves_of(model, basis)
         np.testing.assert_array_equal(waves[::2], waves[1::2])
@@ -168,7 +169,9 @@ def test_both_parts_of_a_wave_are_kept_side_by_side():
 
 def test_remainder_is_ordered_by_the_variance_of_waves():
     model = ocean()
-    _, remainder = fourier_basis(FAMILIES["zonal"], model, variance_of(model))
+    _, remainder = fourier_basis(
+        FAMILIES["zonal"], model, variance_of(model), share=1.0
+    )
     pairs = remainder.variance.reshape(-1, 2).sum(axis=1)
     assert np.all(np.diff(pairs) <= 0)
     assert np.ptp(pairs) > 0.5
@@ -194,7 +197,8 @@ def test_half_a_pair_is_no_pair():
     [
         (
             {"family": "listed", "waves": ((1, 0), (6, 1))},
-            r"[resolved] waves: [6, 1] is not on this grid, which keeps up to [5, 3]",
+            "[resolved] waves: [6, 1] is not on this grid, which keeps waves up to "
+            "[5, 3]",
         ),
         (
             {"up_to": 6.0},
@@ -219,7 +223,85 @@ def test_waves_that_are_not_orthogonal_are_refused():
     model = ocean((8, 8))
     weights = random_weights(np.random.default_rng(1), model.size)
     with pytest.raises(DataError, match="not orthogonal in its inner product"):
-        fourier_basis(FAMILIES["zonal"], Skewed(model, weights), variance_of(model))
+        fourier_basis(
+            FAMILIES["zonal"],
+            Skewed(model, weights),
+            variance_of(model),
+            share=1.0,
+        )
+
+
+# Between walls: half waves there, and sines only.
+
+
+def walled(space):
+    return Barotropic(BarotropicSettings(), space((12, 8), (1.0, 1.0)))
+
+
+@pytest.mark.parametrize(
+    ("space", "settings", "names"),
+    [
+        (
+            Channel,
+            FourierSettings(family="zonal", up_to=2),
+            ["sin 1y", "sin 2y"],
+        ),
+        (
+            Channel,
+            FourierSettings(family="isotropic", up_to=1.5),
+            ["sin 1y", "cos 1x sin 1y", "sin 1x sin 1y"],
+        ),
+        (
+            Channel,
+            FourierSettings(family="listed", waves=((2, 3),)),
+            ["cos 2x sin 3y", "sin 2x sin 3y"],
+        ),
+        (
+            Basin,
+            FourierSettings(family="isotropic", up_to=2.5),
+            ["sin 1x sin 1y", "sin 2x sin 1y", "sin 1x sin 2y"],
+        ),
+        (
+            Basin,
+            FourierSettings(family="listed", waves=((1, 2), (3, 1))),
+            ["sin 3x sin 1y", "sin 1x sin 2y"],
+        ),
+    ],
+)
+def test_families_between_walls_are_of_sines(space, settings, names):
+    model = walled(space)
+    resolved, rest = fourier_basis(settings, model, variance_of(model), share=1.0)
+    assert list(resolved.labels) == names
+    vectors, _ = both((resolved, rest))
+    products = model.inner(vectors.T[:, np.newaxis], vectors.T)
+    np.testing.assert_allclose(products, np.eye(model.size), atol=ROUND_OFF)
+    # A wave turns in x where that repeats; nothing turns between four walls.
+    turning = [k for k, name in enumerate(names) if space is Channel and "x" in name]
+    np.testing.assert_array_equal(np.flatnonzero(resolved.partners >= 0), turning)
+    # As functions: the first mode is the sine it is named after, of energy 1 / 2.
+    x, y = (axis * np.pi for axis in model.space.grid_axes)
+    field = model.space.to_grid(model.streamfunction(resolved.vectors[:, 0]))
+    k, m = (re.findall(rf"(\d+){axis}", names[0]) for axis in "xy")
+    kind = np.cos if names[0].startswith("cos") else np.sin
+    along = kind((2 if space is Channel else 1) * int(k[0]) * x) if k else 1 + 0 * x
+    shape = np.sin(int(m[0]) * y)[:, np.newaxis] * along
+    size = np.sum(field * shape) / np.sum(shape**2)
+    np.testing.assert_allclose(field, size * shape, atol=1e-13)
+
+
+@pytest.mark.parametrize(
+    ("settings", "words"),
+    [
+        ({"family": "zonal", "up_to": 3.0}, "between walls in x every mode varies in"),
+        (
+            {"family": "listed", "waves": ((0, 1),)},
+            "[0, 1] is not on this grid, which keeps waves from [1, 1] up to [7, 5]",
+        ),
+    ],
+)
+def test_families_that_a_basin_lacks_are_refused(settings, words):
+    with pytest.raises(DataError, match=re.escape(words)):
+        kept_coordinates(FourierSettings(**settings), walled(Basin).waves)
 
 
 # --- Empirical orthogonal functions -----------------------------------------
@@ -401,14 +483,6 @@ def test_noise_spreads_as_random_matrices_say():
     assert np.all(np.abs(variance[[0, -1]] - middle) < 4 * 1.268 * scale)
 
 
-def test_stretches_do_not_matter():
-    states = steep_record((60, 25), 2).states
-    one, other = (both(eofs(Record(states, stretch=s), 5)) for s in (1000, 7))
-    # Sums of another order.
-    for first, second in zip(one, other, strict=True):
-        np.testing.assert_allclose(first, second, atol=1e-10)
-
-
 def refused(record, modes, words):
     with pytest.raises(DataError, match=words):
         eofs(record, modes)
@@ -433,13 +507,3 @@ def test_more_functions_than_directions_is_refused(shape):
     refused(Record(flat), 4, "modes = 4, but the truth varies in 4 directions only")
     resolved, remainder = eofs(Record(flat), 3)
     assert (resolved.n_modes, remainder.n_modes) == (3, 1)
-
-
-def test_too_large_a_matrix_is_refused(monkeypatch):
-    monkeypatch.setattr(eof, "LARGEST", 24)
-    refused(
-        steep_record((60, 25), 1), 5, "60 states of 25 coordinates need a matrix of"
-    )
-    refused(steep_record((25, 60), 1), 5, "order 25, above 24; record fewer states")
-    monkeypatch.setattr(eof, "LARGEST", 25)
-    assert eofs(steep_record((60, 25), 1), 5)[0].n_modes == 5

@@ -11,6 +11,7 @@ from eddyshed.reduce.contract import tendency
 from eddyshed.reduce.settings import (
     EofSettings,
     FourierSettings,
+    LimitsSettings,
     UnresolvedSettings,
 )
 from eddyshed.reduce.split import split_truth, unresolved_series
@@ -76,7 +77,9 @@ def write(path, states, fine=None, held=()):
 
 def config(resolved, share=1.0):
     return SimpleNamespace(
-        resolved=resolved, unresolved=UnresolvedSettings(variance=share)
+        resolved=resolved,
+        unresolved=UnresolvedSettings(variance=share),
+        limits=LimitsSettings(),
     )
 
 

@@ -13,7 +13,7 @@ from splits import divided
 from toys import coloured_model, orthonormal_vectors, random_model
 
 from eddyshed.reduce.audit import Finding
-from eddyshed.reduce.bases.basis import Basis
+from eddyshed.reduce.bases.basis import Basis, Measured
 from eddyshed.reduce.noise.fit import NoiseFit, fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import Operators, galerkin
@@ -173,6 +173,27 @@ def test_names_of_many_modes_are_kept(tmp_path):
     )
     write_all(tmp_path / "a.h5", "", "", "test", {"basis": basis})
     assert_equal(read_one(tmp_path / "a.h5", "test", "basis", Basis), basis)
+
+
+def test_what_is_measured_is_kept_and_may_be_absent(tmp_path):
+    measured = Measured(
+        matrix=np.arange(6.0).reshape(3, 2),
+        labels=("a", "b", "null"),
+        units=("m s-1", "m2 s-1", "s-1"),
+        long_names=("one", "two", "three"),
+    )
+    basis = Basis(
+        vectors=np.eye(2),
+        labels=("a", "null"),
+        partners=np.array([-1, -1]),
+        variance=np.ones(2),
+        measured=measured,
+    )
+    without = dataclasses.replace(basis, measured=None)
+    parts = {"one": basis, "other": without}
+    write_all(tmp_path / "a.h5", "", "", "test", parts)
+    for name, expected in parts.items():
+        assert_equal(read_one(tmp_path / "a.h5", "test", name, Basis), expected)
 
 
 def test_numbers_and_flags_keep_their_types(tmp_path):

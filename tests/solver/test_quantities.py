@@ -33,7 +33,11 @@ from eddyshed.solver.quantities import (
         ("1 cm", "m", 1e-2),
         ("1 mm", "m", 1e-3),
         ("1 g", "kg", 1e-3),
-        # The same, table 4: derived units with special names, in base units.
+        # IEC 80000-13: a kilobyte is 1000 bytes.
+        ("4 GB", "B", 4e9),
+        ("250 MB", "B", 2.5e8),
+        ("8 kB", "B", 8e3),
+        # The SI Brochure, table 4: derived units with special names, in base units.
         ("1 N", "kg m s-2", 1),
         ("1 Pa", "kg m-1 s-2", 1),
         ("1 J", "kg m2 s-2", 1),
@@ -121,6 +125,8 @@ def test_format_reads_back_within_the_printed_digits(value, unit):
     ("value", "unit", "text"),
     [
         (20000, "m", "20 km"),
+        (4e9, "B", "4 GB"),
+        (2.56e8, "B", "256 MB"),
         (1500, "m", "1.5 km"),
         (40075000, "m", "40075 km"),
         (0.05, "m", "5 cm"),
