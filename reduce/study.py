@@ -9,6 +9,7 @@ is reused; any other is run.
 from __future__ import annotations
 
 import fcntl
+import hashlib
 import logging
 import platform
 import shutil
@@ -25,7 +26,7 @@ from eddyshed.solver.record import TruthRecord, open_record
 from eddyshed.solver.segments import member_paths
 from eddyshed.solver.truth import truth_table
 
-from .settings import StudyConfig
+from .settings import FileSettings, StudyConfig
 from .store import read_fingerprint
 
 log = logging.getLogger(__name__)
@@ -113,16 +114,32 @@ def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
     if name == "truth":
         # A truth is told by its config alone: months of runs outlive a release.
         return fingerprint(truth_table(study.config))
+    inputs = [study.config.resolved] if "resolved" in stage.sections else []
     return fingerprint(
         {
             "stage": name,
             "version": version("eddyshed"),
             "config": {key: table.get(key) for key in stage.sections},
+            # The path of a file says nothing of what it holds now.
+            **{
+                f"contents of {each.path}": _digest(Path(each.path))
+                for each in inputs
+                if isinstance(each, FileSettings)
+            },
             "after": {
                 other: fingerprint_of(study, stages, other) for other in stage.after
             },
         }
     )
+
+
+def _digest(path):
+    """SHA-256 of a file; empty if there is none to read."""
+    try:
+        with path.open("rb") as file:
+            return hashlib.file_digest(file, "sha256").hexdigest()
+    except OSError:
+        return ""
 
 
 def is_fresh(study: Study, stages: dict[str, Stage], name: str) -> tuple[bool, str]:
