@@ -131,7 +131,7 @@ def split_truth(
     else:
         resolved = prescribed_basis(settings, model)
         unresolved = remainder_basis(resolved.vectors, model, records, mean, **how)
-    _check_series(resolved, unresolved, records, memory)
+    _check_series(resolved, unresolved, records, share, memory)
     dual = dual_vectors(model, resolved.vectors)
     x = np.empty((len(records), len(records[0].times), resolved.n_modes))
     rate = np.empty_like(x)
@@ -209,7 +209,7 @@ def _moments(model, records, memory):
     return mean, variance, float(variance @ weights) if weights.ndim == 1 else total
 
 
-def _check_series(resolved, unresolved, records, memory):
+def _check_series(resolved, unresolved, records, share, memory):
     """Refuse unresolved series that would not fit, and say which share would."""
     states = sum(len(record.times) for record in records)
     size, nx, ny = records[0].size, resolved.n_modes, unresolved.n_modes
@@ -221,12 +221,12 @@ def _check_series(resolved, unresolved, records, memory):
 
     fits = [k for k in range(1, ny + 1) if needed(k) <= spare_bytes(memory)]
     held = unresolved.variance[: len(fits)].sum() / unresolved.variance.sum()
-    held = np.floor(1000 * held) / 1000  # of the share that was asked for
+    held = np.floor(100 * share * held) / 100
     instead = "record fewer states, or keep fewer modes"
-    if fits:
+    if held > 0:
         instead = (
-            f"keep {len(fits)} by a [unresolved] variance that is at most {held:g} "
-            f"times as large, or record fewer states"
+            "keep less of the variance ([unresolved] "
+            f"variance = {held:g} would do), or record fewer states"
         )
     what = f"{ny} unresolved modes at {states} states"
     check_memory(needed(ny), memory, what, instead)

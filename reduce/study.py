@@ -21,11 +21,11 @@ from eddyshed.solver.config import Document, as_table, fingerprint
 from eddyshed.solver.ensemble import Outcome, complete_members, ensemble_path
 from eddyshed.solver.errors import DataError, EddyshedError, RunFolderError
 from eddyshed.solver.files import open_file, replacing
-from eddyshed.solver.identity import truth_table
+from eddyshed.solver.identity import digest_of, truth_table
 from eddyshed.solver.locks import holding
 from eddyshed.solver.record import TruthRecord, open_records
 
-from .settings import StudyConfig
+from .settings import FileSettings, StudyConfig
 from .store import read_fingerprint
 
 log = logging.getLogger(__name__)
@@ -158,9 +158,15 @@ def fingerprint_of(study: Study, stages: dict[str, Stage], name: str) -> str:
 
 
 def _foreign(config, stage):
-    """The user's own closures, if the stage makes them: the bytes of their modules."""
+    """Bytes that a stage reads besides the config: of the user's closures and files."""
+    found = {}
     hooks = config.closures.hooks if "closures" in stage.sections else {}
-    return {"hooks": [hook.table() for hook in hooks.values()]} if hooks else {}
+    if hooks:
+        found["hooks"] = [hook.table() for hook in hooks.values()]
+    if "resolved" in stage.sections and isinstance(config.resolved, FileSettings):
+        # The path of a file says nothing of what it holds now.
+        found["vectors"] = digest_of(Path(config.resolved.path))
+    return found
 
 
 def is_fresh(study: Study, stages: dict[str, Stage], name: str) -> tuple[bool, str]:

@@ -84,17 +84,23 @@ def _contents(config: TruthConfig) -> Iterator[tuple[str, str]]:
     shapes = getattr(config.ocean, "topography", {})
     for shape in shapes.values():
         if isinstance(shape, HeightFile):
-            yield shape.path, _digest(Path(shape.path))
+            yield shape.path, digest_of(Path(shape.path))
     read = file_read(config.initial)
     if read is not None:
-        yield config.initial.path, _digest(read)
+        yield config.initial.path, digest_of(read)
 
 
-def _digest(path: Path) -> str:
-    """SHA-256 of a file."""
+def digest_of(path: Path) -> str:
+    """SHA-256 of a file.
+
+    Raises
+    ------
+    DataError
+        If it cannot be read.
+    """
     try:
         with path.open("rb") as file:
-            return hashlib.file_digest(file, "sha256").hexdigest()
+            return hashlib.filedigest_of(file, "sha256").hexdigest()
     except OSError as error:
         message = f"{path}: cannot be read ({error.strerror})"
         raise DataError(message) from error

@@ -9,9 +9,11 @@ from eddyshed.reduce.bases.basis import Basis, Measured
 from eddyshed.reduce.cli import main
 from eddyshed.reduce.measured import measured_rows, measured_statistics
 from eddyshed.reduce.settings import StudyConfig
+from eddyshed.reduce.stages import STAGES
+from eddyshed.reduce.study import Study, fingerprint_of
 from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
-from eddyshed.solver.config import read_config
+from eddyshed.solver.config import parse_config, read_config
 from eddyshed.solver.record import open_record
 
 
@@ -131,3 +133,34 @@ def test_a_study_reports_its_boxes(tmp_path, capsys):
     report = (folder / "report.html").read_text()
     assert "What is measured, in its own units" in report
     assert averages.long_names[0] in report
+
+
+def test_boxes_that_do_not_do_are_refused_before_the_truth_is_run(tmp_path, capsys):
+    path = tmp_path / "boxes.toml"
+    text = STUDY.replace('y = ["1000 km", "1600 km"]', 'y = ["1000 km", "1900 km"]')
+    path.write_text(text)
+    runs = tmp_path / "runs"
+    assert main(["study", str(path), "--runs", str(runs), "--quiet"]) == 2
+    said = capsys.readouterr().err
+    assert "[resolved.boxes.north]" in said
+    assert "reaches beyond the box" in said
+    assert not list(runs.rglob("*.h5"))
+
+
+def test_vectors_that_changed_are_read_again(tmp_path):
+    vectors = tmp_path / "vectors.h5"
+    vectors.write_bytes(b"one")
+    head, rest = STUDY.split("[resolved]")
+    text = f'{head}[resolved]\nkind = "file"\npath = "{vectors}"\n'
+    text += "[unresolved]" + rest.split("[unresolved]")[1]
+    study = Study(
+        document=parse_config(text, StudyConfig, "test"), folder=tmp_path / "runs"
+    )
+    stamps = {}
+    for content in (b"one", b"other", b"one"):
+        vectors.write_bytes(content)
+        stamp = fingerprint_of(study, STAGES, "reduce")
+        assert stamps.setdefault(content, stamp) == stamp
+    assert len(set(stamps.values())) == 2
+    vectors.unlink()
+    assert fingerprint_of(study, STAGES, "reduce") not in stamps.values()

@@ -1,21 +1,26 @@
 """The divided truth: coordinates, tendencies and shares, against direct evaluation."""
 
+import re
 from dataclasses import dataclass
 from types import SimpleNamespace
 
+import h5py
 import numpy as np
 import pytest
 from toys import Quadratic, random_model, random_weights
 
+from eddyshed.reduce import memory
 from eddyshed.reduce.contract import tendency
+from eddyshed.reduce.operators import memory_bytes
 from eddyshed.reduce.settings import (
     EofSettings,
+    FileSettings,
     FourierSettings,
     LimitsSettings,
     UnresolvedSettings,
 )
-from eddyshed.reduce.split import split_truth, unresolved_series
-from eddyshed.solver import record as records
+from eddyshed.reduce.split import SERIES, split_truth, unresolved_series
+from eddyshed.solver.errors import DataError
 from eddyshed.solver.files import add_scale, add_time, add_variable, new_file
 from eddyshed.solver.oceans.barotropic import Barotropic, BarotropicSettings
 from eddyshed.solver.record import TruthRecord
@@ -246,6 +251,63 @@ def test_a_single_fine_record_has_no_interval(tmp_path):
     assert split_truth(config(LOW), model, [record]).fine_step == STEP
 
 
+# --- Vectors of someone else's ---
+
+
+@pytest.mark.parametrize("product", ["weighted", "dense", "ocean"])
+def test_prescribed_vectors_are_completed_by_the_remainder(tmp_path, product):
+    model = MODELS[product](np.random.default_rng(3))
+    record = write(tmp_path / "truth.h5", states_of(model.size))
+    given = np.random.default_rng(8).standard_normal((model.size, 3))
+    with h5py.File(tmp_path / "vectors.h5", "w") as file:
+        file["vectors"] = given
+    resolved = FileSettings(path=str(tmp_path / "vectors.h5"))
+    split = split_truth(config(resolved, 0.6), model, [record])
+    states = record.read(0, len(record.times))
+    anomalies = states - states.mean(axis=0)
+    vectors = split.resolved.vectors
+    x = model.inner(vectors.T, anomalies[:, np.newaxis])
+    np.testing.assert_allclose(split.x[0], x, atol=20 * ROUND_OFF)
+    variance = np.square(x).mean(axis=0)
+    np.testing.assert_allclose(split.resolved.variance, variance, rtol=1e-10)
+    total = model.inner(anomalies, anomalies).mean()
+    assert split.total_variance == pytest.approx(total, rel=1e-12)
+    assert sum(split.shares) == pytest.approx(1.0, abs=ROUND_OFF)
+    # Six tenths of what the vectors leave, and the mode before would not do.
+    rest = total - variance.sum()
+    held = split.unresolved.variance.cumsum() / rest
+    assert held[-1] >= 0.6 > held[-2]
+    both = np.hstack([vectors, split.unresolved.vectors])
+    products = model.inner(both.T[:, np.newaxis], both.T)
+    np.testing.assert_allclose(products, np.eye(len(products)), atol=ROUND_OFF)
+
+
+# --- Memory ---
+
+
+def test_series_that_do_not_fit_are_refused(tmp_path, monkeypatch):
+    model = ocean()
+    record = write(tmp_path / "truth.h5", states_of(model.size))
+    whole = split_truth(config(LOW), model, [record])
+    monkeypatch.setattr(memory, "OWN_BYTES", 0)
+    # What operators and series of half as many modes take.
+    ny = whole.unresolved.n_modes // 2
+    limit = 8 * 40 * (2 * whole.resolved.n_modes + SERIES * ny) + memory_bytes(
+        model.size, whole.resolved.n_modes, ny, 1
+    )
+    settings = config(LOW)
+    settings.limits = SimpleNamespace(memory=float(limit))
+    with pytest.raises(DataError, match="keep less of the variance") as caught:
+        split_truth(settings, model, [record])
+    (said,) = re.findall(r"variance = ([0-9.]+) would do", str(caught.value))
+    settings.unresolved = UnresolvedSettings(variance=float(said))
+    some = split_truth(settings, model, [record])
+    assert 0 < some.unresolved.n_modes < whole.unresolved.n_modes
+    settings.limits = SimpleNamespace(memory=1e3)
+    with pytest.raises(DataError, match="record fewer states"):
+        split_truth(settings, model, [record])
+
+
 # --- Long records -----------------------------------------------------------
 
 
@@ -255,7 +317,7 @@ def test_stretches_do_not_matter(case, monkeypatch):
     whole = split_truth(config(resolved, 0.9), model, [record])
     y = unresolved_series(whole, model, [record])
     for states in (1, 7):
-        monkeypatch.setattr(records, "CHUNK_BYTES", states * 8 * model.size)
+        monkeypatch.setattr(memory, "STRETCH_BYTES", states * 8 * model.size)
         parts = split_truth(config(resolved, 0.9), model, [record])
         for name in ("mean", "x", "tendency", "resolved_mean"):
             one, other = getattr(whole, name), getattr(parts, name)
