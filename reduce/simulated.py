@@ -75,6 +75,7 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
             "x",
             ("member", "time", "mode"),
             run.series,
+            units="m s-1",
             long_name="resolved coordinates",
         )
 

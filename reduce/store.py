@@ -72,6 +72,35 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
     },
 }
 
+# Units of these arrays, for a state that has the unit of a velocity as all our
+# oceans have. Those not named have none; what of a reduced model bears on y is
+# left without, as each closure has its own y.
+UNITS: dict[str, dict[str, str]] = {
+    "Basis": {"variance": "m2 s-2"},
+    "Split": {
+        "mean": "m s-1",
+        "resolved_mean": "m s-1",
+        "x": "m s-1",
+        "tendency": "m s-2",
+        "fine_x": "m s-1",
+    },
+    "Operators": {
+        **dict.fromkeys(("F1", "F2"), "m s-2"),
+        **dict.fromkeys(("A11", "A12", "A21"), "s-1"),
+        **dict.fromkeys(("B111", "B112", "B122", "B211", "B212"), "m-1"),
+    },
+    "OrnsteinUhlenbeck": {"rate": "s-1", "covariance": "m2 s-2"},
+    "NoiseFit": {"rate_error": "s-1"},
+    "ReducedModel": {
+        "x_forcing": "m s-2",
+        "x_from_x": "s-1",
+        "x_from_xx": "m-1",
+        "rate": "s-1",
+    },
+}
+# Those of estimates, by what is estimated.
+ESTIMATES = {"variance": "m2 s-2", "decay": "s-1", "frequency": "s-1"}
+
 
 def pack(group: h5py.Group, value: Any) -> None:
     """Write a dataclass into a group.
@@ -85,13 +114,14 @@ def pack(group: h5py.Group, value: Any) -> None:
         or dataclasses.
     """
     axes = AXES.get(type(value).__name__, {})
+    units = _units_of(value, group.name.rpartition("/")[2])
     for field in dataclasses.fields(value):
         item = getattr(value, field.name)
         if dataclasses.is_dataclass(item):
             pack(group.create_group(field.name, track_order=True), item)
         elif isinstance(item, np.ndarray):
             stored = item.astype(np.int8) if item.dtype == bool else item
-            _add(group, field.name, axes[field.name], stored)
+            _add(group, field.name, axes[field.name], stored, units(field.name))
         elif isinstance(item, bool | int | float | np.floating | np.integer):
             group.attrs[field.name] = float(item) if _is_float(item) else int(item)
         elif isinstance(item, str):
@@ -133,6 +163,16 @@ def unpack(group: h5py.Group, kind: type) -> Any:
     return kind(**values)
 
 
+def _units_of(value, name):
+    """A function that gives the unit of each array of a dataclass, None if unknown."""
+    kind = type(value).__name__
+    if kind == "Estimate":
+        estimated = next((unit for key, unit in ESTIMATES.items() if key in name), "1")
+        return lambda _: estimated
+    known = UNITS.get(kind, {})
+    return lambda field: known.get(field, None if kind == "ReducedModel" else "1")
+
+
 def _is_float(item):
     return isinstance(item, float | np.floating)
 
@@ -142,7 +182,7 @@ def _is_flag(stored):
     return stored.dtype == np.int8
 
 
-def _add(group, name, axes, values):
+def _add(group, name, axes, values, units):
     """Add an array; axes that are not in the group yet are made."""
     used: list[str] = []
     for axis, length in zip(axes, values.shape, strict=True):
@@ -153,7 +193,9 @@ def _add(group, name, axes, values):
         used.append(dimension)
         if dimension not in group:
             add_scale(group, dimension, np.arange(length), long_name=f"index: {axis}")
-    add_variable(group, name, used, values, long_name=name.replace("_", " "))
+    add_variable(
+        group, name, used, values, units=units, long_name=name.replace("_", " ")
+    )
 
 
 def write_all(

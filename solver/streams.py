@@ -192,24 +192,16 @@ def low_coordinates(ocean: Any, up_to: float) -> np.ndarray:
     return np.flatnonzero(np.hypot(*ocean.waves.T) <= up_to + 1e-9)
 
 
-def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
-    """Add the axes behind time, and what is known of them.
+def add_labels(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
+    """Add what is known of the coordinates; their axes must exist.
 
     Parameters
     ----------
-    group : h5py.Group
-        Where to.
-    output : OutputSettings
-        Which streams there are.
-    ocean : ocean
-        Names the coordinates.
+    group, output, ocean
+        As for :func:`add_axes`.
     """
-    axes = {"coordinate": np.arange(ocean.size)}
-    if output.resolved is not None:
-        axes["resolved_coordinate"] = low_coordinates(ocean, output.resolved.up_to)
     labels = ocean.labels
-    for name, chosen in axes.items():
-        add_scale(group, name, chosen, long_name="index of the coordinate")
+    for name, chosen in _coordinates(output, ocean).items():
         prefix = name.removesuffix("coordinate")
         add_variable(
             group,
@@ -226,6 +218,30 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
                 ocean.waves[chosen, axis],
                 long_name=f"waves per box in {letter}",
             )
+
+
+def _coordinates(output, ocean):
+    """Which coordinates each axis of them holds, by its name."""
+    axes = {"coordinate": np.arange(ocean.size)}
+    if output.resolved is not None:
+        axes["resolved_coordinate"] = low_coordinates(ocean, output.resolved.up_to)
+    return axes
+
+
+def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
+    """Add the axes behind time, and where the boxes are.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        Where to.
+    output : OutputSettings
+        Which streams there are.
+    ocean : ocean
+        Names the coordinates.
+    """
+    for name, chosen in _coordinates(output, ocean).items():
+        add_scale(group, name, chosen, long_name="index of the coordinate")
     if output.fields_every is not None:
         for name, letter, points in zip(
             "xy", directions_of(ocean), ocean.space.grid_axes, strict=True
