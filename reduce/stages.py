@@ -6,6 +6,7 @@ import logging
 
 import numpy as np
 
+from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
 from eddyshed.solver.driven import is_random
@@ -56,7 +57,7 @@ def preflight(config: StudyConfig, command: str) -> None:
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, or a reduction
+        If a pattern, a band, a box or the basis does not fit the grid, or a reduction
         is asked for under a forcing that varies.
     """
     varying = [
@@ -74,6 +75,7 @@ def preflight(config: StudyConfig, command: str) -> None:
     ocean = build_ocean(config)
     initial_state(config, ocean, 0)
     random_forcing_of(config, ocean, 0)
+    box_averages(ocean, config.output.boxes)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)

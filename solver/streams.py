@@ -167,7 +167,7 @@ def _box_stream(output, ocean, step):
     for name, units, long_name in zip(
         names, averages.units, averages.long_names, strict=True
     ):
-        places = [f"{name}_{letter}" for letter in directions_of(ocean)]
+        places = [f"{letter}_of_{name}" for letter in directions_of(ocean)]
         variables[name] = Variable(
             dimensions=(),
             shape=(),
@@ -264,7 +264,8 @@ def _add_box_sides(group, output, ocean):
     averages = box_averages(ocean, output.boxes)
     for name, sides in zip(averages.names, averages.sides, strict=True):
         for letter, interval in zip(directions_of(ocean), sides, strict=True):
-            place = f"box_{name}_{letter}"
+            # No box can be named so that its variable is called the same.
+            place = f"{letter}_of_box_{name}"
             about = {"units": "m", "long_name": DISTANCES[letter]}
             middle = interval.mean()
             add_variable(group, place, (), middle, bounds=f"{place}_sides", **about)

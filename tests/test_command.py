@@ -372,3 +372,13 @@ def test_a_reduction_under_varying_forcing_is_refused(tmp_path, capsys):
     assert "[forcing.trades] varies in time" in capsys.readouterr().err
     assert not list(tmp_path.rglob("*.h5"))
     assert main(["check", *arguments[:1], *arguments[3:]]) == 0
+
+
+def test_a_box_that_does_not_fit_leaves_no_folder(tmp_path, capsys):
+    arguments = ["truth", str(TINY), "--runs", str(tmp_path / "runs")]
+    box = 'output.boxes.gyre={field="buoyancy", x=["1 km", "2000 km"]}'
+    assert main([*arguments, "--set", box]) == 2
+    problem = capsys.readouterr().err
+    assert "[output.boxes.gyre] field = " in problem
+    assert "reaches beyond the box, 0 to 1800 km" in problem
+    assert not (tmp_path / "runs").exists()
