@@ -112,7 +112,7 @@ def streams_of(
             },
         },
         sample=lambda t, z: {
-            "state": z.copy(),
+            "state": z,
             **ocean.budget(t, z),
             **({} if random is None else random.fed_so_far()),
         },
@@ -286,12 +286,18 @@ class Recorder:
     def __init__(self, streams: list[Stream], first_step: int):
         self._streams = streams
         self._first = first_step
-        self.clear()
+        self._times = [Series((), "float64") for _ in streams]
+        self._rows = [
+            {name: Series(v.shape, v.dtype) for name, v in stream.variables.items()}
+            for stream in streams
+        ]
 
     def clear(self) -> None:
         """Forget the records, after they were written."""
-        self._times = [[] for _ in self._streams]
-        self._rows = [{name: [] for name in s.variables} for s in self._streams]
+        for times, rows in zip(self._times, self._rows, strict=True):
+            times.clear()
+            for series in rows.values():
+                series.clear()
 
     def record(self, step: int, t: float, z: np.ndarray) -> None:
         """Record whatever is due at a step."""
@@ -311,16 +317,51 @@ class Recorder:
         for stream, times, rows in zip(
             self._streams, self._times, self._rows, strict=True
         ):
-            add_time(group, stream.time, np.array(times, dtype=float))
+            add_time(group, stream.time, times.values)
             for name, variable in stream.variables.items():
-                shape = (len(times), *variable.shape)
-                values = np.array(rows[name], dtype=variable.dtype).reshape(shape)
                 add_variable(
                     group,
                     name,
                     (stream.time, *variable.dimensions),
-                    values,
+                    rows[name].values,
                     units=variable.units,
                     long_name=variable.long_name,
                     **variable.attributes,
                 )
+
+
+class Series:
+    """Values of one variable, in memory that serves again when they are forgotten.
+
+    Parameters
+    ----------
+    shape : tuple of int
+        Shape of a value.
+    dtype : str
+        Type to hold it in.
+    """
+
+    def __init__(self, shape: tuple[int, ...], dtype: str):
+        self._held = np.empty((16, *shape), dtype)
+        self._count = 0
+
+    @property
+    def values(self) -> np.ndarray:
+        """The values so far, shape (n, *shape): valid until the next is added."""
+        return self._held[: self._count]
+
+    def append(self, value: object) -> None:
+        """Add a copy of a value."""
+        if self._count == len(self._held):
+            # What is allocated and not yet touched takes no memory.
+            longer = np.empty(
+                (2 * self._count, *self._held.shape[1:]), self._held.dtype
+            )
+            longer[: self._count] = self._held
+            self._held = longer
+        self._held[self._count] = value
+        self._count += 1
+
+    def clear(self) -> None:
+        """Forget the values."""
+        self._count = 0
