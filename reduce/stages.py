@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
 from eddyshed.solver.errors import ContractError, DataError
@@ -71,7 +72,7 @@ def preflight(config: StudyConfig) -> None:
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, or the inner
+        If a pattern, a band, a box or the basis does not fit the grid, or the inner
         product the ocean.
     ContractError
         If a user's own model or basis breaks its contract.
@@ -81,6 +82,7 @@ def preflight(config: StudyConfig) -> None:
         check_model(ocean.model)
     initial_state(config, ocean, config.ensemble.members - 1)
     random_forcing_of(config, ocean, 0)
+    box_averages(ocean, config.output.boxes)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
         kept_coordinates(config.resolved, ocean.waves)
@@ -176,6 +178,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         f"{config.name}: resolved and unresolved modes",
         "split",
         {"split": split},
+        model.unit,
     )
     write_all(
         study.path("closures.h5"),
@@ -183,6 +186,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         f"{config.name}: operators, noise and reduced models",
         "closures",
         {"operators": operators, "noise": noise, **models},
+        model.unit,
     )
 
 
@@ -308,7 +312,7 @@ def _simulated(study, name, truth):
             truth,
             progress=lambda done, total: shown.to(done / total),
         )
-    save(path, stamp, f"{study.config.name}: {name}", run)
+    save(path, stamp, f"{study.config.name}: {name}", run, model_of(study.config).unit)
     return run
 
 

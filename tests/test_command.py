@@ -395,3 +395,13 @@ def test_a_reduction_under_forcing_that_varies(time, start, word, tmp_path):
         if start is not None:
             assert file["time"][0] == start
             assert file["time"][-1] == start + 8000 * 86400.0
+
+
+def test_a_box_that_does_not_fit_leaves_no_folder(tmp_path, capsys):
+    arguments = ["truth", str(TINY), "--runs", str(tmp_path / "runs")]
+    box = 'output.boxes.gyre={field="buoyancy", x=["1 km", "2000 km"]}'
+    assert main([*arguments, "--set", box]) == 2
+    problem = capsys.readouterr().err
+    assert "[output.boxes.gyre] field = " in problem
+    assert "reaches beyond the box, 0 to 1800 km" in problem
+    assert not (tmp_path / "runs").exists()
