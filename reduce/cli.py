@@ -277,7 +277,7 @@ def _stage(options):
     document = _read(options)
     from .stages import STAGES, preflight
     from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
-    from .tables import stage_json, stage_table, truth_json, truth_table
+    from .tables import stage_json, stage_table, truth_table
 
     preflight(document.config)
 
@@ -301,7 +301,9 @@ def _stage(options):
                 return 128 + caught.number
             except Incomplete:
                 # What came of each is a result, and why is part of it.
-                _print(truth_json(study) if options.json else truth_table(study))
+                _print(
+                    stage_json(study, "truth") if options.json else truth_table(study)
+                )
                 raise
             _print(
                 stage_json(study, options.command)

@@ -111,11 +111,12 @@ def _folder(path):
         raise DataError(message)
     facts = {"run folder": path.name}
     truth = path / "truth"
-    there = {
-        int(found.stem.removeprefix(".").removeprefix("member-"))
+    names = (
+        found.stem.removeprefix(".").removeprefix("member-")
         for pattern in ("member-*.h5", ".member-*.lock")
         for found in truth.glob(pattern)
-    }
+    )
+    there = {int(name) for name in names if name.isdecimal()}
     asked = range(_members_asked(path / "config.toml"))
     states = {m: _member(truth, m) for m in sorted(there.union(asked))}
     if len(states) > 1:
