@@ -49,7 +49,6 @@ def study(tmp_path_factory):
     """The files of a tiny study with every stream, by path, with their kind."""
     runs = tmp_path_factory.mktemp("runs")
     overrides = (
-        "time.duration=3200 d",
         "output.fields_every=80 d",
         'output.boxes.gyre.field="vorticity"',
         'forcing.gale.kind="gusts"',
