@@ -285,8 +285,9 @@ def _lost(run: Simulated) -> Verdict | None:
         return None
     first = min(when for _, when in run.lost)
     return _failed(
-        f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
-        f"{first / 86400:.4g} days"
+        f"{len(run.lost)} of {len(run.series)} members blew up, beyond {LOST_BOUND} "
+        f"times the largest excursion of the truth, the first at {first / 86400:.4g} "
+        "days"
     )
 
 

@@ -161,7 +161,8 @@ def test_a_model_that_blows_up_has_failed(truth):
     assert len(found.lost) == 8
     first = min(when for _, when in found.lost)
     assert failed(entry) == (
-        f"8 of 8 members blew up, the first after {first / 86400:.4g} days"
+        "8 of 8 members blew up, beyond 10 times the largest excursion of the truth, "
+        f"the first at {first / 86400:.4g} days"
     )
     assert entry["lost"] == [list(pair) for pair in found.lost]
     # Lost beyond ten times the largest excursion of the truth, and stopped there.
@@ -181,7 +182,8 @@ def test_one_lost_member_is_enough(truth):
         cost=found.cost,
     )
     reason = failed(compare(settings(), "coloured", truth, lost))
-    assert reason == "2 of 8 members blew up, the first after 1 days"
+    assert reason.startswith("2 of 8 members blew up")
+    assert reason.endswith("the first at 1 days")
 
 
 def test_a_model_at_rest_has_failed(truth):
