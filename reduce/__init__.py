@@ -29,6 +29,7 @@ _PUBLIC = {
     "ReducedModel": "reduced",
     "Split": "split",
     "StudyConfig": "settings",
+    "Variation": "variation",
 }
 __all__ = list(_PUBLIC)
 

@@ -505,3 +505,13 @@ def test_a_damping_known_poorly_says_so():
     x -= x.mean(axis=0)
     model = closure("damped")(residual_data(x, rng.standard_normal(x.shape)))
     assert any("known poorly" in note for note in model.notes)
+
+
+def test_more_modes_than_the_record_can_tell_apart_are_refused():
+    rng = np.random.default_rng(78)
+    process = OrnsteinUhlenbeck(rate=np.eye(2) / 5, covariance=np.eye(2))
+    x = process.simulate(150, 0.2, rng)
+    slow = OrnsteinUhlenbeck(rate=np.eye(2), covariance=np.eye(2))
+    noise = slow.simulate(150, 0.2, rng)
+    with pytest.raises(DataError, match="some closure: 2 modes need a record of 10"):
+        instrumental_fit(x - x.mean(axis=1), noise, 0.2, "some")
