@@ -29,13 +29,13 @@ from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
-from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
+from .noise.fit import NoiseFit
+from .noise.of_split import fit_noise
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
 from .settings import FourierSettings, StudyConfig
 from .simulated import load, save
 from .split import Split, split_truth, unresolved_series
-from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Interrupted, Stage, Study, fingerprint_of
 
@@ -129,10 +129,6 @@ def run_reduce(study: Study, stamp: str) -> None:
             split.mean,
             progress=lambda done, total: shown.to(done / total),
         )
-    window = config.noise.window
-    if window is None:
-        times = integral_time(y[np.newaxis], record.step).value
-        window = window_rule(times, split.unresolved.variance, record.step)
     linear, quadratic = coupling_sizes(operators, split.x, y)
     log.info(
         "reduce: unresolved modes reach the resolved ones by linear terms of "
@@ -141,17 +137,16 @@ def run_reduce(study: Study, stamp: str) -> None:
         quadratic,
         ocean.unit,
     )
-    match = config.noise.match
-    if match == "auto":
-        match = "product" if quadratic > linear else "integral"
-    noise = fit_ornstein_uhlenbeck(
+    noise = fit_noise(
+        config.noise,
         y[np.newaxis],
         record.step,
-        window=window,
-        match=match,
-        partners=split.unresolved.partners,
-        labels=split.unresolved.labels,
+        product=quadratic > linear,
+        basis=split.unresolved,
+        waves=ocean.waves,
     )
+    for note in noise.notes:
+        log.info("reduce: noise: %s", note)
     data = ClosureData(
         model=ocean,
         split=split,

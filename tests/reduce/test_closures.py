@@ -31,7 +31,9 @@ def data_of(model, states, vectors, nx, *, step=1.0, calibrated=True, **options)
     """All that a closure is made from, and the series of the unresolved modes."""
     split, y = divided(model, states, vectors, nx, step=step, **options)
     noise = (
-        fit_ornstein_uhlenbeck(y[np.newaxis], step, window=8.0)
+        fit_ornstein_uhlenbeck(
+            y[np.newaxis], step, window=8.0, structure="real diagonal"
+        )
         if y.shape[1]
         else no_noise()
     )
