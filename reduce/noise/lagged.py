@@ -156,7 +156,7 @@ def lag_blocks(
         # No eigenvalue may be carried over the border to growth.
         rate = _matrix_rates(psi - bias / pairs.count[0], lag * step)
         solved = rate is not None
-        rate, share = raw if rate is None else rate, 0.0
+        rate = raw if rate is None else rate
         repaired, share = repaired_rate(rate[0], covariance[0])
         if share > MOST_REPAIR:
             message = (
