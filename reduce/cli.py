@@ -70,12 +70,61 @@ def parser() -> argparse.ArgumentParser:
                 "several commands may run members of one study at the same time",
             )
 
+    _add_noise(commands)
+
     show = commands.add_parser(
         "show", help="say what a file or run folder of ours holds", allow_abbrev=False
     )
     show.add_argument("path", type=Path, help="a file or run folder")
     show.add_argument("--json", action="store_true", help="print JSON instead of words")
     return top
+
+
+def _add_noise(commands):
+    """Add the command that fits noise to a series of the user's own."""
+    noise = commands.add_parser(
+        "noise",
+        help="fit noise to a series of your own, and test what it assumes",
+        allow_abbrev=False,
+    )
+    noise.add_argument("series", type=Path, help="an HDF5, netCDF-4 or CSV file")
+    noise.add_argument(
+        "--variable",
+        action="append",
+        required=True,
+        metavar="NAME",
+        help="variable or column; may be given several times",
+    )
+    noise.add_argument("--time", metavar="NAME", help="variable or column of times")
+    noise.add_argument(
+        "--time-unit", metavar="UNIT", help="unit of the times, if the file has none"
+    )
+    noise.add_argument(
+        "--step", metavar="QUANTITY", help='time between even samples, such as "1 d"'
+    )
+    noise.add_argument(
+        "--method",
+        choices=("integral", "product", "likelihood", "regression"),
+        default="integral",
+        help="what is fitted (default: integral of the lag covariance)",
+    )
+    noise.add_argument(
+        "--structure",
+        choices=("auto", "real diagonal", "complex diagonal", "full"),
+        default="auto",
+        help="form of the rate matrix; complex diagonal: variables two by two are the "
+        "parts of waves (default: by the length of the record)",
+    )
+    noise.add_argument(
+        "--window", metavar="QUANTITY", help="longest lag (integral, product)"
+    )
+    noise.add_argument("--lag", metavar="QUANTITY", help="the lag (regression)")
+    noise.add_argument(
+        "--figure", type=Path, metavar="FILE", help="draw it: .png, .svg or .pdf"
+    )
+    noise.add_argument(
+        "--json", action="store_true", help="print JSON (in SI) instead of a table"
+    )
 
 
 def _add_common(command):
@@ -169,6 +218,8 @@ def _run(options):
             return _show(options)
         if options.command == "check":
             return _check(options)
+        if options.command == "noise":
+            return _noise(options)
         return _stage(options)
     except EddyshedError as error:
         print(f"eddyshed: {error}", file=sys.stderr)
@@ -269,6 +320,15 @@ def _check(options):
             ignore_disk_space=options.ignore_disk_space,
         )
     )
+    return 0
+
+
+def _noise(options):
+    """Carry out ``noise``."""
+    from .noise.command import noise_of_file, noise_table
+
+    found = noise_of_file(options)
+    print(json.dumps(found, indent=1) if options.json else noise_table(found))
     return 0
 
 

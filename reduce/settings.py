@@ -132,13 +132,23 @@ class UnresolvedSettings:
 class NoiseFitSettings:
     """How the Ornstein-Uhlenbeck noise is fitted."""
 
-    match: str = setting(
+    method: str = setting(
         default="auto",
-        choices=("auto", "integral", "product"),
+        choices=("auto", "integral", "product", "likelihood", "regression"),
         doc="what the noise shares with the unresolved modes beside their variance. "
         "integral: that of the lag covariance, which linear coupling feels; product: "
-        "that of the squared correlation, which quadratic coupling feels; auto: by "
-        "which coupling is larger along the truth",
+        "that of the squared correlation, which quadratic coupling feels; likelihood: "
+        "all of it, if samples are those of such a process (those of smooth flows are "
+        "refused); regression: the covariance at one lag; auto: integral or product, "
+        "by which coupling is larger along the truth",
+    )
+    structure: str = setting(
+        default="auto",
+        choices=("auto", "real diagonal", "complex diagonal", "blocks", "full"),
+        doc="which modes the noise of a mode may act on. real diagonal: none; complex "
+        "diagonal: the other part of its wave; blocks: those of the same wavenumber "
+        "in x; full: all; auto: complex diagonal for waves, else full if the truth "
+        "holds 50 effective samples for each mode, else real diagonal",
     )
     window: float | None = setting(
         default=None,
@@ -147,6 +157,25 @@ class NoiseFitSettings:
         doc="length over which lag covariances are integrated; absent: eight times "
         "the variance-weighted correlation time of the unresolved modes",
     )
+    lag: float | None = setting(
+        default=None, unit="s", above=0, doc="lag of the regression"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if (self.method == "regression") != (self.lag is not None):
+            yield (
+                'method = "regression" needs lag, such as lag = "1 d"'
+                if self.lag is None
+                else 'lag has no meaning without method = "regression"; leave it out'
+            )
+        if self.window is not None and self.method in ("likelihood", "regression"):
+            yield f'window has no meaning with method = "{self.method}"; leave it out'
+        if self.method == "product" and self.structure in ("blocks", "full"):
+            yield (
+                f'method = "product" has no structure = "{self.structure}"; use '
+                '"integral", or a diagonal'
+            )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -34,14 +34,14 @@ from .flow.measure import measure_flow
 from .flow.parts import write_flow
 from .inner_products import in_product
 from .measured import measured_names, measured_statistics
-from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
+from .noise.fit import NoiseFit
+from .noise.of_split import fit_noise
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
 from .settings import EofSettings, FourierSettings, StudyConfig
 from .simulated import load, save
 from .split import Split, prescribed_basis, split_truth, unresolved_series
 from .stationarity import stationarity, stationarity_notes
-from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Stage, Study, fingerprint_of
 from .truth_stage import run_truth
@@ -134,10 +134,6 @@ def run_reduce(study: Study, stamp: str) -> None:
             memory=config.limits.memory,
             progress=lambda done, total: shown.to(done / total),
         )
-    window = config.noise.window
-    if window is None:
-        times = integral_time(y, split.step).value
-        window = window_rule(times, split.unresolved.variance, split.step)
     linear, quadratic = coupling_sizes(operators, split.x, y)
     log.info(
         "reduce: unresolved modes reach the resolved ones by linear terms of "
@@ -146,20 +142,19 @@ def run_reduce(study: Study, stamp: str) -> None:
         quadratic,
         model.unit,
     )
-    match = config.noise.match
-    if match == "auto":
-        match = "product" if quadratic > linear else "integral"
     variation, forced = operators.variation, np.zeros((len(split.times), y.shape[2]))
     if variation is not None:
         forced = variation.cycle(y, split.times)
-    noise = fit_ornstein_uhlenbeck(
+    noise = fit_noise(
+        config.noise,
         y - forced,
         split.step,
-        window=window,
-        match=match,
-        partners=split.unresolved.partners,
-        labels=split.unresolved.labels,
+        product=quadratic > linear,
+        basis=split.unresolved,
+        waves=model.waves,
     )
+    for note in noise.notes:
+        log.info("reduce: noise: %s", note)
     data = ClosureData(
         model=model,
         split=split,

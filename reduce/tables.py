@@ -206,7 +206,7 @@ def _reduce(study):
         f"variance ({', '.join(split.resolved.labels)})\n"
         f"unresolved: {split.unresolved.n_modes} modes, {100 * unresolved:.3g} %\n"
         f"in no mode: {100 * left:.2g} %\n"
-        f"noise: {noise.structure}, matches the {noise.match} over a window of "
+        f"noise: {noise.structure}, method {noise.method}, by lags up to "
         f"{format_quantity(noise.window, 's')}"
     )
     notes = [*split_notes(study.config, split), *noise.notes]

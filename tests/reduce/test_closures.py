@@ -32,7 +32,11 @@ def no_noise():
 def data_of(model, states, vectors, nx, *, step=1.0, calibrated=True, **options):
     """All that a closure is made from, and the series of the unresolved modes."""
     split, y = divided(model, states, vectors, nx, step=step, **options)
-    noise = fit_ornstein_uhlenbeck(y, step, window=8.0) if y.shape[2] else no_noise()
+    noise = (
+        fit_ornstein_uhlenbeck(y, step, window=8.0, structure="real diagonal")
+        if y.shape[2]
+        else no_noise()
+    )
     return ClosureData(
         model=model,
         split=split,
