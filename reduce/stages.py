@@ -31,6 +31,7 @@ from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
+from .diffusion import DiffusionModel
 from .reduced import ReducedModel
 from .settings import FourierSettings, StudyConfig
 from .simulated import load, save
@@ -160,6 +161,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         covariance_y=y.T @ y / len(y),
         covariance_xy=split.x.T @ y / len(y),
         mean_calibration=config.closures.mean_calibration,
+        leave_out=config.closures.white.leave_out,
     )
     models = {name: closure(name)(data) for name in config.closures.use}
     write_all(
@@ -193,9 +195,10 @@ def read_operators(study: Study) -> Operators:
     return read_one(study.path("closures.h5"), "closures", "operators", Operators)
 
 
-def read_model(study: Study, name: str) -> ReducedModel:
+def read_model(study: Study, name: str) -> ReducedModel | DiffusionModel:
     """Read a reduced model."""
-    return read_one(study.path("closures.h5"), "closures", name, ReducedModel)
+    path = study.path("closures.h5")
+    return read_one(path, "closures", name, ReducedModel, DiffusionModel)
 
 
 def run_audit(study: Study, stamp: str) -> None:
@@ -214,8 +217,9 @@ def run_benchmark(study: Study, stamp: str) -> None:
     truth = truth_side(split, config.seed)
     entries, correlations = [], {"truth": truth.correlations(truth.series)}
     for name in config.closures.use:
-        run = _simulated(study, name, truth)
+        run, model = _simulated(study, name, truth), read_model(study, name)
         entry = compare(config, name, truth, run)
+        entry |= {"notes": list(model.notes), "facts": model.facts}
         entries.append(entry)
         if entry["summary"] is not None:
             correlations[name] = truth.correlations(run.series)

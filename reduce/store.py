@@ -70,6 +70,13 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "rate": ("y", "y"),
         "covariance": ("y", "y"),
     },
+    "DiffusionModel": {"noise": ("power", "x", "power", "x")},
+    "Polynomial": {
+        "constant": ("x",),
+        "linear": ("x", "x"),
+        "quadratic": ("x", "x", "x"),
+        "cubic": ("x", "x", "x", "x"),
+    },
 }
 
 
@@ -176,11 +183,26 @@ def write_all(
         path, kind=kind, title=title, attributes={"fingerprint": stamp}
     ) as file:
         for name, value in parts.items():
-            pack(file.create_group(name, track_order=True), value)
+            group = file.create_group(name, track_order=True)
+            group.attrs["holds"] = type(value).__name__
+            pack(group, value)
 
 
-def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
+def read_one(path: Path, kind: str, name: str, *classes: type) -> Any:
     """Read one dataclass out of a file that `write_all` made.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    kind, name : str
+        Kind of the file, and name of the part.
+    *classes : type
+        What the part may be; the file says which it is.
+
+    Returns
+    -------
+    instance of one of classes
 
     Raises
     ------
@@ -192,6 +214,8 @@ def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
             message = f"{path}: has no part {name!r}"
             raise DataError(message)
         try:
+            holds = file[name].attrs["holds"]
+            (cls,) = (known for known in classes if known.__name__ == holds)
             return unpack(file[name], cls)
         except (OSError, KeyError, RuntimeError, ValueError) as error:
             message = (

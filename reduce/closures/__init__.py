@@ -1,8 +1,10 @@
 """Closures: ways to stand in for what was dropped, one file each.
 
-Each module has one function ``close(data: ClosureData) -> ReducedModel`` and
-says in its docstring what it assumes. To add one, write the module and add
-its name here; the config, the benchmark and the report pick it up.
+Each module has one function ``close(data: ClosureData)``, which returns a
+:class:`~eddyshed.reduce.reduced.ReducedModel` or, where no unresolved mode is
+left, a :class:`~eddyshed.reduce.diffusion.DiffusionModel`, and says in its
+docstring what it assumes. To add one, write the module and add its name here;
+the config, the benchmark and the report pick it up.
 """
 
 from __future__ import annotations
@@ -16,7 +18,15 @@ CLOSURES = {
     "residual": "red noise and linear damping fitted to the unresolved tendency",
     "coloured": "the unresolved modes are simulated as the fitted noise, and "
     "driven and modulated by the resolved ones",
+    "white": "the limit of fast noise: damping, noise-induced drift and white noise, "
+    "every term derived",
+    "coloured_open": "diagnostic: coloured in open loop, with no restoring force from "
+    "the unresolved modes",
+    "white_open": "diagnostic: white in open loop, with no restoring force from the "
+    "unresolved modes",
 }
+# Made only if the config asks: they show what the feedback does by lacking it.
+DIAGNOSTICS = ("coloured_open", "white_open")
 
 
 def closure(name: str):
@@ -30,6 +40,6 @@ def closure(name: str):
     Returns
     -------
     callable
-        ``close(data: ClosureData) -> ReducedModel``
+        ``close(data: ClosureData) -> ReducedModel or DiffusionModel``
     """
     return import_module(f".{name}", __name__).close

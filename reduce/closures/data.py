@@ -34,6 +34,9 @@ class ClosureData:
     mean_calibration : bool
         Whether constants are shifted so that mean tendencies vanish over the
         truth.
+    leave_out : tuple of str
+        Terms of the white closure that are left out, of
+        :data:`eddyshed.reduce.homogenised.TERMS`.
     """
 
     model: Model
@@ -43,6 +46,7 @@ class ClosureData:
     covariance_y: np.ndarray
     covariance_xy: np.ndarray
     mean_calibration: bool
+    leave_out: tuple[str, ...] = ()
 
     @property
     def covariance_x(self) -> np.ndarray:
