@@ -206,7 +206,10 @@ def _carried(noise, linear, step):
         return np.einsum("ik,pkql,jl->piqj", by, what, by, optimize=True)
 
     total = sum(
-        weight * length / 2 * moved(linalg.expm(linear * length * (1 + node) / 2), noise)
+        weight
+        * length
+        / 2
+        * moved(linalg.expm(linear * length * (1 + node) / 2), noise)
         for node, weight in zip(nodes, weights, strict=True)
     )
     for doubling in range(halvings):

@@ -24,7 +24,7 @@ class _WhiteNoiseScheme:
         self.n_work = math.comb(nx + 3, 3)  # products of coordinates
         self._is_additive = model.is_additive
         used = factor[:1] if self._is_additive else factor
-        self._rows = as_operator(used.reshape(-1, self.n_normals))
+        self._rows = as_operator(used.reshape(len(used) * nx, self.n_normals))
 
     def begin(
         self, x: np.ndarray, y: np.ndarray | None, normals: np.ndarray
@@ -57,7 +57,7 @@ class _WhiteNoiseScheme:
         """
         count, steps, members = normals.shape
         made = column_product(self._rows, normals.reshape(count, steps * members))
-        return made.reshape(-1, steps, members)
+        return made.reshape(self._rows.shape[0], steps, members)
 
     def _kick(self, x, increment):
         """Increment of x by the noise at states x, both (nx, member)."""

@@ -46,7 +46,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import linalg
-from scipy.sparse import block_diag, csr_array, csgraph
+from scipy.sparse import block_diag, csgraph, csr_array
 
 from eddyshed.solver.errors import DataError
 
@@ -184,9 +184,7 @@ def white_limit(
             "linear_feedback": _feedback(coupling, response),
             "stratonovich_drift": stratonovich,
             "levy_area_drift": levy_area,
-            "quadratic_feedback": Polynomial(
-                constant=np.zeros(nx), linear=by_products
-            ),
+            "quadratic_feedback": Polynomial(constant=np.zeros(nx), linear=by_products),
         },
         noises={
             "linear_noise": multiplicative.reshape(shape),
@@ -270,9 +268,7 @@ def _cell_solutions(rate, right):
             made = made / np.add.outer(values, values)
         else:
             # rate^T Q + Q rate = M, turned: T^T X + X T = U^T M U.
-            made, scale, _ = linalg.lapack.ztrsyl(
-                upper.conj(), upper, made, trana="C"
-            )
+            made, scale, _ = linalg.lapack.ztrsyl(upper.conj(), upper, made, trana="C")
             made = made / scale
         made = back @ (back @ made).T
         found = np.empty_like(matrix)

@@ -29,9 +29,9 @@ from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
+from .diffusion import DiffusionModel
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
-from .diffusion import DiffusionModel
 from .reduced import ReducedModel
 from .settings import FourierSettings, StudyConfig
 from .simulated import load, save

@@ -180,6 +180,6 @@ def stability_notes(
     if growth < 0:
         return []
     return [
-        f"the linear drift has a mode that grows at {growth:.3g} s-1, and no cubic term "
-        "holds it: the closure is linearly unstable"
+        f"the linear drift has a mode that grows at {growth:.3g} s-1, and no cubic "
+        "term holds it: the closure is linearly unstable"
     ]

@@ -305,7 +305,7 @@ def test_noise_that_does_not_decay_has_no_limit():
 
 def test_terms_that_do_not_exist_are_refused():
     limit = white_limit(random_slow_fast(np.random.default_rng(19), 2, 3))
-    with pytest.raises(DataError, match="'memory'.*choose from quadratic_mean, lin"):
+    with pytest.raises(DataError, match=r"'memory'.*choose from quadratic_mean, lin"):
         limit.equation(leave_out=["memory"])
 
 
