@@ -65,6 +65,7 @@ DRIFT_TERMS = (
 NOISE_TERMS = ("linear_noise", "quadratic_noise")
 TERMS = DRIFT_TERMS + NOISE_TERMS
 
+LARGEST = 48  # resolved modes: their cubic terms then take 42 MB
 ROUND_OFF = 1e-13  # of a matrix's norm: entries that unitary transforms leave
 
 

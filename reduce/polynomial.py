@@ -92,15 +92,15 @@ def packed(array: np.ndarray) -> np.ndarray:
 
     Parameters
     ----------
-    array : ndarray, shape (nx, nx, ..., nx)
+    array : ndarray, shape (rows, nx, ..., nx)
         Symmetric in all axes but the first.
 
     Returns
     -------
-    ndarray, shape (nx, products)
+    ndarray, shape (rows, products)
         In the order of :func:`itertools.combinations_with_replacement`.
     """
-    nx, degree = len(array), array.ndim - 1
+    nx, degree = array.shape[-1], array.ndim - 1
     columns = [
         len(set(permutations(chosen))) * array[(slice(None), *chosen)]
         for chosen in combinations_with_replacement(range(nx), degree)

@@ -30,6 +30,7 @@ from .closures import closure
 from .closures.data import ClosureData
 from .coupling import coupling, coupling_sizes
 from .diffusion import DiffusionModel
+from .homogenised import LARGEST
 from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
@@ -77,11 +78,19 @@ def preflight(config: StudyConfig, command: str) -> None:
     random_forcing_of(config, ocean, 0)
     stepper_of(config.time.scheme, ocean, config.time.step)
     if isinstance(config.resolved, FourierSettings):
-        kept_coordinates(config.resolved, ocean.waves)
-    elif config.resolved.modes >= ocean.size:
+        kept = int(kept_coordinates(config.resolved, ocean.waves).sum())
+    elif (kept := config.resolved.modes) >= ocean.size:
         message = (
             f"[resolved] modes = {config.resolved.modes}, but the grid has "
             f"{ocean.size} coordinates and some must be left unresolved; ask for fewer"
+        )
+        raise DataError(message)
+    white = [name for name in config.closures.use if name.startswith("white")]
+    if white and kept > LARGEST and command not in ("truth", "check"):
+        message = (
+            f"[closures] {white[0]}: {kept} resolved modes make a cubic of {kept}^4 "
+            f"coefficients, and it is made for at most {LARGEST} modes; keep fewer, or "
+            "leave it out of [closures] use"
         )
         raise DataError(message)
 

@@ -187,7 +187,14 @@ def _benchmark(study):
                 f"{found['truth']['cost'] / entry['cost']:.3g} x truth",
             ]
         )
+    of_noise = read_noise(study).notes
     reasons = [f"{e['name']}: {e['verdict']['reason']}" for e in found["closures"]]
+    reasons += [
+        f"{entry['name']}: note: {words}"
+        for entry in found["closures"]
+        for words in entry["notes"]
+        if words not in of_noise  # eddyshed reduce has printed those
+    ]
     return "\n\n".join([columns(rows), columns(verdicts), "\n".join(reasons)])
 
 

@@ -373,6 +373,29 @@ class TestContent:
         assert table.count("*") == (~sampling.astype(bool)).sum() > 0
         assert table.count("†") == (~close.astype(bool)).sum() > 0
 
+    def test_gives_what_the_closures_know_of_themselves(self, evidence):
+        closures = copy.deepcopy(evidence.closures)
+        bare, residual, coloured = closures
+        bare |= {"facts": {}, "notes": []}
+        residual |= {"facts": {"size & share": 0.125, "lost": None}, "notes": []}
+        coloured |= {"facts": {}, "notes": ["it grows & grows", "of the noise"]}
+        noise = dataclasses.replace(evidence.noise, notes=("of the noise",))
+        other = dataclasses.replace(evidence, closures=closures, noise=noise)
+        html = render(other, "x", None)
+        table = html[html.index("What each closure found out") :]
+        found = words(table[: table.index("</table>")])
+        assert "residualsize & share0.125" in found
+        assert "residuallostunknown" in found
+        assert "coloured––" in found
+        assert "It grows & grows." in found
+        # What is said of the noise is said once, where the noise is.
+        assert "Of the noise" not in found
+        assert "bare" not in found
+        for entry in closures:
+            entry |= {"facts": {}, "notes": []}
+        html = render(dataclasses.replace(evidence, closures=closures), "x", None)
+        assert "What each closure found out" not in html
+
     def test_lists_the_fingerprints_and_seeds(self, study, html):
         for name in ("truth", "reduce", "audit", "benchmark"):
             assert fingerprint_of(study, STAGES, name) in html
