@@ -36,10 +36,10 @@ def models(note: Note, evidence: Evidence) -> str:
         f"</p>\n<ul>{failed}</ul>"
         if failed
         else "",
+        _knowledge(note, evidence),
         _correlations(note, evidence),
         _distributions(note, evidence),
         _scores(note, evidence),
-        _knowledge(note, evidence),
     )
 
 

@@ -159,7 +159,7 @@ class TestPage:
         assert len(pictures) == FIGURES
         assert all(len(picture["alt"]) > 40 for picture in pictures)
         tables = [a for a in walk.tags("div") if a.get("class") == "scroll"]
-        assert len(tables) == len(walk.tags("table")) == 6
+        assert len(tables) == len(walk.tags("table")) == 7
         assert all(a["aria-label"] and a["tabindex"] == "0" for a in tables)
         assert len(walk.tags("figure")) == FIGURES + len(tables)
 
@@ -382,12 +382,13 @@ class TestContent:
         noise = dataclasses.replace(evidence.noise, notes=("of the noise",))
         other = dataclasses.replace(evidence, closures=closures, noise=noise)
         html = render(other, "x", None)
-        table = html[html.index("What each closure found out") :]
-        found = words(table[: table.index("</table>")])
-        assert "residualsize & share0.125" in found
+        found = words(html)
+        found = found[found.index("What each closure found out") :]
+        found = found[: found.index("Correlation functions of")]
+        assert "residualsize &amp; share0.125" in found
         assert "residuallostunknown" in found
         assert "coloured––" in found
-        assert "It grows & grows." in found
+        assert "It grows &amp; grows." in found
         # What is said of the noise is said once, where the noise is.
         assert "Of the noise" not in found
         assert "bare" not in found
