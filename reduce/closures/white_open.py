@@ -45,6 +45,8 @@ def close(data: ClosureData) -> DiffusionModel:
         linear = model.drift.linear
         growth = linear + linear.T + np.einsum("jiki->jk", model.noise[1:][:, :, 1:])
         low, high = np.linalg.eigvalsh(growth)[[0, -1]]
-        words = f"far from rest x.x grows at {low:.3g} to {high:.3g} s-1"
-        notes.append(f"{words}, without end" if low > 0 else words)
+        notes.append(
+            f"far from rest the mean of x.x changes at {low:.3g} to {high:.3g} s-1 times "
+            f"itself{', so it grows without end' if low > 0 else ''}"
+        )
     return replace(model, notes=tuple(notes))

@@ -1,5 +1,6 @@
 """The white closure: constants, sizes of its terms, notes, and what is left out."""
 
+import re
 from dataclasses import replace
 from pathlib import Path
 
@@ -156,11 +157,8 @@ def test_open_loop_says_how_fast_it_grows():
     data, _ = random_case()
     model = closure("white_open")(data)
     (note,) = (note for note in model.notes if note.startswith("far from rest"))
-    low, high = (
-        float(word)
-        for word in note.split()
-        if word[-1].isdigit() and word[0] not in "s"
-    )
+    low, high = re.search(r"at (\S+) to (\S+) s-1", note).groups()
+    low, high = float(low), float(high)
     rng = np.random.default_rng(111)
     for x in 1e6 * rng.standard_normal((50, model.nx)):
         change = 2 * x @ model.drift(x) + np.trace(model.diffusion(x))
