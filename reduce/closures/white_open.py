@@ -46,7 +46,7 @@ def close(data: ClosureData) -> DiffusionModel:
         growth = linear + linear.T + np.einsum("jiki->jk", model.noise[1:][:, :, 1:])
         low, high = np.linalg.eigvalsh(growth)[[0, -1]]
         notes.append(
-            f"far from rest the mean of x.x changes at {low:.3g} to {high:.3g} s-1 times "
-            f"itself{', so it grows without end' if low > 0 else ''}"
+            f"far from rest the mean of x.x changes at {low:.3g} to {high:.3g} s-1 "
+            f"times itself{', so it grows without end' if low > 0 else ''}"
         )
     return replace(model, notes=tuple(notes))
