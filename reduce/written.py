@@ -51,7 +51,7 @@ def written(model: DiffusionModel, scale: np.ndarray) -> str:
         )
     kind = "additive" if model.is_additive else "multiplicative"
     parts += [
-        f"Covariance of the noise per second ({kind}), <dM_i dM_j> = a_ij dt:",
+        f"Covariance of the noise per second ({kind}), <dM_i dM_j> = a_i,j dt:",
         "\n".join(_covariances(model, scale)),
         f"Terms below {NEGLIGIBLE:g} of the largest in their line, at typical sizes, "
         "are not written, nor are covariances below that of the two variances.",
@@ -78,7 +78,7 @@ def _covariances(model, scale):
     }
     for (i, j), form in forms.items():
         if i == j or sizes[i, j] > NEGLIGIBLE * np.sqrt(sizes[i, i] * sizes[j, j]):
-            yield _line(f"a{i + 1}{j + 1} =", form, scale)
+            yield _line(f"a{i + 1},{j + 1} =", form, scale)
 
 
 def _form(model, i, j):

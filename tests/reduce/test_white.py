@@ -320,9 +320,9 @@ def test_an_equation_is_written_in_both_senses():
     assert lines[ito + 3] == "dx2/dt = 3 x2 - 1.5 x1^2 - 1 x2^3 + noise"
     assert lines[stratonovich + 2] == "dx1/dt = 0.25 + 2 x1 x2 - 1 x1 x2^2 + noise"
     assert lines[stratonovich + 3] == "dx2/dt = 4 x2 - 1.5 x1^2 - 1 x2^3 + noise"
-    assert "a11 = 0.5 + 2 x2^2" in lines
-    assert "a12 = - 2 x1 x2" in lines
-    assert "a22 = 4 x1^2" in lines
+    assert "a1,1 = 0.5 + 2 x2^2" in lines
+    assert "a1,2 = - 2 x1 x2" in lines
+    assert "a2,2 = 4 x1^2" in lines
 
 
 def test_negligible_terms_are_not_written():
@@ -335,7 +335,7 @@ def test_negligible_terms_are_not_written():
         noise=noise,
     )
     text = written(model, np.ones(2))
-    assert "a12" not in text
+    assert "a1,2" not in text
     assert "dx1/dt = - 1 x1 + noise" in text
     # At typical sizes: a small coefficient of a large coordinate counts.
     assert "1e-05 x2" in written(model, np.array([1.0, 1e4]))
