@@ -150,13 +150,13 @@ def audit(
         length / time_x.value, length / time_x.value * time_x.error / time_x.value
     )
     labels = split.resolved.labels
-    every = ("residual", "coloured")
+    every = ("residual", "coloured", "white")
     return [
         _worst(
             "separation",
             "Each resolved mode changes more slowly than what drives it from the "
             "unresolved modes.",
-            ("residual",),
+            ("residual", "white"),
             "correlation time of the mode over that of its coupling",
             separation,
             settings.separation,

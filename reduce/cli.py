@@ -77,6 +77,11 @@ def parser() -> argparse.ArgumentParser:
     )
     show.add_argument("path", type=Path, help="a file or run folder")
     show.add_argument("--json", action="store_true", help="print JSON instead of words")
+    show.add_argument(
+        "--equation",
+        metavar="CLOSURE",
+        help="write out the reduced equation of white or white_open, from a run folder",
+    )
     return top
 
 
@@ -438,8 +443,12 @@ def _signals():
 
 def _show(options):
     """Carry out ``show``."""
-    from .show import describe
+    from .show import describe, equation
 
+    if options.equation is not None:
+        text = equation(options.path, options.equation)
+        print(json.dumps({"equation": text}, indent=1) if options.json else text)
+        return 0
     found = describe(options.path)
     if options.json:
         print(json.dumps(found, indent=1))

@@ -101,6 +101,13 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "rate": ("y", "y"),
         "covariance": ("y", "y"),
     },
+    "DiffusionModel": {"noise": ("power", "x", "power", "x")},
+    "Polynomial": {
+        "constant": ("x",),
+        "linear": ("x", "x"),
+        "quadratic": ("x", "x", "x"),
+        "cubic": ("x", "x", "x", "x"),
+    },
 }
 
 # Powers of the unit of resolved coordinates and of the second, for units that

@@ -10,7 +10,8 @@ from eddyshed.solver.hooks import Hook, is_hook, options_problem
 from eddyshed.solver.inner_products import INNER_PRODUCTS
 from eddyshed.solver.settings import TruthConfig
 
-from .closures import CLOSURES
+from .closures import CLOSURES, DIAGNOSTICS
+from .homogenised import TERMS
 
 
 def inner_product_setting() -> str:
@@ -179,11 +180,23 @@ class NoiseFitSettings:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class WhiteSettings:
+    """What goes into the white closure."""
+
+    leave_out: tuple[str, ...] = setting(
+        default=(),
+        choices=TERMS,
+        doc="terms of the limit equation that are left out, to see what each does; "
+        "with mean calibration the constant makes up for the mean of what is missing",
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class ClosuresSettings:
     """Which closures are made."""
 
     use: tuple[str, ...] = setting(
-        default=tuple(CLOSURES),
+        default=tuple(name for name in CLOSURES if name not in DIAGNOSTICS),
         choices=tuple(CLOSURES),
         hooks=True,
         doc="closures to make",
@@ -195,8 +208,11 @@ class ClosuresSettings:
     )
     mean_calibration: bool = setting(
         default=True,
-        doc="shift the constant forcing of the coloured closure so that its mean "
-        "tendency vanishes over the truth",
+        doc="shift the constant forcing of the coloured and white closures so that "
+        "their mean tendency vanishes over the truth",
+    )
+    white: WhiteSettings = setting(
+        default=WhiteSettings, doc="what goes into the white closure"
     )
 
     def problems(self):

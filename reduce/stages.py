@@ -30,8 +30,10 @@ from .closures import closure
 from .closures.data import ClosureData
 from .contract import check_model
 from .coupling import coupling, coupling_sizes, covariance
+from .diffusion import DiffusionModel
 from .flow.measure import measure_flow
 from .flow.parts import write_flow
+from .homogenised import LARGEST
 from .inner_products import in_product
 from .measured import measured_names, measured_statistics
 from .noise.fit import NoiseFit
@@ -84,14 +86,25 @@ def preflight(config: StudyConfig) -> None:
     random_forcing_of(config, ocean, 0)
     box_averages(ocean, config.output.boxes)
     stepper_of(config.time.scheme, ocean, config.time.step)
-    if isinstance(config.resolved, FourierSettings):
-        kept_coordinates(config.resolved, ocean.waves)
-    elif not isinstance(config.resolved, EofSettings):
-        prescribed_basis(config.resolved, ocean)
-    elif config.resolved.modes >= ocean.size:
+    resolved = config.resolved
+    if isinstance(resolved, FourierSettings):
+        kept = int(kept_coordinates(resolved, ocean.waves).sum())
+    elif isinstance(resolved, EofSettings):
+        kept = resolved.modes
+    else:
+        kept = prescribed_basis(resolved, ocean).n_modes
+    if kept >= ocean.size:
         message = (
-            f"[resolved] modes = {config.resolved.modes}, but the grid has "
-            f"{ocean.size} coordinates and some must be left unresolved; ask for fewer"
+            f"[resolved] modes = {kept}, but the grid has {ocean.size} coordinates and "
+            "some must be left unresolved; ask for fewer"
+        )
+        raise DataError(message)
+    white = [name for name in config.closures.use if name.startswith("white")]
+    if white and kept > LARGEST:
+        message = (
+            f"[closures] {white[0]}: {kept} resolved modes make a cubic of {kept}^4 "
+            f"coefficients, and it is made for at most {LARGEST} modes; keep fewer, or "
+            "leave it out of [closures] use"
         )
         raise DataError(message)
 
@@ -164,6 +177,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         covariance_xy=covariance(split.x, y),
         mean_calibration=config.closures.mean_calibration,
         forced_covariance=covariance(forced[np.newaxis], forced[np.newaxis]),
+        leave_out=config.closures.white.leave_out,
     )
     hooks = config.closures.hooks
     models = {name: _made(name, hooks.get(name), data) for name in config.closures.use}
@@ -202,10 +216,10 @@ def _made(name, hook, data):
 
 def _checked(name, made, nx):
     """What a user's closure made, under the name that the config has for it."""
-    if not isinstance(made, ReducedModel):
+    if not isinstance(made, ReducedModel | DiffusionModel):
         message = (
             f'closure "{name}" returned a {type(made).__name__}, must be a '
-            "ReducedModel of eddyshed.reduce"
+            "ReducedModel or a DiffusionModel of eddyshed.reduce"
         )
         raise ContractError(message)
     if made.nx != nx:
@@ -240,9 +254,10 @@ def read_operators(study: Study) -> Operators:
     return read_one(study.path("closures.h5"), "closures", "operators", Operators)
 
 
-def read_model(study: Study, name: str) -> ReducedModel:
+def read_model(study: Study, name: str) -> ReducedModel | DiffusionModel:
     """Read a reduced model."""
-    return read_one(study.path("closures.h5"), "closures", name, ReducedModel)
+    path = study.path("closures.h5")
+    return read_one(path, "closures", name, ReducedModel, DiffusionModel)
 
 
 def run_audit(study: Study, stamp: str) -> None:
@@ -261,8 +276,9 @@ def run_benchmark(study: Study, stamp: str) -> None:
     truth = truth_side(split, config.seed)
     entries, correlations = [], {"truth": truth.correlations(truth.series)}
     for name in config.closures.use:
-        run = _simulated(study, name, truth)
+        run, model = _simulated(study, name, truth), read_model(study, name)
         entry = compare(config, name, truth, run)
+        entry |= {"notes": list(model.notes), "facts": model.facts}
         entries.append(entry)
         if entry["summary"] is not None:
             correlations[name] = truth.correlations(run.series)

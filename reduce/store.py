@@ -152,11 +152,26 @@ def write_all(
         path, kind=kind, title=title, attributes={"fingerprint": stamp}
     ) as file:
         for name, value in parts.items():
-            pack(file.create_group(name, track_order=True), value, unit)
+            group = file.create_group(name, track_order=True)
+            group.attrs["holds"] = type(value).__name__
+            pack(group, value, unit)
 
 
-def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
+def read_one(path: Path, kind: str, name: str, *classes: type) -> Any:
     """Read one dataclass out of a file that `write_all` made.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    kind, name : str
+        Kind of the file, and name of the part.
+    *classes : type
+        What the part may be; the file says which it is.
+
+    Returns
+    -------
+    instance of one of classes
 
     Raises
     ------
@@ -168,6 +183,8 @@ def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
             message = f"{path}: has no part {name!r}"
             raise DataError(message)
         try:
+            holds = file[name].attrs["holds"]
+            (cls,) = (known for known in classes if known.__name__ == holds)
             return unpack(file[name], cls)
         except (OSError, KeyError, RuntimeError, ValueError) as error:
             message = (

@@ -271,11 +271,18 @@ def _benchmark(study):
                 f"{found['truth']['cost'] / entry['cost']:.3g} x truth",
             ]
         )
+    of_noise = read_noise(study).notes
     reasons = [f"{e['name']}: {e['verdict']['reason']}" for e in found["closures"]]
     reasons += [
         f"{e['name']}: {e['step']['sentence']}"
         for e in found["closures"]
         if e["step"] is not None
+    ]
+    reasons += [
+        f"{entry['name']}: note: {words}"
+        for entry in found["closures"]
+        for words in entry["notes"]
+        if words not in of_noise  # eddyshed reduce has printed those
     ]
     tables = [rows, measured, verdicts] if len(measured) > 1 else [rows, verdicts]
     return "\n\n".join([*map(columns, tables), "\n".join(reasons)])

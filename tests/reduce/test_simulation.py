@@ -232,7 +232,7 @@ def test_scheme_draws_the_stationary_noise(rng):
     increments = scheme.colour(rng.standard_normal((3, 3, members)))
     before = state[1:].copy()
     for step in range(3):
-        scheme.advance(state, increments[:, step])
+        scheme.advance(state, increments[:, step], 0.0)
     for y in (before, state[1:]):
         # Standard error of a sample covariance of normals; with 6 numbers
         # twice, 5 standard errors fail once in 10^5 streams.

@@ -14,10 +14,13 @@ from toys import coloured_model, orthonormal_vectors, random_model
 
 from eddyshed.reduce.audit import Finding
 from eddyshed.reduce.bases.basis import Basis, Measured
+from eddyshed.reduce.diffusion import DiffusionModel
+from eddyshed.reduce.homogenised import white_limit
 from eddyshed.reduce.layout import AXES, UNITS, composed
 from eddyshed.reduce.noise.fit import NoiseFit, fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import Operators, galerkin
+from eddyshed.reduce.polynomial import Polynomial
 from eddyshed.reduce.reduced import ReducedModel
 from eddyshed.reduce.report.markup import page
 from eddyshed.reduce.split import Split
@@ -82,6 +85,9 @@ def parts():
         x_from_x=operators.A11,
         x_from_xx=operators.B111,
     )
+    white = white_limit(coloured).equation(
+        labels=split.resolved.labels, notes=("a note",), facts={"size": 0.1}
+    )
     return {
         "split": split,
         "operators": operators,
@@ -90,6 +96,7 @@ def parts():
         "process": noise.process,
         "coloured": coloured,
         "bare": bare,
+        "white": white,
     }
 
 
@@ -114,7 +121,7 @@ def assert_equal(one, other, where="value"):
         assert one == other, where
 
 
-NAMES = ("split", "operators", "noise", "full", "process", "coloured", "bare")
+NAMES = ("split", "operators", "noise", "full", "process", "coloured", "bare", "white")
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -125,8 +132,9 @@ def test_what_goes_in_comes_out(parts, path, name):
 
 def test_all_kinds_are_tried(parts):
     kinds = {Split, Operators, NoiseFit, OrnsteinUhlenbeck, ReducedModel}
+    kinds.add(DiffusionModel)
     assert {type(value) for value in parts.values()} == kinds
-    for kind in (*kinds, Basis):
+    for kind in (*kinds, Basis, Polynomial):
         arrays = [
             field.name
             for field in dataclasses.fields(kind)
