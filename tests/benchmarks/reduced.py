@@ -18,7 +18,7 @@ from pathlib import Path
 
 import numpy as np
 
-from eddyshed.reduce.reduced import ReducedModel, compiled_drift
+from eddyshed.reduce.reduced import COLUMNS, ReducedModel, compiled_drift
 from eddyshed.reduce.simulation import group_width, make_scheme, simulate
 from eddyshed.solver.randomness import stream
 
@@ -66,10 +66,11 @@ def drift_of(n, members):
     """A function that evaluates the drift of all members, and its operations."""
     model = model_of(n)
     drift, width = compiled_drift(model), group_width(make_scheme(model, 0.01))
-    x = np.random.default_rng(1).standard_normal((n, members))
+    columns = -(-members // COLUMNS) * COLUMNS  # filled up, as a step has them
+    x = np.random.default_rng(1).standard_normal((n, columns))
     groups = [
         np.ascontiguousarray(x[:, first : first + width])
-        for first in range(0, members, width)
+        for first in range(0, columns, width)
     ]
     nothing = [np.empty((0, group.shape[1])) for group in groups]
 
