@@ -18,7 +18,7 @@ from pathlib import Path
 
 import numpy as np
 
-from eddyshed.reduce.reduced import ReducedModel, compiled_drift
+from eddyshed.reduce.reduced import COLUMNS, ReducedModel, compiled_drift
 from eddyshed.reduce.simulation import group_width, make_scheme, simulate
 from eddyshed.solver.randomness import stream
 
@@ -65,17 +65,22 @@ def floor():
 def drift_of(n, members):
     """A function that evaluates the drift of all members, and its operations."""
     model = model_of(n)
-    drift, width = compiled_drift(model), group_width(make_scheme(model, 0.01))
-    x = np.random.default_rng(1).standard_normal((n, members))
+    width = group_width(make_scheme(model, 0.01))
+    columns = -(-members // COLUMNS) * COLUMNS  # filled up, as a step has them
+    x = np.random.default_rng(1).standard_normal((n, columns))
     groups = [
         np.ascontiguousarray(x[:, first : first + width])
-        for first in range(0, members, width)
+        for first in range(0, columns, width)
     ]
-    nothing = [np.empty((0, group.shape[1])) for group in groups]
+    # A drift for each, as each group is stepped to its end before the next.
+    parts = [
+        (compiled_drift(model), group, np.empty((0, group.shape[1])))
+        for group in groups
+    ]
 
     def evaluate():
-        for group, none in zip(groups, nothing, strict=True):
-            drift(group, none)
+        for drift, group, nothing in parts:
+            drift(group, nothing)
 
     return evaluate, 2 * n * (1 + n + n * (n + 1) // 2) * members
 
