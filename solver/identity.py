@@ -100,7 +100,7 @@ def digest_of(path: Path) -> str:
     """
     try:
         with path.open("rb") as file:
-            return hashlib.filedigest_of(file, "sha256").hexdigest()
+            return hashlib.file_digest(file, "sha256").hexdigest()
     except OSError as error:
         message = f"{path}: cannot be read ({error.strerror})"
         raise DataError(message) from error

@@ -61,9 +61,7 @@ class Lock:
             )
             raise RunFolderError(message) from error
         try:
-            fcntl.flock(
-                self._descriptor, fcntl.LOCK_EX | (0 if wait else fcntl.LOCK_NB)
-            )
+            _lock(self._descriptor, wait)
         except BlockingIOError as error:
             os.close(self._descriptor)
             message = (

@@ -280,7 +280,7 @@ def _step(path, times, unit, count):
         raise DataError(message)
     _check_missing(path, "the time", times)
     symbol = TIME_UNITS.get(unit.lower(), unit)
-    if symbol not in UNITS or UNITS[symbol][1] != (0, 1, 0, 0):
+    if symbol not in UNITS or UNITS[symbol][1] != UNITS["s"][1]:
         given = f"the unit {quoted(unit)}" if unit else "no unit"
         message = (
             f"{path}: times with {given}, allowed are s, min, h, d and yr; give it "

@@ -208,20 +208,25 @@ def run(order, board):
     from tiny_truth import config_of
 
     from eddyshed.solver import files
+    from eddyshed.solver.segments import reached_step
     from eddyshed.solver.truth import run_member
 
     slow = Slow(board, order["aim"], order["pause"], as_nobody=order["as_nobody"])
     slow.enter("starting")
     slow.wrap(files)
 
+    folder = Path(order["folder"])
+
     def acknowledge(step):
+        if step > reached_step(folder, 0):
+            return  # on its way only: nothing is promised yet
         slow.acknowledge(step)
         if order["room"] is not None and step >= order["room"][0]:
             # Python ignores the signal that goes with it: writing fails.
             resource.setrlimit(resource.RLIMIT_FSIZE, (order["room"][1],) * 2)
 
     config = config_of(*OVERRIDES)
-    run_member(config, 0, Path(order["folder"]), progress=acknowledge)
+    run_member(config, 0, folder, progress=acknowledge)
     slow.enter("finished")
 
 

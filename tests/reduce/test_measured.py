@@ -14,6 +14,7 @@ from eddyshed.reduce.study import Study, fingerprint_of
 from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import parse_config, read_config
+from eddyshed.solver.errors import DataError
 from eddyshed.solver.record import open_record
 
 
@@ -97,7 +98,7 @@ variance = 0.7
 [noise]
 window = "100 d"
 [closures]
-use = ["residual"]
+use = ["coloured"]
 [benchmark]
 members = 4
 """
@@ -163,4 +164,5 @@ def test_vectors_that_changed_are_read_again(tmp_path):
         assert stamps.setdefault(content, stamp) == stamp
     assert len(set(stamps.values())) == 2
     vectors.unlink()
-    assert fingerprint_of(study, STAGES, "reduce") not in stamps.values()
+    with pytest.raises(DataError, match=r"vectors\.h5: cannot be read"):
+        fingerprint_of(study, STAGES, "reduce")
