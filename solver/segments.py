@@ -229,7 +229,13 @@ class MemberFiles:
         self.write_index()
 
     def write_index(self) -> None:
-        """Present all segments as one series of virtual datasets."""
+        """Present all segments as one series of virtual datasets.
+
+        Raises
+        ------
+        RunFolderError
+            If a segment is missing: the series would skip a part of the run.
+        """
         for path in _segments(self.folder):
             if path not in self._times:
                 with open_file(path, kind="truth segment") as file:
@@ -237,6 +243,7 @@ class MemberFiles:
         parts = sorted(self._times.items())
         if not any(len(times["time"]) for _, times in parts):
             return  # still in the spin-up: nothing to show
+        self._check_complete(parts)
         step = _step_of(parts[-1][0])
         with new_file(
             self.index,
@@ -253,6 +260,22 @@ class MemberFiles:
             add_labels(file, self._output, self._ocean)
             for stream in self._streams:
                 _add_series(file, stream, self.folder.name, parts)
+
+    def _check_complete(self, parts):
+        """Refuse segments whose records do not follow each other evenly."""
+        for stream in self._streams:
+            times = np.concatenate([known[stream.time] for _, known in parts])
+            gaps = np.diff(times)
+            # Half an interval is far beyond round-off, and far below a record.
+            if len(gaps) and gaps.max() > 1.5 * gaps.min():
+                at = int(gaps.argmax())
+                message = (
+                    f"{self.folder}: no segment holds the records between "
+                    f"{times[at]:.6g} s and {times[at + 1]:.6g} s of model time; bring "
+                    "the missing file back, or remove the later segments and run the "
+                    "same command again"
+                )
+                raise RunFolderError(message)
 
 
 def _segments(folder):

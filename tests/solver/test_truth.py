@@ -186,6 +186,11 @@ def test_a_missing_segment_is_named(whole, tmp_path):
     part.unlink()
     with pytest.raises(DataError, match=part.name):
         open_record(member_paths(tmp_path, 0)[0])
+    # Running on would not fill the gap, so it must not hide it either.
+    kept = member_paths(tmp_path, 0)[0].read_bytes()
+    with pytest.raises(RunFolderError, match="no segment holds the records between"):
+        run_member(config_of(), 0, tmp_path)
+    assert member_paths(tmp_path, 0)[0].read_bytes() == kept
 
 
 def test_foreign_files_are_refused(tmp_path):
