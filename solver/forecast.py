@@ -22,10 +22,11 @@ from .segments import reached_step
 from .settings import TruthConfig
 from .truth import Plan, initial_state, plan_of, random_forcing_of
 
-# A segment's axes and its tables of contents, as found on files of 120 to 7000
-# coordinates, to a tenth; and so for the index of a member.
-SEGMENT_BYTES = 24_000
-SEGMENT_BYTES_PER_COORDINATE = 72
+# What a file holds beside its records, and so much for each coordinate: a segment's
+# axes, tables of contents and checkpoint, and what the index of a member says. As
+# found on runs of 120 to 4000 coordinates, to a tenth.
+SEGMENT_BYTES, SEGMENT_BYTES_PER_COORDINATE = 21_500, 16.4
+INDEX_BYTES, INDEX_BYTES_PER_COORDINATE = 38_500, 70
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -147,8 +148,9 @@ def bytes_of_member(plan: Plan, size: int, first_step: int) -> int:
         _bytes(stream) * (steps // stream.every + 1) for stream in plan.streams
     )
     segments = math.ceil((plan.total - first_step) / plan.segment)
-    per_segment = SEGMENT_BYTES + (SEGMENT_BYTES_PER_COORDINATE + 8) * size
-    return records + (segments + 1) * per_segment
+    per_segment = SEGMENT_BYTES + SEGMENT_BYTES_PER_COORDINATE * size
+    index = INDEX_BYTES + INDEX_BYTES_PER_COORDINATE * size
+    return records + round(segments * per_segment + index)
 
 
 def bytes_to_come(config: TruthConfig, folder: Path, members: Iterable[int]) -> int:

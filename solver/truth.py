@@ -156,21 +156,32 @@ def run_member(
     Blowup
         If the run blows up. The segments written so far remain.
     """
+    # What the config alone can do wrong is found before the folder is touched.
+    parts = _made(config, member)
     with holding(member_lock(folder, member)) as lock:
         try:
-            return _run(config, member, folder, lock, stop, progress)
+            return _run(config, member, folder, lock, stop, progress, parts)
         except EddyshedError as error:
             lock.note(failed=str(error))
             raise
 
 
-def _run(config, member, folder, lock, stop, progress):
-    """Carry out `run_member`, its lock in hand."""
+def _made(config, member):
+    """Ocean, random forcing, plan, stepper and starting state of a member."""
     ocean = build_ocean(config)
     random = random_forcing_of(config, ocean, member)
-    plan = plan_of(config, ocean, random)
-    stepper = stepper_of(config.time.scheme, ocean, config.time.step)
-    z = initial_state(config, ocean, member)
+    return (
+        ocean,
+        random,
+        plan_of(config, ocean, random),
+        stepper_of(config.time.scheme, ocean, config.time.step),
+        initial_state(config, ocean, member),
+    )
+
+
+def _run(config, member, folder, lock, stop, progress, parts):
+    """Carry out `run_member`, its lock in hand."""
+    ocean, random, plan, stepper, z = parts
     files = MemberFiles(
         folder,
         member,

@@ -38,6 +38,7 @@ class HookedModel:
 
     waves = None  # none: the coordinates are no waves
     field_units: dict[str, str] = {}  # noqa: RUF012 (never changed)
+    linear_fields: dict[str, Any] = {}  # noqa: RUF012 (the same)
 
     def __init__(self, hook: Hook):
         model = hook()

@@ -322,9 +322,9 @@ class TestFlow:
         table = found[found.index("Budgets of energy and enstrophy") :]
         for name in [*terms, "gusts"]:
             assert f"{name.replace('_', ' ')}: " in table
-        # Beside them the gusts, both quantities, their changes and the residuals.
+        # Of both quantities the gusts, the head, the change and the residual beside.
         table = html[html.index("Budgets of") :].partition("</table>")[0]
-        assert table.count('scope="row"') == len(terms) + 7
+        assert table.count('scope="row"') == len(terms) + 8
         # Everything else that is recorded or measured, with its unit.
         rest = {**evidence.flow.measure, **evidence.flow.gyre}
         others = html.count('scope="row"') - table.count('scope="row"')
