@@ -109,8 +109,11 @@ NO_PICTURE = (
 
 
 def text(value: object) -> str:
-    """Text as HTML: whatever it holds, it is shown and not interpreted."""
-    return html.escape(str(value), quote=True)
+    """Text as HTML: whatever it holds, it is shown and not interpreted.
+
+    Sentences that also go to a terminal have ``+-`` for the sign that it may lack.
+    """
+    return html.escape(str(value), quote=True).replace(" +- ", " ± ")
 
 
 def unbroken(value: object) -> str:

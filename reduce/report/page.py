@@ -156,7 +156,7 @@ def verdict(note: Note, evidence: Evidence) -> str:
                     f"<strong>{text(found['word'])}</strong>",
                     f"{found['within_sampling']} of {count}" if count else "–",
                     f"{found['within_tolerance']} of {count}" if count else "–",
-                    f"{evidence.truth_cost / entry['cost']:.2g} ×",
+                    f"{_times(evidence.truth_cost / entry['cost'])} ×",
                 ],
                 f"<p>{text(_sentence(entry['what']))}</p>"
                 f"<p>{text(_sentence(found['reason']))}</p>",
@@ -313,6 +313,11 @@ def _overrides(evidence: Evidence) -> str:
         "<p>Keys that the command line overrode with <code>--set</code>, in SI "
         f"units:</p>\n<ul>{items}</ul>"
     )
+
+
+def _times(ratio):
+    """Two figures, however large: 160 and not 1.6e+02."""
+    return f"{float(f'{ratio:.2g}'):g}"
 
 
 def _sentence(words: str) -> str:
