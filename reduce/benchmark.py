@@ -5,7 +5,8 @@ from __future__ import annotations
 import logging
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -15,11 +16,12 @@ from eddyshed.solver.randomness import stream
 
 from .closures import about
 from .measured import measured_statistics
+from .member_blocks import block_width, in_blocks
 from .reduced import ReducedModel
 from .scores import SAMPLING, Summary, Verdict, judge, score, summarise
 from .settings import BenchmarkSettings, StudyConfig
 from .simulated import Simulated
-from .simulation import simulate, step_rule
+from .simulation import make_scheme, simulate, step_rule
 from .split import Split
 from .statistics.correlation import correlation_function
 from .statistics.estimate import Estimate
@@ -106,6 +108,8 @@ def run_closure(
     model: ReducedModel,
     truth: TruthSide,
     progress: Callable[[int, int], None],
+    folder: Path | None = None,
+    stamp: str = "",
 ) -> Simulated:
     """Run a reduced model from states of the truth.
 
@@ -119,6 +123,8 @@ def run_closure(
         Gives the starts, the sampling interval and the length.
     progress : callable
         Told how many units of work are done, of how many.
+    folder, stamp
+        See :func:`eddyshed.reduce.member_blocks.in_blocks`.
 
     Returns
     -------
@@ -141,36 +147,44 @@ def run_closure(
     starts = stream(seed, 0, f"starts of {model.name}").integers(
         len(states), size=members
     )
-    before = time.process_time()
-    trajectory = simulate(
-        model,
-        states[starts],
-        step=step,
-        n_steps=n_steps,
-        every=every,
-        streams=[stream(seed, k, f"noise of {model.name}") for k in range(members)],
-        bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=2).max()),
-        start_time=split.start,
-        progress=progress,
-    )
-    seconds = time.process_time() - before
-    return Simulated(
-        series=trajectory.series[:, skip:] + split.resolved_mean,
-        start=float(trajectory.times[skip]),
-        step=interval,
-        lost=trajectory.lost,
-        cost=seconds / (n_steps * step * members),
-        noisy=_has_noise(model),
-        step_check=_half_step(config, model, truth, trajectory, skip),
-    )
+
+    def run(block):
+        before = time.process_time()
+        trajectory = simulate(
+            model,
+            states[starts[block]],
+            step=step,
+            n_steps=n_steps,
+            every=every,
+            streams=[stream(seed, k, f"noise of {model.name}") for k in block],
+            bound=LOST_BOUND * float(np.linalg.norm(split.x, axis=2).max()),
+            start_time=split.start,
+            progress=lambda done, _: progress(block[0] * n_steps + done, total),
+        )
+        seconds = time.process_time() - before
+        return Simulated(
+            series=trajectory.series[:, skip:] + split.resolved_mean,
+            start=float(trajectory.times[skip]),
+            step=interval,
+            lost=tuple((block[0] + k, when) for k, when in trajectory.lost),
+            cost=seconds / (n_steps * step * len(block)),
+            noisy=_has_noise(model),
+        )
+
+    total = members * n_steps
+    width = block_width(make_scheme(model, step), n_steps // every + 1)
+    whole = in_blocks(run, members, width, folder, stamp)
+    progress(total, total)
+    return replace(whole, step_check=_half_step(config, model, truth, whole))
 
 
-def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
+def _half_step(config, model, truth, whole) -> StepCheck | None:
     """Go on for a short while at half the step, and compare."""
     variation = getattr(model, "variation", None)
     if variation is not None and variation.is_transient:
         return None  # later is not like before
-    series, interval = whole.series[:, skip:], truth.step
+    series, interval = whole.series, truth.step
+    mean = truth.split.resolved_mean
     # Without noise a model may still be on its way to rest: later is not like before.
     if whole.lost or not _has_noise(model) or _at_rest(truth, series).any():
         return None
@@ -182,7 +196,7 @@ def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
     records = settle + int(np.ceil(series.shape[1] / SHORTER))
     half = simulate(
         model,
-        series[:, -1],
+        series[:, -1] - mean,
         step=step / 2,
         n_steps=2 * every * records,
         every=2 * every,
@@ -190,7 +204,7 @@ def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
             stream(config.seed, k, f"half step of {model.name}")
             for k in range(len(series))
         ],
-        start_time=float(whole.times[-1]),
+        start_time=whole.start + interval * (series.shape[1] - 1),
     )
     if half.lost:
         log.warning("%s: blows up at half its step, but not at the step", model.name)
@@ -198,7 +212,7 @@ def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
     try:
         return compare_steps(
             series,
-            half.series[:, settle:],
+            half.series[:, settle:] + mean,
             interval=interval,
             step=step,
             rng=stream(config.seed, 0, f"steps of {model.name}"),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -12,6 +13,7 @@ from scipy import linalg
 from eddyshed.solver.errors import DataError
 
 from .polynomial import Polynomial
+from .variation import Variation
 
 ABSENT: Any = None  # a field that is left out; it is an array once constructed
 
@@ -44,6 +46,12 @@ class DiffusionModel:
         Ito drift, of degree three at most [state unit s-1].
     noise : ndarray, shape (1 + nx, nx, 1 + nx, nx)
         [state unit squared s-1, less one state unit for each p, q > 0]
+    variation : Variation or None
+        How the drift varies in time, about the one above; None if it does not. Its
+        resolved part is added; there is no unresolved one.
+    modulation : ndarray, shape (pattern, nx, nx)
+        Matrices that act on x beside the patterns of `variation`, times the same
+        functions of time [s-1].
     labels : tuple of str
         Names of the resolved modes; ``x1``, ``x2``, ... if left out.
     notes : tuple of str
@@ -61,6 +69,8 @@ class DiffusionModel:
     name: str
     drift: Polynomial
     noise: np.ndarray = ABSENT
+    variation: Variation | None = None
+    modulation: np.ndarray = ABSENT
     labels: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
     facts: dict[str, float] = field(default_factory=dict)
@@ -80,11 +90,31 @@ class DiffusionModel:
         if np.any(np.abs(noise - turned) > allowed):
             self._refuse("noise is not symmetric in its two pairs of axes")
         object.__setattr__(self, "noise", (noise + turned) / 2)
+        self._check_variation()
         labels = tuple(self.labels) or tuple(f"x{i + 1}" for i in range(nx))
         if len(labels) != nx:
             self._refuse(f"{len(labels)} labels for {nx} coordinates")
         object.__setattr__(self, "labels", labels)
         noise_factor(self)
+
+    def _check_variation(self):
+        nx, count = self.nx, 0
+        if self.variation is not None:
+            count = len(self.variation.means)
+            sizes = self.variation.resolved.shape[1], self.variation.unresolved.shape[1]
+            if sizes != (nx, 0):
+                self._refuse(
+                    f"variation for {sizes[0]} and {sizes[1]} coordinates, must be for "
+                    f"{nx} (x) and 0 (y)"
+                )
+        shape = (count, nx, nx)
+        given = self.modulation
+        modulation = np.zeros(shape) if given is None else np.array(given, float)
+        if modulation.shape != shape:
+            self._refuse(f"modulation of shape {modulation.shape}, must be {shape}")
+        if not np.all(np.isfinite(modulation)):
+            self._refuse("modulation has values that are not finite")
+        object.__setattr__(self, "modulation", modulation)
 
     def _refuse(self, problem):
         message = f'reduced model "{self.name}": {problem}; check what the closure made'
@@ -104,6 +134,24 @@ class DiffusionModel:
     def is_additive(self) -> bool:
         """Whether the noise does not depend on the state."""
         return not np.any(self.noise[1:]) and not np.any(self.noise[:, :, 1:])
+
+    def driver(self) -> Callable[[float], tuple[np.ndarray, np.ndarray]] | None:
+        """Make a fast function of time [s]: what to add to the drift.
+
+        It returns a constant (nx,) [state unit s-1] and a matrix (nx, nx) that acts
+        on x [s-1]. None if nothing varies.
+        """
+        if self.variation is None:
+            return None
+        factors = self.variation.factors_at()
+        resolved, nx = self.variation.resolved, self.nx
+        modulation = self.modulation.reshape(len(resolved), nx * nx)
+
+        def added(t):
+            weights = factors(t)
+            return weights @ resolved, (weights @ modulation).reshape(nx, nx)
+
+        return added
 
     @property
     def stratonovich_part(self) -> Polynomial:

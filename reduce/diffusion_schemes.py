@@ -9,6 +9,7 @@ import numpy as np
 from .diffusion import DiffusionModel, noise_factor, phi
 from .polynomial import Polynomial, compiled
 from .reduced import as_operator, column_product
+from .splitting import INSET
 
 DRIFT_ACCURACY = 0.1  # of the fastest time of the drift, in a step: order two
 NOISE_ACCURACY = 0.01  # of the fastest time of multiplicative noise: order one
@@ -17,8 +18,11 @@ NOISE_ACCURACY = 0.01  # of the fastest time of multiplicative noise: order one
 class _WhiteNoiseScheme:
     """What schemes for white noise have in common: no state but x, and the noise."""
 
-    def __init__(self, model, factor):
+    def __init__(self, model, factor, drift, step):
         nx = model.nx
+        self._drift, self._step = compiled(drift), step
+        self._driver = model.driver()
+        self._is_modulated = np.any(model.modulation)
         self.n_observed, self.n_starting = nx, 0
         self.n_normals = factor.shape[2]
         self.n_work = math.comb(nx + 3, 3)  # products of coordinates
@@ -59,6 +63,19 @@ class _WhiteNoiseScheme:
         made = column_product(self._rows, normals.reshape(count, steps * members))
         return made.reshape(self._rows.shape[0], steps, members)
 
+    def _drifts(self, x, time, at):
+        """Drift at states x (nx, member), at a place in the step from `time`."""
+        made = self._drift(x)
+        if self._driver is not None:
+            # As in the truth, the ends lie just inside the step, so that a forcing
+            # that jumps between two steps has one value in each.
+            inside = min(max(at, INSET), 1 - INSET)
+            constant, matrix = self._driver(time + inside * self._step)
+            made += constant[:, np.newaxis]
+            if self._is_modulated:
+                made += column_product(matrix, x)
+        return made
+
     def _kick(self, x, increment):
         """Increment of x by the noise at states x, both (nx, member)."""
         if self._is_additive:
@@ -89,10 +106,11 @@ class ItoScheme(_WhiteNoiseScheme):
 
     Notes
     -----
-    With the drift ``A x + N(x)``, the noise factor L and standard normals::
+    With the drift ``A x + N(x, t)``, where N holds all that varies in time, the
+    noise factor L and standard normals::
 
-        z  = exp(A h) x + h phi_1(A h) N(x) + L(x) normals
-        x' = z + h phi_2(A h) [N(z) - N(x)]
+        z  = exp(A h) x + h phi_1(A h) N(x, t) + L(x) normals
+        x' = z + h phi_2(A h) [N(z, t + h) - N(x, t)]
 
     For A = 0 that is Heun's method for the drift and Euler's for the noise.
     Weak order 2 with additive noise and 1 with multiplicative; strong order 1
@@ -106,19 +124,20 @@ class ItoScheme(_WhiteNoiseScheme):
     ):
         nx, drift = model.nx, model.drift
         linear = drift.linear if exact_linear else np.zeros((nx, nx))
-        super().__init__(model, noise_factor(model, linear, step))
-        self._flow = phi(linear * step, 0)
-        self._first = step * phi(linear * step, 1)
-        self._second = step * phi(linear * step, 2)
         rest = Polynomial(
             constant=drift.constant,
             linear=drift.linear - linear,
             quadratic=drift.quadratic,
             cubic=drift.cubic,
         )
+        super().__init__(model, noise_factor(model, linear, step), rest, step)
+        self._flow = phi(linear * step, 0)
+        self._first = step * phi(linear * step, 1)
+        self._second = step * phi(linear * step, 2)
         parts = (rest.linear, rest.quadratic, rest.cubic)
-        self._is_solved = not any(np.any(part) for part in parts)
-        self._rest = compiled(rest)
+        self._is_solved = self._driver is None and not any(
+            np.any(part) for part in parts
+        )
 
     def advance(self, state: np.ndarray, increment: np.ndarray, time: float) -> None:
         """Step all members, in place.
@@ -128,13 +147,15 @@ class ItoScheme(_WhiteNoiseScheme):
         state : ndarray, shape (nx, member)
         increment : ndarray
             One step of what :meth:`colour` returned.
+        time : float
+            Before the step, on the clock of the forcing [s].
         """
-        before = self._rest(state)
+        before = self._drifts(state, time, 0)
         end = column_product(self._flow, state)
         end += column_product(self._first, before)
         end += self._kick(state, increment)
         if not self._is_solved:
-            end += column_product(self._second, self._rest(end) - before)
+            end += column_product(self._second, self._drifts(end, time, 1) - before)
         state[...] = end
 
 
@@ -163,15 +184,16 @@ class StratonovichScheme(_WhiteNoiseScheme):
     """
 
     def __init__(self, model: DiffusionModel, step: float):
-        super().__init__(model, noise_factor(model, None, step))
-        self._step = step
-        self._drift = compiled(model.stratonovich_drift)
+        factor = noise_factor(model, None, step)
+        super().__init__(model, factor, model.stratonovich_drift, step)
 
     def advance(self, state: np.ndarray, increment: np.ndarray, time: float) -> None:
         """Step all members, in place; see :meth:`ItoScheme.advance`."""
-        first = self._step * self._drift(state) + self._kick(state, increment)
+        first = self._step * self._drifts(state, time, 0)
+        first += self._kick(state, increment)
         guess = state + first
-        first += self._step * self._drift(guess) + self._kick(guess, increment)
+        first += self._step * self._drifts(guess, time, 1)
+        first += self._kick(guess, increment)
         state += first / 2
 
 
@@ -190,7 +212,7 @@ def fastest_rates(model: DiffusionModel, x_scale: np.ndarray) -> tuple[float, fl
         Norm of the derivative of the drift at coordinates of that size, in
         units of that size, and the rate at which multiplicative noise changes
         the squares of x [s-1]. The first is zero for a model that the scheme
-        solves exactly.
+        solves exactly, and the angular frequency of a season at least.
     """
     drift, scale = model.drift, x_scale
     relative = scale / scale[:, np.newaxis]
@@ -198,7 +220,8 @@ def fastest_rates(model: DiffusionModel, x_scale: np.ndarray) -> tuple[float, fl
     cubic = 3 * drift.cubic * relative[:, :, np.newaxis, np.newaxis]
     noise = np.einsum("jiji->ij", model.noise[1:][:, :, 1:]) * relative**2
     by_noise = float(noise.sum(axis=1).max())
-    if not (np.any(quadratic) or np.any(cubic) or by_noise):
+    is_steady = model.variation is None
+    if is_steady and not (np.any(quadratic) or np.any(cubic) or by_noise):
         return 0.0, 0.0
 
     def norm(tensor, sizes):
@@ -210,8 +233,15 @@ def fastest_rates(model: DiffusionModel, x_scale: np.ndarray) -> tuple[float, fl
         float(np.linalg.norm(drift.linear * relative, ord=2)),
         norm(quadratic, scale),
         norm(cubic, np.outer(scale, scale)),
+        0.0 if is_steady else model.variation.fastest,
+        0.0 if is_steady else _by_modulation(model, relative),
     )
     return by_drift, by_noise
+
+
+def _by_modulation(model, relative):
+    norms = np.linalg.norm(model.modulation * relative, ord=2, axis=(1, 2))
+    return float(norms @ model.variation.largest)
 
 
 def diffusion_step_rule(

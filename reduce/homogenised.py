@@ -34,6 +34,20 @@ normal. In the sense of Stratonovich the drift is the same but for
 ``stratonovich_drift``. The feedbacks vanish in an open loop (g = K = 0); they
 are the partners of the noise, as damping is of fluctuation.
 
+If the forcing departs from its mean by F1'(t) and F2'(t), on the clock of x, both
+f and g do. The cell problem does not know of t, and what ``d Phi / dt`` adds is of
+order eps, so one term more is all there is:
+
+==================== ==========================================================
+unresolved_forcing   H Gamma^-1 F2'(t)
+==================== ==========================================================
+
+It is no feedback: it acts in an open loop as well. The mean of y under it is
+``eps Gamma^-1 F2'``, whose square in M is of order eps: in the limit the covariance
+that follows the clock does nothing by itself. Where eps is what it is, its mean
+over time is part of the covariance along the truth, which the mean of M is taken
+with, and only its departure from that mean is lost.
+
 G. A. Pavliotis & A. M. Stuart, Multiscale Methods (Springer 2008), chapters 11
 and 18; A. J. Majda, I. Timofeyev & E. Vanden-Eijnden (2001), Comm. Pure Appl.
 Math. 54:891.
@@ -42,7 +56,7 @@ Math. 54:891.
 from __future__ import annotations
 
 from collections.abc import Collection
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import linalg
@@ -53,6 +67,7 @@ from eddyshed.solver.errors import DataError
 from .diffusion import DiffusionModel
 from .polynomial import Polynomial
 from .reduced import ReducedModel
+from .variation import Variation
 
 # Terms that can be left out of the equation; the slow one is the model itself.
 DRIFT_TERMS = (
@@ -63,7 +78,8 @@ DRIFT_TERMS = (
     "quadratic_feedback",
 )
 NOISE_TERMS = ("linear_noise", "quadratic_noise")
-TERMS = DRIFT_TERMS + NOISE_TERMS
+FORCING = "unresolved_forcing"  # the one that varies in time
+TERMS = (*DRIFT_TERMS, FORCING, *NOISE_TERMS)
 
 LARGEST = 48  # resolved modes: their cubic terms then take 42 MB
 ROUND_OFF = 1e-13  # of a matrix's norm: entries that unitary transforms leave
@@ -80,10 +96,17 @@ class WhiteLimit:
     noises : dict of str to ndarray, shape (1 + nx, nx, 1 + nx, nx)
         :data:`NOISE_TERMS`, as in
         :class:`~eddyshed.reduce.diffusion.DiffusionModel`.
+    variation : Variation or None
+        How the forcing of x varies; None if no forcing does.
+    forced : tuple of Polynomial
+        What ``unresolved_forcing`` is for each of its patterns, to be multiplied
+        by the departure of its function of time: of degree one.
     """
 
     drifts: dict[str, Polynomial]
     noises: dict[str, np.ndarray]
+    variation: Variation | None = None
+    forced: tuple[Polynomial, ...] = ()
 
     def equation(
         self, name: str = "white", *, leave_out: Collection[str] = (), **fields
@@ -123,6 +146,14 @@ class WhiteLimit:
             (self.noises[term] for term in NOISE_TERMS if term not in leave_out),
             np.zeros_like(self.noises["linear_noise"]),
         )
+        if self.variation is not None:
+            fields["variation"] = self.variation
+            if FORCING not in leave_out:
+                added = np.array([each.constant for each in self.forced])
+                fields["variation"] = replace(
+                    self.variation, resolved=self.variation.resolved + added
+                )
+                fields["modulation"] = np.array([each.linear for each in self.forced])
         return DiffusionModel(name=name, drift=drift, noise=noise, **fields)
 
 
@@ -158,8 +189,11 @@ def white_limit(
     forced = np.column_stack(
         [model.y_forcing, model.y_from_x, model.y_from_xx.reshape(ny, nx * nx)]
     )
-    solved = _solved(model.rate, np.hstack([model.covariance, forced]))
-    lagged, response = solved[:, :ny], solved[:, ny:]
+    variation, patterns = model.variation, np.empty((0, ny))
+    if variation is not None:
+        patterns, variation = variation.unresolved, variation.without_unresolved()
+    solved = _solved(model.rate, np.hstack([model.covariance, forced, patterns.T]))
+    lagged, response, driven = np.split(solved, [ny, ny + forced.shape[1]], axis=1)
     by_noise = mixed.reshape(nx * nx, ny) @ np.stack(
         [(lagged + lagged.T) / 2, (lagged - lagged.T) / 2]
     )
@@ -191,6 +225,11 @@ def white_limit(
             "linear_noise": multiplicative.reshape(shape),
             "quadratic_noise": quadratic_noise,
         },
+        variation=variation,
+        forced=tuple(
+            Polynomial(constant=made[0], linear=made[1:].T)
+            for made in np.moveaxis(coupling @ driven, 2, 0)
+        ),
     )
 
 

@@ -101,7 +101,10 @@ AXES: dict[str, dict[str, tuple[str, ...]]] = {
         "rate": ("y", "y"),
         "covariance": ("y", "y"),
     },
-    "DiffusionModel": {"noise": ("power", "x", "power", "x")},
+    "DiffusionModel": {
+        "noise": ("power", "x", "power", "x"),
+        "modulation": ("pattern", "x", "x"),
+    },
     "Polynomial": {
         "constant": ("x",),
         "linear": ("x", "x"),
@@ -142,6 +145,14 @@ UNITS: dict[str, dict[str, str | tuple[int, int]]] = {
         "x_from_xx": PER_X,
         "rate": RATE_UNIT,
     },
+    "DiffusionModel": {"modulation": RATE_UNIT},
+    "Polynomial": {
+        "constant": X_RATE,
+        "linear": RATE_UNIT,
+        "quadratic": PER_X,
+        "cubic": (-2, -1),
+    },
+    "Variation": {"resolved": X_RATE, "unresolved": X_RATE},
     "Spectrum": {
         "wavenumber": "m-1",
         **dict.fromkeys(("energy", "energy_error", "part", "part_error"), "m2 s-2"),
@@ -198,7 +209,7 @@ def units_of(value: Any, name: str, unit: str) -> Callable[[str], str | None]:
         known, other = dict.fromkeys(("value", "error"), found), "1"
     else:
         known = UNITS.get(kind, {})
-        other = None if kind == "ReducedModel" else "1"
+        other = None if kind in ("ReducedModel", "DiffusionModel") else "1"
 
     def of(field):
         found = known.get(field, other)

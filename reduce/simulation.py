@@ -218,6 +218,9 @@ def simulate(
     Returns
     -------
     Trajectory
+        Whole, in memory: 8 bytes for each member, output and coordinate. Where that
+        is too much, run the members in blocks of a multiple of 16 and write each
+        block as it ends; the numbers are the same.
 
     Raises
     ------

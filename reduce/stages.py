@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+import shutil
 from dataclasses import replace
 from typing import Any
 
@@ -17,10 +18,7 @@ from eddyshed.solver.forecast import seconds_per_step
 from eddyshed.solver.hooks import Hook
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
-from eddyshed.solver.truth import (
-    initial_state,
-    random_forcing_of,
-)
+from eddyshed.solver.truth import initial_state, random_forcing_of
 
 from .audit import audit
 from .bases.fourier import kept_coordinates
@@ -36,6 +34,7 @@ from .flow.parts import write_flow
 from .homogenised import LARGEST
 from .inner_products import in_product
 from .measured import measured_names, measured_statistics
+from .member_blocks import check_series_memory
 from .noise.fit import NoiseFit
 from .noise.of_split import fit_noise
 from .operators import Operators, galerkin
@@ -107,6 +106,7 @@ def preflight(config: StudyConfig) -> None:
             "leave it out of [closures] use"
         )
         raise DataError(message)
+    check_series_memory(config, kept)
 
 
 def run_flow(study: Study, stamp: str) -> None:
@@ -273,6 +273,7 @@ def run_audit(study: Study, stamp: str) -> None:
 def run_benchmark(study: Study, stamp: str) -> None:
     """Simulate every closure and score it."""
     config, split = study.config, read_split(study)
+    check_series_memory(config, split.resolved.n_modes)
     truth = truth_side(split, config.seed)
     entries, correlations = [], {"truth": truth.correlations(truth.series)}
     for name in config.closures.use:
@@ -322,8 +323,11 @@ def _simulated(study, name, truth):
             read_model(study, name),
             truth,
             progress=lambda done, total: shown.to(done / total),
+            folder=path.with_suffix(".members"),
+            stamp=stamp,
         )
     save(path, stamp, f"{study.config.name}: {name}", run, model_of(study.config).unit)
+    shutil.rmtree(path.with_suffix(".members"))
     return run
 
 

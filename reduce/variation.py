@@ -55,8 +55,9 @@ class Variation:
     -----
     A closure passes it on to its model as it is if it steps the unresolved
     coordinates, and by :meth:`without_unresolved` if it does not know them. One
-    that has eliminated them puts what F2 does to x through its feedback: y that
-    follows F2 is ``rate^-1 F2(t)``, which acts on x as y does.
+    that has eliminated them keeps what F2 does to x: y that follows F2 is
+    ``rate^-1 F2(t)``, which acts on x as y does (see
+    :mod:`eddyshed.reduce.homogenised`).
     """
 
     functions: tuple[dict[str, Any], ...]
@@ -78,11 +79,23 @@ class Variation:
 
         return added
 
+    def factors_at(self) -> Callable[[float], np.ndarray]:
+        """Make a fast function of time [s]: the functions, less their means.
+
+        It returns an array of shape (pattern,).
+        """
+        functions, means = self.parsed, self.means
+
+        def factors(t):
+            return np.array([f.factor(t) for f in functions]) - means
+
+        return factors
+
     def factors(self, times: np.ndarray) -> np.ndarray:
         """Functions at times [s], less their means, shape (time, pattern)."""
-        functions = self.parsed
-        rows = [[f.factor(t) for f in functions] for t in times.tolist()]
-        return np.array(rows).reshape(len(times), len(self.means)) - self.means
+        factors = self.factors_at()
+        rows = [factors(t) for t in times.tolist()]
+        return np.array(rows).reshape(len(times), len(self.means))
 
     @property
     def parsed(self) -> tuple[TimeFunction, ...]:
@@ -124,6 +137,18 @@ class Variation:
         """Largest angular frequency of a season [s-1]; zero if there is none."""
         periods = [f.period for f in self.parsed if isinstance(f, Seasonal)]
         return 2 * np.pi / min(periods, default=np.inf)
+
+    @property
+    def largest(self) -> np.ndarray:
+        """Largest departure of each function from its mean, shape (pattern,)."""
+        ends = [
+            (1 - f.amplitude, 1 + f.amplitude)
+            if isinstance(f, Seasonal)
+            else (f.before, f.after)
+            for f in self.parsed
+        ]
+        departures = np.reshape(ends, (-1, 2)) - self.means[:, np.newaxis]
+        return np.abs(departures).max(axis=1)
 
     def alike(self, times: np.ndarray) -> np.ndarray:
         """Which times have the phase of all seasons that the first one has.

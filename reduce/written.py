@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import dataclasses
 from itertools import combinations_with_replacement
 
 import numpy as np
 
+from eddyshed.solver.quantities import format_quantity
+
 from .diffusion import DiffusionModel
 from .polynomial import DEGREES, packed
+from .variation import FUNCTIONS
 
 NEGLIGIBLE = 1e-3  # of the largest term of a line: smaller ones are not written
 PER_LINE = 4  # terms in a line of text
@@ -49,6 +53,12 @@ def written(model: DiffusionModel, scale: np.ndarray) -> str:
             "In the sense of Stratonovich: the same, for the noise does not change "
             "along itself."
         )
+    if model.variation is not None:
+        parts += [
+            "Besides, in either sense, as the forcing varies:",
+            "\n".join(_varying(model, scale)),
+            "\n".join(_functions(model.variation)),
+        ]
     kind = "additive" if model.is_additive else "multiplicative"
     parts += [
         f"Covariance of the noise per second ({kind}), <dM_i dM_j> = a_i,j dt:",
@@ -66,6 +76,42 @@ def _equations(drift, scale):
         terms = [row[i] for row in rows]
         lines.append(_line(f"dx{i + 1}/dt =", terms, scale, " + noise"))
     return "\n".join(lines)
+
+
+def _varying(model, scale):
+    """Lines for what each function of time adds to each coordinate."""
+    largest = model.variation.largest
+    patterns = model.variation.resolved
+    for i in range(model.nx):
+        forms = [
+            [patterns[k, i : i + 1], model.modulation[k, i]]
+            for k in range(len(largest))
+        ]
+        sizes = [
+            departure * sum(size for size, _, _ in _sized(form, scale))
+            for departure, form in zip(largest, forms, strict=True)
+        ]
+        words = [
+            _line(f"s{k + 1} (", form, scale, " )")
+            for k, form in enumerate(forms)
+            if sizes[k] > NEGLIGIBLE * max(sizes)
+        ]
+        yield f"dx{i + 1}/dt: + {' + '.join(words)}" if words else f"dx{i + 1}/dt: + 0"
+
+
+def _functions(variation):
+    """Lines that say what the functions of time are."""
+    each = zip(variation.functions, variation.parsed, variation.means, strict=True)
+    for k, (table, function, mean) in enumerate(each):
+        words = []
+        for field in dataclasses.fields(FUNCTIONS[table["kind"]]):
+            value, unit = getattr(function, field.name), field.metadata["rules"].unit
+            text = f"{value:g}" if unit is None else format_quantity(value, unit)
+            words.append(f"{field.name} {text}")
+        yield (
+            f"s{k + 1} = {table['kind']} ({', '.join(words)}), less its mean over the "
+            f"truth, {mean:.4g}"
+        )
 
 
 def _covariances(model, scale):

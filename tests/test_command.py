@@ -1,6 +1,7 @@
 """The command, as a user runs it."""
 
 import json
+import re
 import signal
 import subprocess
 import sys
@@ -411,12 +412,44 @@ def test_a_reduction_under_forcing_that_varies(time, start, word, tmp_path):
             assert bool(np.any(file[name]["variation"]["unresolved"][...])) == (
                 name == "coloured"
             )
+        # The limit takes it too, and runs by its clock.
+        assert file["white/variation/resolved"].shape == (1, 2)
+        assert "runs under the mean forcing" not in file["white"].attrs["notes"]
         # The pattern is a wave of three, which is not among the resolved.
         assert not np.any(file["operators/variation/resolved"][...])
-    with h5py.File(folder / "simulated" / "coloured.h5") as file:
-        if start is not None:
-            assert file["time"][0] == start
-            assert file["time"][-1] == start + 8000 * 86400.0
+    for name in ("coloured", "white"):
+        with h5py.File(folder / "simulated" / f"{name}.h5") as file:
+            if start is not None:
+                assert file["time"][0] == start
+                assert file["time"][-1] == start + 8000 * 86400.0
+
+
+def test_the_white_closures_know_the_season(tmp_path, capsys):
+    # The forced wave ties (1, 1) to (1, -1): both are kept, the wave itself is not.
+    overrides = (
+        'resolved={kind="fourier", up_to=1.5}',
+        "forcing.trades.waves=[0, 2]",
+        'forcing.trades.time={kind="seasonal", period="360 d", amplitude=0.5}',
+        'closures.use=["white", "white_open"]',
+        'time.duration="2000 d"',
+    )
+    sets = [part for each in overrides for part in ("--set", each)]
+    assert main(["reduce", str(TINY), "--runs", str(tmp_path), *sets]) == 0
+    folder = tmp_path / "tiny"
+    with h5py.File(folder / "closures.h5") as file:
+        for name in ("white", "white_open"):
+            notes = file[name].attrs["notes"]
+            assert "whatever the season" in notes
+            assert "runs under the mean forcing" not in notes
+            assert np.any(file[name]["modulation"][...])
+            facts = json.loads(file[name].attrs["facts"])
+            assert facts["unresolved_forcing [share of rms tendency]"] > 1e-3
+            assert facts["resolved_forcing [share of rms tendency]"] == 0
+    capsys.readouterr()
+    assert main(["show", str(folder), "--equation", "white"]) == 0
+    printed = capsys.readouterr().out
+    assert "s1 = seasonal (period 360 d, amplitude 0.5, phase 0), less" in printed
+    assert re.search(r"dx\d/dt: \+ s1 \( .*x\d", printed)
 
 
 def test_a_box_that_does_not_fit_leaves_no_folder(tmp_path, capsys):

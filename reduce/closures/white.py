@@ -5,7 +5,8 @@ damping, drift and white noise, all of it derived from the equation and the
 fitted noise, none of it fitted to x::
 
     dx = [slow + quadratic_mean + linear_feedback + stratonovich_drift
-          + levy_area_drift + quadratic_feedback] dt + white noise.
+          + levy_area_drift + quadratic_feedback + unresolved_forcing] dt
+         + white noise.
 
 The terms are those of :mod:`eddyshed.reduce.homogenised`. Each can be left
 out by the config, and how large each is along the truth is reported whether
@@ -21,7 +22,7 @@ from scipy import linalg
 
 from ..contract import conserves_energy
 from ..diffusion import DiffusionModel
-from ..homogenised import NOISE_TERMS, WhiteLimit, white_limit
+from ..homogenised import FORCING, NOISE_TERMS, WhiteLimit, white_limit
 from ..polynomial import Polynomial
 from ..reduced import ReducedModel
 from ..statistics.correlation import integral_time
@@ -76,8 +77,13 @@ def limit_of(
     the truth, which costs no fit. In the limit y follows x at once, so its
     mean, which is zero, is that of ``Gamma^-1 g(x)``: the constant of g is
     ``-y_from_xx:Cx``. With mean calibration the constant of x is then shifted
-    so that the mean of the (Ito) drift over the states of the truth vanishes,
-    as it does in a stationary record.
+    so that the mean of the (Ito) drift over the states of the truth, each at its
+    time, vanishes, as it does in a stationary record.
+
+    Where the forcing varies, what follows the clock in y is part of its covariance
+    along the truth, and nothing else brings it back here: the mean takes it in. The
+    noise was fitted to the rest. Both loops take the forcing of y, which is no
+    feedback.
     """
     x = data.split.x.reshape(-1, coupled.nx)
     limit = white_limit(
@@ -98,7 +104,7 @@ def limit_of(
     notes = list(data.noise.notes)
     if data.leave_out:
         notes.append(f"left out, as the config asks: {', '.join(data.leave_out)}")
-    mean = model.drift(x).mean(axis=0)
+    mean = (model.drift(x) + _varying(model, data, x)).mean(axis=0)
     shift = float(np.max(np.abs(mean) / typical))
     facts["mean calibration [share of rms tendency]"] = shift
     drift = model.drift
@@ -113,6 +119,16 @@ def limit_of(
     return replace(model, drift=drift, notes=tuple(notes), facts=facts), limit
 
 
+def _varying(model, data, x):
+    """What varies in time of a drift, along the truth, shape of x."""
+    if model.variation is None:
+        return np.zeros_like(x)
+    factors = model.variation.factors(data.split.times)
+    factors = np.tile(factors, (len(data.split.x), 1))
+    by_x = np.tensordot(x, model.modulation, (1, 2))  # (state, pattern, nx)
+    return factors @ model.variation.resolved + np.einsum("sk,ski->si", factors, by_x)
+
+
 def _sizes(data, limit, x, typical):
     """Size of each term along the truth, in the mode where that is most.
 
@@ -124,6 +140,14 @@ def _sizes(data, limit, x, typical):
     facts = {}
     for term, drift in limit.drifts.items():
         rms = np.sqrt(np.mean(drift(x) ** 2, axis=0))
+        facts[f"{term} {unit}"] = float(np.max(rms / typical))
+    without = limit.equation(leave_out=[FORCING])
+    resolved = _varying(without, data, x)
+    varying = {FORCING: _varying(limit.equation(), data, x) - resolved}
+    if limit.variation is not None:
+        varying["resolved_forcing"] = resolved
+    for term, values in varying.items():
+        rms = np.sqrt(np.mean(values**2, axis=0))
         facts[f"{term} {unit}"] = float(np.max(rms / typical))
     extended = np.column_stack([np.ones(len(x)), x])
     moments = extended.T @ extended / len(x)

@@ -1,7 +1,8 @@
 """White closure in open loop: the noise without the damping that belongs to it.
 
 As ``white``, but the limit of noise that does not know of the resolved modes:
-both feedbacks are gone, the noise and the drift that it induces are the same.
+both feedbacks are gone, the noise, the drift that it induces and the forcing that
+varies in time are the same.
 Its distance from ``white`` is what the feedback does.
 """
 
@@ -44,9 +45,10 @@ def close(data: ClosureData) -> DiffusionModel:
     if conserves_energy(data.model) and np.any(model.drift.linear):
         linear = model.drift.linear
         growth = linear + linear.T + np.einsum("jiki->jk", model.noise[1:][:, :, 1:])
+        clock = ", under the mean forcing," if np.any(model.modulation) else ""
         low, high = np.linalg.eigvalsh(growth)[[0, -1]]
         notes.append(
-            f"far from rest the mean of x.x changes at {low:.3g} to {high:.3g} s-1 "
-            f"times itself{', so it grows without end' if low > 0 else ''}"
+            f"far from rest{clock} the mean of x.x changes at {low:.3g} to {high:.3g} "
+            f"s-1 times itself{', so it grows without end' if low > 0 else ''}"
         )
     return replace(model, notes=tuple(notes))

@@ -1,5 +1,8 @@
 """Forcing that varies in time: exact responses, and the clock of reduced runs."""
 
+from dataclasses import replace
+
+import h5py
 import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
@@ -10,13 +13,18 @@ from eddyshed.reduce.closures import closure
 from eddyshed.reduce.closures.data import ClosureData
 from eddyshed.reduce.contract import check_model, tendency
 from eddyshed.reduce.coupling import coupling, covariance
+from eddyshed.reduce.diffusion import DiffusionModel
+from eddyshed.reduce.diffusion_schemes import ItoScheme, StratonovichScheme
+from eddyshed.reduce.homogenised import TERMS
 from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
+from eddyshed.reduce.polynomial import Polynomial
 from eddyshed.reduce.reduced import ReducedModel
 from eddyshed.reduce.simulation import simulate, step_rule
 from eddyshed.reduce.store import read_one, write_all
 from eddyshed.reduce.variation import Variation
+from eddyshed.reduce.written import written
 from eddyshed.solver.errors import ContractError, DataError
 from eddyshed.solver.randomness import stream
 from eddyshed.solver.time_functions import Ramp, Seasonal, Step
@@ -219,6 +227,86 @@ def test_the_constant_knows_of_the_forced_part_of_y():
     np.testing.assert_allclose(drift, 0, atol=1e-11)
 
 
+@pytest.mark.parametrize("name", ["white", "white_open"])
+def test_white_takes_the_forcing_of_what_is_gone(name, tmp_path):
+    rng = np.random.default_rng(4)
+    model = Driven(**vars(random_model(rng, 6)))
+    vectors = orthonormal_vectors(rng, model.weights, 6)
+    red = OrnsteinUhlenbeck(rate=np.eye(6), covariance=np.eye(6))
+    states = red.simulate(4000, 0.5, rng)[0]
+    # x follows the clock, so that what the modulation does has a mean.
+    states += np.cos(2 * np.pi / PERIOD * 0.5 * np.arange(4000))[:, np.newaxis]
+    data, _ = data_of(model, states, vectors, 2, start=11.0)
+    made, op = closure(name)(data), data.operators
+    patterns = np.array(model.patterns())
+    response = np.linalg.solve(data.noise.process.rate, (patterns @ vectors[:, 2:]).T)
+    expected = patterns @ vectors[:, :2] + (op.A12 @ response).T
+    np.testing.assert_allclose(made.variation.resolved, expected, rtol=1e-12)
+    by_x = 2 * np.einsum("ijm,mk->kij", op.B112, response)
+    np.testing.assert_allclose(made.modulation, by_x, rtol=1e-12)
+    # The drift at the states of the truth, each at its time, has no mean.
+    x, times = data.split.x[0], data.split.times
+    driver, drift = made.driver(), made.drift(x)
+    added = []
+    for state, t in zip(x, times, strict=True):
+        constant, matrix = driver(t)
+        added.append(constant + matrix @ state)
+    size = np.abs(drift).max()
+    np.testing.assert_allclose((drift + added).mean(axis=0), 0, atol=1e-12 * size)
+    assert np.abs(drift.mean(axis=0)).max() > 1e-2
+    # It can be left out by itself; its size is told in any case.
+    alone = closure(name)(replace(data, leave_out=("unresolved_forcing",)))
+    np.testing.assert_array_equal(alone.variation.resolved, op.variation.resolved)
+    assert not alone.modulation.any()
+    unit = "[share of rms tendency]"
+    typical = np.sqrt(np.mean(data.split.tendency[0] ** 2, axis=0))
+    own = op.variation.factors(times) @ op.variation.resolved
+    for term, values in (
+        ("resolved_forcing", own),
+        ("unresolved_forcing", np.array(added) - own),
+    ):
+        share = np.max(np.sqrt(np.mean(values**2, axis=0)) / typical)
+        assert made.facts[f"{term} {unit}"] == pytest.approx(share, rel=1e-9)
+        assert alone.facts[f"{term} {unit}"] == made.facts[f"{term} {unit}"]
+        assert share > 0.01
+    # A file gives it back, and people can read it.
+    path = tmp_path / "white.h5"
+    write_all(path, "stamp", "title", "closures", {"model": made})
+    again = read_one(path, "closures", "model", DiffusionModel)
+    np.testing.assert_array_equal(again.driver()(3.1)[0], made.driver()(3.1)[0])
+    np.testing.assert_array_equal(again.driver()(3.1)[1], made.driver()(3.1)[1])
+    with h5py.File(path) as file:
+        assert file["model/modulation"].attrs["units"] == "s-1"
+        assert file["model/variation/resolved"].attrs["units"] == "m s-2"
+        assert file["model/drift/cubic"].attrs["units"] == "m-2 s"
+    text = written(made, np.ones(2))
+    first, by = made.variation.resolved[0, 0], made.modulation[0, 0]
+    sign = "- " if first < 0 else ""
+    assert f"dx1/dt: + s1 ( {sign}{abs(first):.4g} " in text
+    assert f"{abs(by[0]):.4g} x1" in text
+    assert "s1 = seasonal (period 5 s, amplitude 0.8, phase 0.3), less" in text
+
+
+def test_the_mean_of_white_is_taken_with_all_of_y():
+    # What follows the clock in y comes back in coloured, and in white in its mean:
+    # before any calibration both have the same mean drift over the truth at rest.
+    rng = np.random.default_rng(14)
+    model = Driven(**vars(random_model(rng, 6)))
+    vectors = orthonormal_vectors(rng, model.weights, 6)
+    red = OrnsteinUhlenbeck(rate=np.eye(6), covariance=np.eye(6))
+    states = red.simulate(4000, 0.5, rng)[0]
+    states += np.cos(2 * np.pi / PERIOD * 0.5 * np.arange(4000))[:, np.newaxis]
+    data, _ = data_of(model, states, vectors, 2)
+    data = replace(data, mean_calibration=False)
+    coloured = closure("coloured")(data)
+    others = [term for term in TERMS if term != "quadratic_mean"]
+    white = closure("white")(replace(data, leave_out=tuple(others)))
+    both = coloured.covariance + data.forced_covariance
+    expected = coloured.x_forcing + np.einsum("imn,mn->i", coloured.x_from_yy, both)
+    # Round-off of sums of a hundred products of order ten.
+    np.testing.assert_allclose(white.drift.constant, expected, atol=1e-11)
+
+
 def test_the_cycle_is_no_noise():
     # y is red noise with a season of twice its variance on it; the fit must see
     # the noise alone, and the driven noise must have the season again.
@@ -275,6 +363,14 @@ def test_a_jump_between_two_steps_is_met_exactly():
     # Round-off of a dozen sums.
     expected = np.maximum(run.times - 1.0, 0.0)
     np.testing.assert_allclose(run.series[0, :, 0], expected, atol=1e-14)
+    drift = Polynomial(constant=np.zeros(1))
+    white = DiffusionModel(name="jump", drift=drift, variation=jump)
+    for scheme in (ItoScheme, StratonovichScheme):
+        run = simulate(
+            white, [[0.0]], step=0.25, n_steps=12, every=1, streams=silent_streams(),
+            scheme=scheme,
+        )  # fmt: skip
+        np.testing.assert_allclose(run.series[0, :, 0], expected, atol=1e-14)
 
 
 def test_steps_resolve_the_season():
@@ -287,6 +383,13 @@ def test_steps_resolve_the_season():
     )
     step, _ = step_rule(model, np.ones(1), interval=1.0)
     assert step <= 0.2 * PERIOD / (2 * np.pi)
+    drift = Polynomial(constant=np.zeros(1))
+    white = DiffusionModel(name="still", drift=drift, variation=season([1.0]))
+    step, _ = step_rule(white, np.ones(1), interval=1.0)
+    assert step <= 0.1 * PERIOD / (2 * np.pi)
+    # The departure of the season is 0.8 at most: 0.1 / (0.8 * 50).
+    white = replace(white, modulation=[[[50.0]]])
+    assert step_rule(white, np.ones(1), interval=1.0)[0] == pytest.approx(0.0025)
 
 
 def test_variations_that_do_not_fit_are_refused():
@@ -298,6 +401,14 @@ def test_variations_that_do_not_fit_are_refused():
             x_from_x=np.zeros((1, 1)),
             x_from_xx=np.zeros((1, 1, 1)),
             variation=season(np.ones(2)),
+        )
+
+    drift = Polynomial(constant=np.zeros(1))
+    with pytest.raises(DataError, match="variation for 2 and 0 coordinates, must be"):
+        DiffusionModel(name="short", drift=drift, variation=season(np.ones(2)))
+    with pytest.raises(DataError, match=r"modulation of shape \(1, 1\), must be"):
+        DiffusionModel(
+            name="m", drift=drift, variation=season([1.0]), modulation=[[1.0]]
         )
 
     class Wrong(Quadratic):
