@@ -18,17 +18,23 @@ _PUBLIC = {
     "simulate": "simulation",
     "step_rule": "simulation",
     "wasserstein": "statistics.resampling",
+    "white_limit": "homogenised",
     "window_rule": "noise.fit",
     "Basis": "bases.basis",
     "ClosureData": "closures.data",
+    "DiffusionModel": "diffusion",
     "Estimate": "statistics.estimate",
     "Model": "contract",
+    "ItoScheme": "diffusion_schemes",
     "NoiseFit": "noise.fit",
     "Operators": "operators",
     "OrnsteinUhlenbeck": "noise.ornstein_uhlenbeck",
     "ReducedModel": "reduced",
     "Split": "split",
+    "StratonovichScheme": "diffusion_schemes",
     "StudyConfig": "settings",
+    "Variation": "variation",
+    "WhiteLimit": "homogenised",
 }
 __all__ = list(_PUBLIC)
 

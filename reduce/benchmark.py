@@ -171,8 +171,8 @@ def _half_step(config, model, truth, whole, skip) -> StepCheck | None:
     if variation is not None and variation.is_transient:
         return None  # later is not like before
     series, interval = whole.series[:, skip:], truth.step
-    variance = series.var(axis=1).max(axis=0) if not whole.lost else 0.0
-    if np.any(variance < AT_REST * truth.summary.variance.value):
+    # Without noise a model may still be on its way to rest: later is not like before.
+    if whole.lost or not _has_noise(model) or _at_rest(truth, series).any():
         return None
     step, every = step_rule(
         model, np.sqrt(truth.split.resolved.variance), interval=interval
@@ -236,7 +236,7 @@ def compare(
     """
     labels = truth.split.resolved.labels
     summary, scores, measured, verdict = None, [], None, _lost(run)
-    at_rest = _at_rest(truth, run) if verdict is None else None
+    at_rest = _at_rest(truth, run.series) if verdict is None else None
     if at_rest is not None and at_rest.any() and not run.noisy:
         verdict = _resting(config, truth, run, int(np.argmax(at_rest)))
     elif at_rest is not None and at_rest.any():
@@ -294,21 +294,22 @@ def _lost(run: Simulated) -> Verdict | None:
         return None
     first = min(when for _, when in run.lost)
     return _failed(
-        f"{len(run.lost)} of {len(run.series)} members blew up, the first after "
-        f"{first / 86400:.4g} days"
+        f"{len(run.lost)} of {len(run.series)} members blew up, beyond {LOST_BOUND} "
+        "times the largest excursion of the truth, the first on day "
+        f"{first / 86400:.4g} of its clock"
     )
 
 
-def _at_rest(truth: TruthSide, run: Simulated) -> np.ndarray:
+def _at_rest(truth: TruthSide, series: np.ndarray) -> np.ndarray:
     """Modes that do not move any more, shape (mode,)."""
     # In the second half, by when a slow approach is over; of each member by itself,
     # for they may have come to rest in different places.
-    variance = _second_half(run).var(axis=1).max(axis=0)
+    variance = _second_half(series).var(axis=1).max(axis=0)
     return variance < AT_REST * truth.summary.variance.value
 
 
-def _second_half(run: Simulated) -> np.ndarray:
-    return run.series[:, run.series.shape[1] // 2 :]
+def _second_half(series: np.ndarray) -> np.ndarray:
+    return series[:, series.shape[1] // 2 :]
 
 
 def _resting(config, truth: TruthSide, run: Simulated, mode: int) -> Verdict:
@@ -316,7 +317,7 @@ def _resting(config, truth: TruthSide, run: Simulated, mode: int) -> Verdict:
 
     Members that rest in different places give the mean an error of its own.
     """
-    ends, labels = _second_half(run).mean(axis=1), truth.split.resolved.labels
+    ends, labels = _second_half(run.series).mean(axis=1), truth.split.resolved.labels
     spread = np.zeros(ends.shape[1])
     if len(ends) > 1:
         spread = ends.std(axis=0, ddof=1) / np.sqrt(len(ends))

@@ -70,12 +70,66 @@ def parser() -> argparse.ArgumentParser:
                 "several commands may run members of one study at the same time",
             )
 
+    _add_noise(commands)
+
     show = commands.add_parser(
         "show", help="say what a file or run folder of ours holds", allow_abbrev=False
     )
     show.add_argument("path", type=Path, help="a file or run folder")
     show.add_argument("--json", action="store_true", help="print JSON instead of words")
+    show.add_argument(
+        "--equation",
+        metavar="CLOSURE",
+        help="write out the reduced equation of white or white_open, from a run folder",
+    )
     return top
+
+
+def _add_noise(commands):
+    """Add the command that fits noise to a series of the user's own."""
+    noise = commands.add_parser(
+        "noise",
+        help="fit noise to a series of your own, and test what it assumes",
+        allow_abbrev=False,
+    )
+    noise.add_argument("series", type=Path, help="an HDF5, netCDF-4 or CSV file")
+    noise.add_argument(
+        "--variable",
+        action="append",
+        required=True,
+        metavar="NAME",
+        help="variable or column; may be given several times",
+    )
+    noise.add_argument("--time", metavar="NAME", help="variable or column of times")
+    noise.add_argument(
+        "--time-unit", metavar="UNIT", help="unit of the times, if the file has none"
+    )
+    noise.add_argument(
+        "--step", metavar="QUANTITY", help='time between even samples, such as "1 d"'
+    )
+    noise.add_argument(
+        "--method",
+        choices=("integral", "product", "likelihood", "regression"),
+        default="integral",
+        help="what is fitted (default: integral of the lag covariance)",
+    )
+    noise.add_argument(
+        "--structure",
+        choices=("auto", "real diagonal", "complex diagonal", "full"),
+        default="auto",
+        help="form of the rate matrix; complex diagonal: variables two by two are the "
+        "parts of waves (default: by the length of the record)",
+    )
+    noise.add_argument(
+        "--window", metavar="QUANTITY", help="longest lag (integral, product)"
+    )
+    noise.add_argument("--lag", metavar="QUANTITY", help="the lag (regression)")
+    noise.add_argument(
+        "--figure", type=Path, metavar="FILE", help="draw it: .png, .svg or .pdf"
+    )
+    noise.add_argument(
+        "--json", action="store_true", help="print JSON (in SI) instead of a table"
+    )
 
 
 def _add_common(command):
@@ -169,6 +223,8 @@ def _run(options):
             return _show(options)
         if options.command == "check":
             return _check(options)
+        if options.command == "noise":
+            return _noise(options)
         return _stage(options)
     except EddyshedError as error:
         print(f"eddyshed: {error}", file=sys.stderr)
@@ -272,12 +328,21 @@ def _check(options):
     return 0
 
 
+def _noise(options):
+    """Carry out ``noise``."""
+    from .noise.command import noise_of_file, noise_table
+
+    found = noise_of_file(options)
+    print(json.dumps(found, indent=1) if options.json else noise_table(found))
+    return 0
+
+
 def _stage(options):
     """Carry out a stage, or all of them."""
     document = _read(options)
     from .stages import STAGES, preflight
     from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
-    from .tables import stage_json, stage_table, truth_json, truth_table
+    from .tables import stage_json, stage_table, truth_table
 
     preflight(document.config)
 
@@ -301,7 +366,9 @@ def _stage(options):
                 return 128 + caught.number
             except Incomplete:
                 # What came of each is a result, and why is part of it.
-                _print(truth_json(study) if options.json else truth_table(study))
+                _print(
+                    stage_json(study, "truth") if options.json else truth_table(study)
+                )
                 raise
             _print(
                 stage_json(study, options.command)
@@ -376,8 +443,12 @@ def _signals():
 
 def _show(options):
     """Carry out ``show``."""
-    from .show import describe
+    from .show import describe, equation
 
+    if options.equation is not None:
+        text = equation(options.path, options.equation)
+        print(json.dumps({"equation": text}, indent=1) if options.json else text)
+        return 0
     found = describe(options.path)
     if options.json:
         print(json.dumps(found, indent=1))

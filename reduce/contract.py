@@ -6,6 +6,12 @@ with z in a real inner-product space of dimension n and B bilinear and
 symmetric. The reduction knows this equation and nothing about fluids. A
 model is any object with the members of :class:`Model`; it needs no base
 class. :func:`check_model` says which of its promises a model does not keep.
+
+A config names a user's own model by ``[ocean] kind = "package.module:Name"``:
+that is called with the keys of the table ``options`` and returns a model. The
+truth is then stepped by the classical Runge-Kutta method, without a grid, and
+its coordinates go by their `labels`. See :mod:`.bases.hooked` and
+:mod:`.closures` for a basis and a closure of one's own.
 """
 
 from __future__ import annotations

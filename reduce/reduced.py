@@ -16,6 +16,8 @@ from .variation import Variation
 # Below this share of non-zero entries a compressed sparse matrix times a
 # block of columns beats a dense product (measured for 10^2 to 10^3 rows).
 SPARSE = 0.1
+SMALL = 1024  # entries of a matrix below which calling a sparse product costs more
+FEW_COLUMNS = 64  # up to these one gather of all pairs beats a loop over rows
 # Columns in one dense product. BLAS adds in an order that depends on the
 # shape of the product (and, with threads, does so for most shapes); a fixed
 # shape makes a member's path the same bits in any company, at 1.5 times the
@@ -179,9 +181,9 @@ def column_product(
     -------
     ndarray, shape (k, m)
     """
-    if sparse.issparse(matrix):
-        return matrix @ columns  # adds row by row, each column for itself
     n, count = columns.shape
+    if not isinstance(matrix, np.ndarray) or count == COLUMNS:
+        return matrix @ columns  # a sparse one adds row by row, each column for itself
     blocks = -(-count // COLUMNS)
     if blocks * COLUMNS > count:
         columns = np.pad(columns, ((0, 0), (0, blocks * COLUMNS - count)))
@@ -196,7 +198,7 @@ def column_product(
 
 def as_operator(matrix: np.ndarray) -> np.ndarray | sparse.csr_array:
     """Compressed sparse form of a matrix that is mostly zeros, else itself."""
-    if np.count_nonzero(matrix) < SPARSE * matrix.size:
+    if matrix.size >= SMALL and np.count_nonzero(matrix) < SPARSE * matrix.size:
         return sparse.csr_array(matrix)
     return np.ascontiguousarray(matrix)
 
@@ -261,18 +263,11 @@ def compiled_drift(
         }
         coupled = as_operator(np.vstack(rows))
 
+    monomials = _monomials(nx, upper if has_squares else None)
+
     def drift(x, y):
         count = x.shape[1]
-        products = np.empty((alone.shape[1], count))
-        products[0] = 1.0
-        products[1 : 1 + nx] = x
-        if has_squares:
-            first = 1 + nx
-            for i in range(nx):
-                last = first + nx - i
-                np.multiply(x[i], x[i:], out=products[first:last])
-                first = last
-        made = column_product(alone, products)
+        made = column_product(alone, monomials(x))
         dx, dy = made[:nx], made[nx:]
         if coupled is not None:
             acted = column_product(coupled, y)
@@ -292,6 +287,29 @@ def compiled_drift(
         return dx, dy
 
     return drift
+
+
+def _monomials(nx, upper):
+    """Make a function for the rows 1, x_i and, with `upper`, x_i x_j, i <= j."""
+    rows = np.empty((1 + nx + (0 if upper is None else len(upper[0])), 0))
+
+    def stacked(x):
+        nonlocal rows  # a work array; what is in it does not outlive the drift
+        if rows.shape[1] != x.shape[1]:
+            rows = np.empty((len(rows), x.shape[1]))
+            rows[0] = 1.0
+        rows[1 : 1 + nx] = x
+        if upper is not None and x.shape[1] <= FEW_COLUMNS:
+            np.multiply(x[upper[0]], x[upper[1]], out=rows[1 + nx :])
+        elif upper is not None:
+            first = 1 + nx
+            for i in range(nx):
+                last = first + nx - i
+                np.multiply(x[i], x[i:], out=rows[first:last])
+                first = last
+        return rows
+
+    return stacked
 
 
 def _packed(quadratic, upper):

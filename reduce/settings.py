@@ -10,7 +10,8 @@ from eddyshed.solver.hooks import Hook, is_hook, options_problem
 from eddyshed.solver.inner_products import INNER_PRODUCTS
 from eddyshed.solver.settings import TruthConfig
 
-from .closures import CLOSURES
+from .closures import CLOSURES, DIAGNOSTICS
+from .homogenised import TERMS
 
 
 def inner_product_setting() -> str:
@@ -132,13 +133,23 @@ class UnresolvedSettings:
 class NoiseFitSettings:
     """How the Ornstein-Uhlenbeck noise is fitted."""
 
-    match: str = setting(
+    method: str = setting(
         default="auto",
-        choices=("auto", "integral", "product"),
+        choices=("auto", "integral", "product", "likelihood", "regression"),
         doc="what the noise shares with the unresolved modes beside their variance. "
         "integral: that of the lag covariance, which linear coupling feels; product: "
-        "that of the squared correlation, which quadratic coupling feels; auto: by "
-        "which coupling is larger along the truth",
+        "that of the squared correlation, which quadratic coupling feels; likelihood: "
+        "all of it, if samples are those of such a process (those of smooth flows are "
+        "refused); regression: the covariance at one lag; auto: integral or product, "
+        "by which coupling is larger along the truth",
+    )
+    structure: str = setting(
+        default="auto",
+        choices=("auto", "real diagonal", "complex diagonal", "blocks", "full"),
+        doc="which modes the noise of a mode may act on. real diagonal: none; complex "
+        "diagonal: the other part of its wave; blocks: those of the same wavenumber "
+        "in x; full: all; auto: complex diagonal for waves, else full if the truth "
+        "holds 50 effective samples for each mode, else real diagonal",
     )
     window: float | None = setting(
         default=None,
@@ -147,6 +158,37 @@ class NoiseFitSettings:
         doc="length over which lag covariances are integrated; absent: eight times "
         "the variance-weighted correlation time of the unresolved modes",
     )
+    lag: float | None = setting(
+        default=None, unit="s", above=0, doc="lag of the regression"
+    )
+
+    def problems(self):
+        """Rules that go across keys."""
+        if (self.method == "regression") != (self.lag is not None):
+            yield (
+                'method = "regression" needs lag, such as lag = "1 d"'
+                if self.lag is None
+                else 'lag has no meaning without method = "regression"; leave it out'
+            )
+        if self.window is not None and self.method in ("likelihood", "regression"):
+            yield f'window has no meaning with method = "{self.method}"; leave it out'
+        if self.method == "product" and self.structure in ("blocks", "full"):
+            yield (
+                f'method = "product" has no structure = "{self.structure}"; use '
+                '"integral", or a diagonal'
+            )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class WhiteSettings:
+    """What goes into the white closure."""
+
+    leave_out: tuple[str, ...] = setting(
+        default=(),
+        choices=TERMS,
+        doc="terms of the limit equation that are left out, to see what each does; "
+        "with mean calibration the constant makes up for the mean of what is missing",
+    )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -154,7 +196,7 @@ class ClosuresSettings:
     """Which closures are made."""
 
     use: tuple[str, ...] = setting(
-        default=tuple(CLOSURES),
+        default=tuple(name for name in CLOSURES if name not in DIAGNOSTICS),
         choices=tuple(CLOSURES),
         hooks=True,
         doc="closures to make",
@@ -166,8 +208,11 @@ class ClosuresSettings:
     )
     mean_calibration: bool = setting(
         default=True,
-        doc="shift the constant forcing of the coloured closure so that its mean "
-        "tendency vanishes over the truth",
+        doc="shift the constant forcing of the coloured and white closures so that "
+        "their mean tendency vanishes over the truth",
+    )
+    white: WhiteSettings = setting(
+        default=WhiteSettings, doc="what goes into the white closure"
     )
 
     def problems(self):

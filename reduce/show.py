@@ -7,6 +7,8 @@ from collections import Counter
 from contextlib import suppress
 from pathlib import Path
 
+import numpy as np
+
 from eddyshed.solver.config import parse_config
 from eddyshed.solver.errors import ConfigError, DataError
 from eddyshed.solver.files import open_file
@@ -14,8 +16,51 @@ from eddyshed.solver.locks import is_held, member_lock, noted
 from eddyshed.solver.quantities import format_quantity
 from eddyshed.solver.segments import member_paths, reached_step
 
+from .diffusion import DiffusionModel
 from .settings import StudyConfig
-from .store import read_json
+from .split import Split
+from .store import read_json, read_one
+from .written import written
+
+
+def equation(path: Path, name: str) -> str:
+    """Write out the reduced equation of a closure without memory.
+
+    Parameters
+    ----------
+    path : Path
+        A run folder.
+    name : str
+        The closure.
+
+    Returns
+    -------
+    str
+
+    Raises
+    ------
+    DataError
+        If it is no run folder, or has no such equation.
+    """
+    closures = path / "closures.h5"
+    if not closures.is_file():
+        message = (
+            f"{path}: holds no closures.h5; give a run folder in which eddyshed reduce "
+            "has been run"
+        )
+        raise DataError(message)
+    with open_file(closures, kind="closures") as file:
+        kind = DiffusionModel.__name__
+        known = [part for part in file if file[part].attrs.get("holds") == kind]
+    if name not in known:
+        message = (
+            f"{closures}: has no equation without unresolved modes named {name!r}; it "
+            f"has {', '.join(known) or 'none: put white among [closures] use'}"
+        )
+        raise DataError(message)
+    split = read_one(path / "split.h5", "split", "split", Split)
+    model = read_one(closures, "closures", name, DiffusionModel)
+    return written(model, np.sqrt(split.resolved.variance))
 
 
 def describe(path: Path) -> dict[str, str]:
@@ -111,11 +156,12 @@ def _folder(path):
         raise DataError(message)
     facts = {"run folder": path.name}
     truth = path / "truth"
-    there = {
-        int(found.stem.removeprefix(".").removeprefix("member-"))
+    names = (
+        found.stem.removeprefix(".").removeprefix("member-")
         for pattern in ("member-*.h5", ".member-*.lock")
         for found in truth.glob(pattern)
-    }
+    )
+    there = {int(name) for name in names if name.isdecimal()}
     asked = range(_members_asked(path / "config.toml"))
     states = {m: _member(truth, m) for m in sorted(there.union(asked))}
     if len(states) > 1:

@@ -53,7 +53,9 @@ class Simulated:
     step_check: StepCheck | None = None
 
 
-def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
+def save(
+    path: Path, stamp: str, title: str, run: Simulated, unit: str = "m s-1"
+) -> None:
     """Write the series of a reduced model.
 
     Parameters
@@ -66,6 +68,8 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
         CF title.
     run : Simulated
         What to write.
+    unit : str
+        Of resolved coordinates.
     """
     members, n_time, n_modes = run.series.shape
     attributes = {
@@ -85,6 +89,7 @@ def save(path: Path, stamp: str, title: str, run: Simulated) -> None:
             "x",
             ("member", "time", "mode"),
             run.series,
+            units=unit,
             long_name="resolved coordinates",
         )
 

@@ -11,12 +11,14 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import singledispatch
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 
 from eddyshed.solver.errors import DataError
 
+from .diffusion import DiffusionModel
+from .diffusion_schemes import ItoScheme, diffusion_step_rule
 from .reduced import COLUMNS, ReducedModel
 from .splitting import StrangScheme
 
@@ -56,10 +58,10 @@ class Scheme(Protocol):
         """State before the first step, from (n_starting, member) normals."""
 
     def colour(self, normals: np.ndarray) -> np.ndarray:
-        """Increments from normals, both (n_normals, steps, member)."""
+        """Increments (row, steps, member) from normals (n_normals, steps, member)."""
 
     def advance(self, state: np.ndarray, increment: np.ndarray, time: float) -> None:
-        """Step all members in place from `time` [s]: increment (n_normals, member)."""
+        """Step all members in place from `time` [s], by an increment (row, member)."""
 
 
 @singledispatch
@@ -89,6 +91,11 @@ def _(model: ReducedModel, step: float) -> Scheme:
     return StrangScheme(model, step)
 
 
+@make_scheme.register
+def _(model: DiffusionModel, step: float) -> Scheme:
+    return ItoScheme(model, step)
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Trajectory:
     """Paths of the resolved coordinates.
@@ -110,6 +117,7 @@ class Trajectory:
     lost: tuple[tuple[int, float], ...]
 
 
+@singledispatch
 def step_rule(
     model: ReducedModel, x_scale: np.ndarray, *, interval: float
 ) -> tuple[float, int]:
@@ -160,6 +168,9 @@ def step_rule(
     return interval / every, every
 
 
+step_rule.register(DiffusionModel, diffusion_step_rule)
+
+
 def simulate(
     model: ReducedModel,
     start: np.ndarray,
@@ -172,6 +183,7 @@ def simulate(
     bound: float | None = None,
     start_time: float = 0.0,
     progress: Callable[[int, int], None] | None = None,
+    scheme: Callable[[Any, float], Scheme] = make_scheme,
 ) -> Trajectory:
     """Simulate members of a reduced model.
 
@@ -199,6 +211,9 @@ def simulate(
         Time of the start, on the clock of the forcing [s].
     progress : callable, optional
         Called as ``progress(done, total)`` with numbers of member-steps.
+    scheme : callable
+        ``scheme(model, step)`` makes the time-stepping scheme; by default the
+        one that suits the kind of model.
 
     Returns
     -------
@@ -212,12 +227,12 @@ def simulate(
     """
     start = _checked(model, start, start_y, streams, bound)
     _check_steps(step, n_steps, every)
-    scheme = make_scheme(model, step)
+    stepper = scheme(model, step)
     members, nx = start.shape
     count = n_steps // every + 1
     series = np.full((members, count, nx), np.nan)
     series[:, 0] = start
-    width = group_width(scheme)
+    width = group_width(stepper)
     lost = []
     for first in range(0, members, width):
         group = slice(first, first + width)
@@ -225,7 +240,7 @@ def simulate(
         own_y = None if start_y is None else np.asarray(start_y, dtype=float)[group]
         largest = HUGE if bound is None else bound
         for done, x, alive, gone in _steps(
-            scheme,
+            stepper,
             start[group],
             own_y,
             own_streams,

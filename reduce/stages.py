@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
 from eddyshed.solver.errors import ContractError, DataError
@@ -29,18 +30,20 @@ from .closures import closure
 from .closures.data import ClosureData
 from .contract import check_model
 from .coupling import coupling, coupling_sizes, covariance
+from .diffusion import DiffusionModel
 from .flow.measure import measure_flow
 from .flow.parts import write_flow
+from .homogenised import LARGEST
 from .inner_products import in_product
 from .measured import measured_names, measured_statistics
-from .noise.fit import NoiseFit, fit_ornstein_uhlenbeck, window_rule
+from .noise.fit import NoiseFit
+from .noise.of_split import fit_noise
 from .operators import Operators, galerkin
 from .reduced import ReducedModel
 from .settings import EofSettings, FourierSettings, StudyConfig
 from .simulated import load, save
 from .split import Split, prescribed_basis, split_truth, unresolved_series
 from .stationarity import stationarity, stationarity_notes
-from .statistics.correlation import integral_time
 from .store import plain, read_one, write_all, write_json
 from .study import Stage, Study, fingerprint_of
 from .truth_stage import run_truth
@@ -71,7 +74,7 @@ def preflight(config: StudyConfig) -> None:
     Raises
     ------
     DataError
-        If a pattern, a band or the basis does not fit the grid, or the inner
+        If a pattern, a band, a box or the basis does not fit the grid, or the inner
         product the ocean.
     ContractError
         If a user's own model or basis breaks its contract.
@@ -81,15 +84,27 @@ def preflight(config: StudyConfig) -> None:
         check_model(ocean.model)
     initial_state(config, ocean, config.ensemble.members - 1)
     random_forcing_of(config, ocean, 0)
+    box_averages(ocean, config.output.boxes)
     stepper_of(config.time.scheme, ocean, config.time.step)
-    if isinstance(config.resolved, FourierSettings):
-        kept_coordinates(config.resolved, ocean.waves)
-    elif not isinstance(config.resolved, EofSettings):
-        prescribed_basis(config.resolved, ocean)
-    elif config.resolved.modes >= ocean.size:
+    resolved = config.resolved
+    if isinstance(resolved, FourierSettings):
+        kept = int(kept_coordinates(resolved, ocean.waves).sum())
+    elif isinstance(resolved, EofSettings):
+        kept = resolved.modes
+    else:
+        kept = prescribed_basis(resolved, ocean).n_modes
+    if kept >= ocean.size:
         message = (
-            f"[resolved] modes = {config.resolved.modes}, but the grid has "
-            f"{ocean.size} coordinates and some must be left unresolved; ask for fewer"
+            f"[resolved] modes = {kept}, but the grid has {ocean.size} coordinates and "
+            "some must be left unresolved; ask for fewer"
+        )
+        raise DataError(message)
+    white = [name for name in config.closures.use if name.startswith("white")]
+    if white and kept > LARGEST:
+        message = (
+            f"[closures] {white[0]}: {kept} resolved modes make a cubic of {kept}^4 "
+            f"coefficients, and it is made for at most {LARGEST} modes; keep fewer, or "
+            "leave it out of [closures] use"
         )
         raise DataError(message)
 
@@ -132,10 +147,6 @@ def run_reduce(study: Study, stamp: str) -> None:
             memory=config.limits.memory,
             progress=lambda done, total: shown.to(done / total),
         )
-    window = config.noise.window
-    if window is None:
-        times = integral_time(y, split.step).value
-        window = window_rule(times, split.unresolved.variance, split.step)
     linear, quadratic = coupling_sizes(operators, split.x, y)
     log.info(
         "reduce: unresolved modes reach the resolved ones by linear terms of "
@@ -144,20 +155,19 @@ def run_reduce(study: Study, stamp: str) -> None:
         quadratic,
         model.unit,
     )
-    match = config.noise.match
-    if match == "auto":
-        match = "product" if quadratic > linear else "integral"
     variation, forced = operators.variation, np.zeros((len(split.times), y.shape[2]))
     if variation is not None:
         forced = variation.cycle(y, split.times)
-    noise = fit_ornstein_uhlenbeck(
+    noise = fit_noise(
+        config.noise,
         y - forced,
         split.step,
-        window=window,
-        match=match,
-        partners=split.unresolved.partners,
-        labels=split.unresolved.labels,
+        product=quadratic > linear,
+        basis=split.unresolved,
+        waves=model.waves,
     )
+    for note in noise.notes:
+        log.info("reduce: noise: %s", note)
     data = ClosureData(
         model=model,
         split=split,
@@ -167,6 +177,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         covariance_xy=covariance(split.x, y),
         mean_calibration=config.closures.mean_calibration,
         forced_covariance=covariance(forced[np.newaxis], forced[np.newaxis]),
+        leave_out=config.closures.white.leave_out,
     )
     hooks = config.closures.hooks
     models = {name: _made(name, hooks.get(name), data) for name in config.closures.use}
@@ -176,6 +187,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         f"{config.name}: resolved and unresolved modes",
         "split",
         {"split": split},
+        model.unit,
     )
     write_all(
         study.path("closures.h5"),
@@ -183,6 +195,7 @@ def run_reduce(study: Study, stamp: str) -> None:
         f"{config.name}: operators, noise and reduced models",
         "closures",
         {"operators": operators, "noise": noise, **models},
+        model.unit,
     )
 
 
@@ -203,10 +216,10 @@ def _made(name, hook, data):
 
 def _checked(name, made, nx):
     """What a user's closure made, under the name that the config has for it."""
-    if not isinstance(made, ReducedModel):
+    if not isinstance(made, ReducedModel | DiffusionModel):
         message = (
             f'closure "{name}" returned a {type(made).__name__}, must be a '
-            "ReducedModel of eddyshed.reduce"
+            "ReducedModel or a DiffusionModel of eddyshed.reduce"
         )
         raise ContractError(message)
     if made.nx != nx:
@@ -241,9 +254,10 @@ def read_operators(study: Study) -> Operators:
     return read_one(study.path("closures.h5"), "closures", "operators", Operators)
 
 
-def read_model(study: Study, name: str) -> ReducedModel:
+def read_model(study: Study, name: str) -> ReducedModel | DiffusionModel:
     """Read a reduced model."""
-    return read_one(study.path("closures.h5"), "closures", name, ReducedModel)
+    path = study.path("closures.h5")
+    return read_one(path, "closures", name, ReducedModel, DiffusionModel)
 
 
 def run_audit(study: Study, stamp: str) -> None:
@@ -262,8 +276,9 @@ def run_benchmark(study: Study, stamp: str) -> None:
     truth = truth_side(split, config.seed)
     entries, correlations = [], {"truth": truth.correlations(truth.series)}
     for name in config.closures.use:
-        run = _simulated(study, name, truth)
+        run, model = _simulated(study, name, truth), read_model(study, name)
         entry = compare(config, name, truth, run)
+        entry |= {"notes": list(model.notes), "facts": model.facts}
         entries.append(entry)
         if entry["summary"] is not None:
             correlations[name] = truth.correlations(run.series)
@@ -308,7 +323,7 @@ def _simulated(study, name, truth):
             truth,
             progress=lambda done, total: shown.to(done / total),
         )
-    save(path, stamp, f"{study.config.name}: {name}", run)
+    save(path, stamp, f"{study.config.name}: {name}", run, model_of(study.config).unit)
     return run
 
 

@@ -61,7 +61,7 @@ class StepCheck:
             )
         return (
             f"half the step of {self.step:.4g} s changes the {words}: the step is too "
-            "long for this model, and its scores hold that error"
+            "long, or the model drifts, and its scores hold that error"
         )
 
 

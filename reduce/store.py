@@ -1,6 +1,6 @@
 """Dataclasses of arrays to and from files.
 
-Arrays become variables whose axes are named by :data:`AXES`; text and numbers
+Arrays become variables whose axes and units are those of `layout`; text and numbers
 become attributes; a dataclass inside a dataclass becomes a group. What is
 written reads back equal to the bit.
 """
@@ -27,141 +27,12 @@ from eddyshed.solver.files import (
     replacing,
 )
 
-# Axes of every array that is written: class name -> field -> names of its axes.
-AXES: dict[str, dict[str, tuple[str, ...]]] = {
-    "Basis": {
-        "vectors": ("coordinate", "mode"),
-        "partners": ("mode",),
-        "variance": ("mode",),
-    },
-    "Measured": {"matrix": ("measured", "mode")},
-    "Split": {
-        "mean": ("coordinate",),
-        "resolved_mean": ("resolved_mode",),
-        "x": ("member", "record", "resolved_mode"),
-        "tendency": ("member", "record", "resolved_mode"),
-        "fine_x": ("member", "fine_record", "resolved_mode"),
-    },
-    "Operators": {
-        "F1": ("x",),
-        "F2": ("y",),
-        "A11": ("x", "x"),
-        "A12": ("x", "y"),
-        "A21": ("y", "x"),
-        "B111": ("x", "x", "x"),
-        "B112": ("x", "x", "y"),
-        "B122": ("x", "y", "y"),
-        "B211": ("y", "x", "x"),
-        "B212": ("y", "x", "y"),
-    },
-    "Variation": {
-        "means": ("pattern",),
-        "resolved": ("pattern", "x"),
-        "unresolved": ("pattern", "y"),
-    },
-    "OrnsteinUhlenbeck": {"rate": ("mode", "mode"), "covariance": ("mode", "mode")},
-    "Estimate": {"value": ("mode",), "error": ("mode",)},
-    "Spectrum": {
-        "wavenumber": ("wavenumber",),
-        "energy": ("wavenumber",),
-        "energy_error": ("wavenumber",),
-        "part": ("component", "wavenumber"),
-        "part_error": ("component", "wavenumber"),
-    },
-    "ZonalSpectrum": {
-        "wavenumber": ("wavenumber",),
-        "energy": ("wavenumber",),
-        "energy_error": ("wavenumber",),
-    },
-    "Flux": {
-        "wavenumber": ("wavenumber",),
-        "flux": ("wavenumber",),
-        "flux_error": ("wavenumber",),
-    },
-    "Field": {
-        "x": ("x",),
-        "y": ("y",),
-        "snapshot": ("y", "x"),
-        "mean": ("y", "x"),
-        "mean_error": ("y", "x"),
-    },
-    "Profile": {
-        "y": ("y",),
-        "snapshot": ("y",),
-        "mean": ("y",),
-        "mean_error": ("y",),
-    },
-    "MeanBudget": {
-        "term": ("name",),
-        "term_error": ("name",),
-        "time": ("time",),
-        "level_block": ("member", "time"),
-        "level_least": ("member", "time"),
-        "level_greatest": ("member", "time"),
-        "rate_time": ("rate_time",),
-        "rate_block": ("member", "name", "rate_time"),
-    },
-    "Measure": {
-        "time": ("time",),
-        "block": ("member", "time"),
-        "block_least": ("member", "time"),
-        "block_greatest": ("member", "time"),
-    },
-    "NoiseFit": {"rate_error": ("mode", "mode"), "uncorrected": ("mode",)},
-    "ReducedModel": {
-        "x_forcing": ("x",),
-        "x_from_x": ("x", "x"),
-        "x_from_xx": ("x", "x", "x"),
-        "x_from_y": ("x", "y"),
-        "x_from_xy": ("x", "x", "y"),
-        "x_from_yy": ("x", "y", "y"),
-        "y_forcing": ("y",),
-        "y_from_x": ("y", "x"),
-        "y_from_xx": ("y", "x", "x"),
-        "y_from_xy": ("y", "x", "y"),
-        "rate": ("y", "y"),
-        "covariance": ("y", "y"),
-    },
-}
+from .layout import AXES, units_of
+
 NOTHING = json.dumps(None)  # an optional field that is not there
 
-# Units of arrays, where they are known: class name -> field -> unit, or the field
-# that holds the unit. An array whose one axis bears its own name is the coordinate
-# along that axis; it comes before those that need it.
-UNITS: dict[str, dict[str, str]] = {
-    "Spectrum": {
-        "wavenumber": "m-1",
-        **dict.fromkeys(("energy", "energy_error", "part", "part_error"), "m2 s-2"),
-    },
-    "ZonalSpectrum": {
-        "wavenumber": "m-1",
-        "energy": "m2 s-2",
-        "energy_error": "m2 s-2",
-    },
-    "Flux": {"wavenumber": "m-1", "flux": "units", "flux_error": "units"},
-    "Field": {
-        "x": "m",
-        "y": "m",
-        **dict.fromkeys(("snapshot", "mean", "mean_error"), "units"),
-    },
-    "Profile": {
-        "y": "m",
-        **dict.fromkeys(("snapshot", "mean", "mean_error"), "units"),
-    },
-    "MeanBudget": {
-        "time": "s",
-        "rate_time": "s",
-        **dict.fromkeys(("level_block", "level_least", "level_greatest"), "units"),
-        **dict.fromkeys(("term", "term_error", "rate_block"), "rate_units"),
-    },
-    "Measure": {
-        "time": "s",
-        **dict.fromkeys(("block", "block_least", "block_greatest"), "units"),
-    },
-}
 
-
-def pack(group: h5py.Group, value: Any) -> None:
+def pack(group: h5py.Group, value: Any, unit: str) -> None:
     """Write a dataclass into a group.
 
     Parameters
@@ -171,18 +42,18 @@ def pack(group: h5py.Group, value: Any) -> None:
     value : dataclass instance
         Its fields are arrays, text, numbers, tuples of text, dicts of numbers,
         dataclasses, or None.
+    unit : str
+        Of resolved coordinates.
     """
     axes = AXES.get(type(value).__name__, {})
-    units = UNITS.get(type(value).__name__, {})
+    units = units_of(value, group.name.rpartition("/")[2], unit)
     for field in dataclasses.fields(value):
         item = getattr(value, field.name)
         if dataclasses.is_dataclass(item):
-            pack(group.create_group(field.name, track_order=True), item)
+            pack(group.create_group(field.name, track_order=True), item, unit)
         elif isinstance(item, np.ndarray):
             stored = item.astype(np.int8) if item.dtype == bool else item
-            unit = units.get(field.name, "1")
-            unit = getattr(value, unit, unit)
-            _add(group, field.name, axes[field.name], stored, unit)
+            _add(group, field.name, axes[field.name], stored, units(field.name))
         elif isinstance(item, bool | int | float | np.floating | np.integer):
             group.attrs[field.name] = float(item) if _is_float(item) else int(item)
         elif isinstance(item, str):
@@ -255,7 +126,12 @@ def _add(group, name, axes, values, units):
 
 
 def write_all(
-    path: Path, stamp: str, title: str, kind: str, parts: Mapping[str, Any]
+    path: Path,
+    stamp: str,
+    title: str,
+    kind: str,
+    parts: Mapping[str, Any],
+    unit: str = "m s-1",
 ) -> None:
     """Write several dataclasses into one file, a group each.
 
@@ -269,16 +145,33 @@ def write_all(
         See :func:`eddyshed.solver.files.new_file`.
     parts : mapping of str to dataclass instance
         Name of the group and what goes there.
+    unit : str
+        Of resolved coordinates.
     """
     with new_file(
         path, kind=kind, title=title, attributes={"fingerprint": stamp}
     ) as file:
         for name, value in parts.items():
-            pack(file.create_group(name, track_order=True), value)
+            group = file.create_group(name, track_order=True)
+            group.attrs["holds"] = type(value).__name__
+            pack(group, value, unit)
 
 
-def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
+def read_one(path: Path, kind: str, name: str, *classes: type) -> Any:
     """Read one dataclass out of a file that `write_all` made.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    kind, name : str
+        Kind of the file, and name of the part.
+    *classes : type
+        What the part may be; the file says which it is.
+
+    Returns
+    -------
+    instance of one of classes
 
     Raises
     ------
@@ -290,6 +183,8 @@ def read_one(path: Path, kind: str, name: str, cls: type) -> Any:
             message = f"{path}: has no part {name!r}"
             raise DataError(message)
         try:
+            holds = file[name].attrs["holds"]
+            (cls,) = (known for known in classes if known.__name__ == holds)
             return unpack(file[name], cls)
         except (OSError, KeyError, RuntimeError, ValueError) as error:
             message = (

@@ -83,11 +83,9 @@ class Study:
     @property
     def asked(self) -> range:
         """The members that this process is to run."""
-        return (
-            range(self.config.ensemble.members)
-            if self.members is None
-            else (self.members)
-        )
+        if self.members is not None:
+            return self.members
+        return range(self.config.ensemble.members)
 
     def records(self) -> list[TruthRecord]:
         """Records of all members of the truth, by number."""

@@ -206,7 +206,7 @@ def _reduce(study):
         f"variance ({', '.join(split.resolved.labels)})\n"
         f"unresolved: {split.unresolved.n_modes} modes, {100 * unresolved:.3g} %\n"
         f"in no mode: {100 * left:.2g} %\n"
-        f"noise: {noise.structure}, matches the {noise.match} over a window of "
+        f"noise: {noise.structure}, method {noise.method}, by lags up to "
         f"{format_quantity(noise.window, 's')}"
     )
     notes = [*split_notes(study.config, split), *noise.notes]
@@ -271,11 +271,18 @@ def _benchmark(study):
                 f"{found['truth']['cost'] / entry['cost']:.3g} x truth",
             ]
         )
+    of_noise = read_noise(study).notes
     reasons = [f"{e['name']}: {e['verdict']['reason']}" for e in found["closures"]]
     reasons += [
         f"{e['name']}: {e['step']['sentence']}"
         for e in found["closures"]
         if e["step"] is not None
+    ]
+    reasons += [
+        f"{entry['name']}: note: {words}"
+        for entry in found["closures"]
+        for words in entry["notes"]
+        if words not in of_noise  # eddyshed reduce has printed those
     ]
     tables = [rows, measured, verdicts] if len(measured) > 1 else [rows, verdicts]
     return "\n\n".join([*map(columns, tables), "\n".join(reasons)])

@@ -17,8 +17,7 @@ import numpy as np
 from .config import setting
 from .errors import DataError
 from .quantities import format_quantity, nearest, quoted
-
-Interval = tuple[float, float]
+from .spaces.averages import Interval
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -211,7 +211,7 @@ def add_variable(
     dimensions: Sequence[str],
     values: object,
     *,
-    units: str = "1",
+    units: str | None = "1",
     long_name: str,
     **attributes: object,
 ) -> None:
@@ -227,8 +227,8 @@ def add_variable(
         One name for each axis.
     values : array_like
         Numbers, or a list of str. A `h5py.VirtualLayout` makes a virtual one.
-    units : str
-        Units as UDUNITS text.
+    units : str or None
+        Units as UDUNITS text; None if they are not known.
     long_name : str
         What it is.
     **attributes
@@ -243,4 +243,5 @@ def add_variable(
     # One axis without a scale, and no reader opens the file.
     for axis, dimension in zip(dataset.dims, dimensions, strict=True):
         axis.attach_scale(group[dimension])
-    dataset.attrs.update({"units": units, "long_name": long_name, **attributes})
+    known = {} if units is None else {"units": units}
+    dataset.attrs.update({**known, "long_name": long_name, **attributes})

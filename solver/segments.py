@@ -19,10 +19,17 @@ import h5py
 import numpy as np
 
 from .errors import RunFolderError
-from .files import add_time, add_variable, new_file, open_file, remove_partial
+from .files import (
+    add_scale,
+    add_time,
+    add_variable,
+    new_file,
+    open_file,
+    remove_partial,
+)
 from .identity import differences
 from .settings import OutputSettings
-from .streams import Recorder, Stream, add_axes
+from .streams import Recorder, Stream, add_axes, add_labels
 
 
 def member_paths(folder: Path, member: int) -> tuple[Path, Path]:
@@ -140,7 +147,9 @@ class MemberFiles:
             group = file["checkpoint"]
             z[:] = group["state"][:]
             arrays = {
-                array.attrs["name"]: array[...] for array in group["random"].values()
+                array.attrs["purpose"]: array[...]
+                for array in group["random"].values()
+                if not array.is_scale
             }
             random.restore(arrays, json.loads(group.attrs["streams"]))
             return int(group.attrs["step"])
@@ -199,13 +208,16 @@ class MemberFiles:
             add_axes(file, self._output, self._ocean)
             recorder.write(file)
             group = file.create_group("checkpoint", track_order=True)
-            group.create_dataset("state", data=z)
+            add_variable(
+                group,
+                "state",
+                ("/coordinate",),
+                z,
+                units=self._ocean.unit,
+                long_name="state at the end of this part",
+            )
             group.attrs["step"] = step
-            held = group.create_group("random", track_order=True)
-            for number, (name, values) in enumerate(random.arrays().items()):
-                # Users name forcings; a name of theirs may mean a path to HDF5.
-                array = held.create_dataset(f"array-{number:03d}", data=values)
-                array.attrs["name"] = name
+            _add_arrays(group.create_group("random", track_order=True), random.arrays())
             streams = {
                 name: generator.bit_generator.state
                 for name, generator in random.streams().items()
@@ -237,6 +249,8 @@ class MemberFiles:
             },
         ) as file:
             add_axes(file, self._output, self._ocean)
+            # Here alone: for a large grid they take as long as many states.
+            add_labels(file, self._output, self._ocean)
             for stream in self._streams:
                 _add_series(file, stream, self.folder.name, parts)
 
@@ -249,6 +263,25 @@ def _segments(folder):
 def _step_of(segment):
     """Step at the end of a segment, from its name."""
     return int(segment.stem.removeprefix("segment-"))
+
+
+def _add_arrays(group, arrays):
+    """Add the arrays that random forcing keeps, each with axes of its own."""
+    for number, (name, values) in enumerate(arrays.items()):
+        # Users name forcings; a name of theirs may mean a path to HDF5.
+        plain = f"array_{number:03d}"
+        axes = [f"{plain}_axis_{axis}" for axis in range(np.ndim(values))]
+        for axis, length in zip(axes, np.shape(values), strict=True):
+            add_scale(group, axis, np.arange(length), long_name="index")
+        add_variable(
+            group,
+            plain,
+            axes,
+            values,
+            units=None,
+            long_name=f"kept by the random forcing: {name}",
+            purpose=name,
+        )
 
 
 def _add_series(file, stream, folder, parts):

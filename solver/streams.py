@@ -112,7 +112,7 @@ def streams_of(
             },
         },
         sample=lambda t, z: {
-            "state": z.copy(),
+            "state": z,
             **ocean.budget(t, z),
             **({} if random is None else random.fed_so_far()),
         },
@@ -167,7 +167,7 @@ def _box_stream(output, ocean, step):
     for name, units, long_name in zip(
         names, averages.units, averages.long_names, strict=True
     ):
-        places = [f"{name}_{letter}" for letter in directions_of(ocean)]
+        places = [f"{letter}_of_{name}" for letter in directions_of(ocean)]
         variables[name] = Variable(
             dimensions=(),
             shape=(),
@@ -192,24 +192,16 @@ def low_coordinates(ocean: Any, up_to: float) -> np.ndarray:
     return np.flatnonzero(np.hypot(*ocean.waves.T) <= up_to + 1e-9)
 
 
-def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
-    """Add the axes behind time, and what is known of them.
+def add_labels(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
+    """Add what is known of the coordinates; their axes must exist.
 
     Parameters
     ----------
-    group : h5py.Group
-        Where to.
-    output : OutputSettings
-        Which streams there are.
-    ocean : ocean
-        Names the coordinates.
+    group, output, ocean
+        As for :func:`add_axes`.
     """
-    axes = {"coordinate": np.arange(ocean.size)}
-    if output.resolved is not None:
-        axes["resolved_coordinate"] = low_coordinates(ocean, output.resolved.up_to)
     labels = ocean.labels
-    for name, chosen in axes.items():
-        add_scale(group, name, chosen, long_name="index of the coordinate")
+    for name, chosen in _coordinates(output, ocean).items():
         prefix = name.removesuffix("coordinate")
         add_variable(
             group,
@@ -226,6 +218,30 @@ def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
                 ocean.waves[chosen, axis],
                 long_name=f"waves per box in {letter}",
             )
+
+
+def _coordinates(output, ocean):
+    """Which coordinates each axis of them holds, by its name."""
+    axes = {"coordinate": np.arange(ocean.size)}
+    if output.resolved is not None:
+        axes["resolved_coordinate"] = low_coordinates(ocean, output.resolved.up_to)
+    return axes
+
+
+def add_axes(group: h5py.Group, output: OutputSettings, ocean: Any) -> None:
+    """Add the axes behind time, and where the boxes are.
+
+    Parameters
+    ----------
+    group : h5py.Group
+        Where to.
+    output : OutputSettings
+        Which streams there are.
+    ocean : ocean
+        Names the coordinates.
+    """
+    for name, chosen in _coordinates(output, ocean).items():
+        add_scale(group, name, chosen, long_name="index of the coordinate")
     if output.fields_every is not None:
         for name, letter, points in zip(
             "xy", directions_of(ocean), ocean.space.grid_axes, strict=True
@@ -248,7 +264,8 @@ def _add_box_sides(group, output, ocean):
     averages = box_averages(ocean, output.boxes)
     for name, sides in zip(averages.names, averages.sides, strict=True):
         for letter, interval in zip(directions_of(ocean), sides, strict=True):
-            place = f"box_{name}_{letter}"
+            # No box can be named so that its variable is called the same.
+            place = f"{letter}_of_box_{name}"
             about = {"units": "m", "long_name": DISTANCES[letter]}
             middle = interval.mean()
             add_variable(group, place, (), middle, bounds=f"{place}_sides", **about)
@@ -269,12 +286,18 @@ class Recorder:
     def __init__(self, streams: list[Stream], first_step: int):
         self._streams = streams
         self._first = first_step
-        self.clear()
+        self._times = [Series((), "float64") for _ in streams]
+        self._rows = [
+            {name: Series(v.shape, v.dtype) for name, v in stream.variables.items()}
+            for stream in streams
+        ]
 
     def clear(self) -> None:
         """Forget the records, after they were written."""
-        self._times = [[] for _ in self._streams]
-        self._rows = [{name: [] for name in s.variables} for s in self._streams]
+        for times, rows in zip(self._times, self._rows, strict=True):
+            times.clear()
+            for series in rows.values():
+                series.clear()
 
     def record(self, step: int, t: float, z: np.ndarray) -> None:
         """Record whatever is due at a step."""
@@ -294,16 +317,51 @@ class Recorder:
         for stream, times, rows in zip(
             self._streams, self._times, self._rows, strict=True
         ):
-            add_time(group, stream.time, np.array(times, dtype=float))
+            add_time(group, stream.time, times.values)
             for name, variable in stream.variables.items():
-                shape = (len(times), *variable.shape)
-                values = np.array(rows[name], dtype=variable.dtype).reshape(shape)
                 add_variable(
                     group,
                     name,
                     (stream.time, *variable.dimensions),
-                    values,
+                    rows[name].values,
                     units=variable.units,
                     long_name=variable.long_name,
                     **variable.attributes,
                 )
+
+
+class Series:
+    """Values of one variable, in memory that serves again when they are forgotten.
+
+    Parameters
+    ----------
+    shape : tuple of int
+        Shape of a value.
+    dtype : str
+        Type to hold it in.
+    """
+
+    def __init__(self, shape: tuple[int, ...], dtype: str):
+        self._held = np.empty((16, *shape), dtype)
+        self._count = 0
+
+    @property
+    def values(self) -> np.ndarray:
+        """The values so far, shape (n, *shape): valid until the next is added."""
+        return self._held[: self._count]
+
+    def append(self, value: object) -> None:
+        """Add a copy of a value."""
+        if self._count == len(self._held):
+            # What is allocated and not yet touched takes no memory.
+            longer = np.empty(
+                (2 * self._count, *self._held.shape[1:]), self._held.dtype
+            )
+            longer[: self._count] = self._held
+            self._held = longer
+        self._held[self._count] = value
+        self._count += 1
+
+    def clear(self) -> None:
+        """Forget the values."""
+        self._count = 0

@@ -173,6 +173,7 @@ def test_json_for_machines(study):
         "bare",
         "residual",
         "coloured",
+        "white",
     }
     scores = found["closures"][1]["scores"]
     assert {s["quantity"] for s in scores} >= {"mean", "variance", "integral time"}
@@ -189,6 +190,20 @@ def test_show(study, capsys):
     facts = json.loads(capsys.readouterr().out)
     assert facts["grid"] == "16 x 16"
     assert "100 %, complete" in facts["reached"]
+
+
+def test_show_writes_out_a_reduced_equation(study, capsys):
+    folder, _ = study
+    assert main(["show", str(folder), "--equation", "white"]) == 0
+    out = capsys.readouterr().out
+    assert "x1 = cos 0,1, typically" in out
+    assert "dx1/dt = " in out
+    assert main(["show", str(folder), "--equation", "white", "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["equation"] == out.rstrip("\n")
+    assert main(["show", str(folder), "--equation", "coloured"]) == 2
+    assert "named 'coloured'; it has white" in capsys.readouterr().err
+    assert main(["show", str(folder / "truth"), "--equation", "white"]) == 2
+    assert "holds no closures.h5" in capsys.readouterr().err
 
 
 def test_check_runs_nothing(tmp_path, capsys, monkeypatch):
@@ -250,6 +265,13 @@ def test_what_does_not_fit_the_grid_is_refused_before_the_truth(
 ):
     assert main(["study", str(TINY), "--runs", str(tmp_path), "--set", override]) == 2
     assert words in capsys.readouterr().err
+    assert not list(tmp_path.rglob("*.h5"))
+
+
+def test_too_many_modes_for_a_cubic_are_refused_before_the_truth(tmp_path, capsys):
+    options = ["--set", "resolved.family=isotropic", "--set", "resolved.up_to=5"]
+    assert main(["study", str(TINY), "--runs", str(tmp_path), *options]) == 2
+    assert "it is made for at most 48 modes" in capsys.readouterr().err
     assert not list(tmp_path.rglob("*.h5"))
 
 
@@ -395,3 +417,13 @@ def test_a_reduction_under_forcing_that_varies(time, start, word, tmp_path):
         if start is not None:
             assert file["time"][0] == start
             assert file["time"][-1] == start + 8000 * 86400.0
+
+
+def test_a_box_that_does_not_fit_leaves_no_folder(tmp_path, capsys):
+    arguments = ["truth", str(TINY), "--runs", str(tmp_path / "runs")]
+    box = 'output.boxes.gyre={field="buoyancy", x=["1 km", "2000 km"]}'
+    assert main([*arguments, "--set", box]) == 2
+    problem = capsys.readouterr().err
+    assert "[output.boxes.gyre] field = " in problem
+    assert "reaches beyond the box, 0 to 1800 km" in problem
+    assert not (tmp_path / "runs").exists()

@@ -148,7 +148,7 @@ def test_a_failed_member_is_told_and_others_are_kept(tmp_path, capsys):
     assert "2 members: 1 done, 1 failed" in captured.out
     assert "member 1 is not complete" in captured.err
     assert main([*common, "--json"]) == 1
-    found = json.loads(capsys.readouterr().out)
+    found = json.loads(capsys.readouterr().out)["truth"]
     assert found["counts"] == {"skipped": 1, "failed": 1}
     assert found["missing"] == [1]
     facts = describe(tmp_path / "ensemble")

@@ -38,6 +38,9 @@ class ClosureData:
     forced_covariance : ndarray, shape (ny, ny), optional
         Part of `covariance_y` that follows the clock of a varying forcing. The
         noise is fitted to the rest, and what drives y brings this part back.
+    leave_out : tuple of str
+        Terms of the white closure that are left out, of
+        :data:`eddyshed.reduce.homogenised.TERMS`.
     """
 
     model: Model
@@ -48,6 +51,7 @@ class ClosureData:
     covariance_xy: np.ndarray
     mean_calibration: bool
     forced_covariance: np.ndarray | None = None
+    leave_out: tuple[str, ...] = ()
 
     @property
     def covariance_x(self) -> np.ndarray:

@@ -30,6 +30,7 @@ CONDITION = 1e3  # of the lagged covariance beyond which L means nothing
 ROUNDS = 5  # in which lag and L settle; measured: two or three do
 BATCHES = 20  # parts of the record that errors come from
 BATCH_LAGS = 10  # length of a part, in lags, at least
+LENGTHS = 5  # of the lag in the record for each mode: L would be mere scatter
 FEWEST = 4  # parts; the scatter of fewer is no error
 
 
@@ -106,7 +107,8 @@ def instrumental_fit(x: np.ndarray, r: np.ndarray, step: float, who: str) -> Lin
     Raises
     ------
     DataError
-        If the lagged covariance is too ill-conditioned at any lag.
+        If the lagged covariance is too ill-conditioned at any lag, or the record
+        too short for so many modes.
 
     Notes
     -----
@@ -133,6 +135,15 @@ def instrumental_fit(x: np.ndarray, r: np.ndarray, step: float, who: str) -> Lin
             break
         lag = wanted
     lag, condition = _usable(x, lag, who)
+    members, times, nx = x.shape
+    if members * times < LENGTHS * nx * lag:
+        message = (
+            f"{who} closure: {nx} modes need a record of {LENGTHS * nx} lags of the "
+            f"instrument, {LENGTHS * nx * lag * step:.4g} s, and it lasts "
+            f"{members * times * step:.4g} s; run on, keep fewer modes, or leave out "
+            "this closure"
+        )
+        raise DataError(message)
     damping = _damping(*_lagged(x, r, lag))
     remainder = r - x @ damping.T
     return LinearFit(

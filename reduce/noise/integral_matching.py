@@ -7,55 +7,20 @@ numerics of :func:`eddyshed.reduce.noise.fit.fit_ornstein_uhlenbeck`.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 
-from eddyshed.solver.errors import DataError
-
-from .lag_integrals import (
-    bartlett_kernels,
-    jackknife_error,
-    matrix_means,
-    unit_means,
+from .lag_integrals import bartlett_kernels, less_bias, matrix_means, unit_means
+from .ornstein_uhlenbeck import ROUND_OFF
+from .repair import MOST_REPAIR, check_independent, repaired_rate
+from .replicates import (
+    BlockRates,
+    Replicates,
+    replicates_of_blocks,
+    replicates_of_units,
 )
-from .ornstein_uhlenbeck import ROUND_OFF, diffusion_defect
 
 ITERATIONS = 100  # Newton takes under ten unless there is no solution
 LEAST = 1e-3  # e-folding times in a window; cancellation spoils fewer
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class Replicates:
-    """A fit to the record (first of each array) and without each batch (rest).
-
-    Parameters
-    ----------
-    variance, decay, frequency, raw_decay, raw_frequency, double_window_decay : ndarray
-        Shape (batch + 1, n); see `NoiseFit` for their meaning.
-    imbalance : ndarray, shape (batch + 1, n)
-        Difference of the mean squares of two parts over their sum; zero for
-        an unpaired coordinate.
-    unit : ndarray of int, shape (n,)
-        Number of the pair or single coordinate that each belongs to.
-    uncorrected : ndarray of bool, shape (n,)
-        Where `decay` and `frequency` are the raw ones.
-    rate, rate_error, covariance : ndarray, shape (n, n)
-        Matrices of the fit to the record.
-    """
-
-    variance: np.ndarray
-    decay: np.ndarray
-    frequency: np.ndarray
-    raw_decay: np.ndarray
-    raw_frequency: np.ndarray
-    double_window_decay: np.ndarray
-    imbalance: np.ndarray
-    unit: np.ndarray
-    uncorrected: np.ndarray
-    rate: np.ndarray
-    rate_error: np.ndarray
-    covariance: np.ndarray
 
 
 def match_units(
@@ -96,119 +61,90 @@ def match_units(
     )
     # All replicates alike: the errors are those of the fit that is shown.
     uncorrected = ~solved.all(axis=0)
-    rate = np.where(uncorrected, raw, rate)
-    wide = np.where(wide_solved.all(axis=0), wide, wide_raw)
+    rate = np.where(uncorrected, raw, _decaying(rate))
+    wide = np.where(wide_solved.all(axis=0), _decaying(wide), wide_raw)
 
     return replicates_of_units(
         first, second, means.square, variance, raw, rate, wide, uncorrected
     )
 
 
-def replicates_of_units(
-    first: np.ndarray,
-    second: np.ndarray,
-    squares: np.ndarray,
-    variance: np.ndarray,
-    raw: np.ndarray,
-    rate: np.ndarray,
-    wide: np.ndarray,
-    uncorrected: np.ndarray,
+def _decaying(rates):
+    """Rates of units less their bias, unless this would make one grow."""
+    better = less_bias(rates)
+    return np.where(better[0].real > 0, better, rates)
+
+
+def match_blocks(
+    series: np.ndarray,
+    step: float,
+    lags: int,
+    batches: int,
+    blocks: list[np.ndarray],
 ) -> Replicates:
-    """Give each coordinate what was found for its unit.
+    """Fit one matrix to each group of coordinates.
 
     Parameters
     ----------
-    first, second : ndarray of int, shape (unit,)
-        Coordinates of the real and the imaginary part; -1 for no second.
-    squares : ndarray, shape (2, batch + 1, unit)
-        Mean squares of the two parts.
-    variance : ndarray, shape (batch + 1, unit)
-        Mean square of the unit, both parts together.
-    raw, rate, wide : ndarray of complex, shape (batch + 1, unit)
-        Rates as found, corrected for the window, and from twice the window.
-    uncorrected : ndarray of bool, shape (unit,)
-        Where `rate` is the raw one.
+    series, step, lags, batches
+        As in `match_units`.
+    blocks : list of ndarray of int
+        Coordinates of each group.
 
     Returns
     -------
     Replicates
-    """
-    paired = second >= 0
-    owner = np.empty(len(first) + paired.sum(), dtype=int)  # unit of a coordinate
-    owner[first] = np.arange(first.size)
-    owner[second[paired]] = np.flatnonzero(paired)
-    difference = np.where(paired, squares[0] - squares[1], 0.0)
-    variance = (variance / np.where(paired, 2, 1))[:, owner]
-    decay, frequency = rate.real[:, owner], rate.imag[:, owner]
-    real, imag = first[paired], second[paired]
-    matrix, error = np.diag(decay[0]), np.diag(jackknife_error(decay))
-    matrix[imag, real] = frequency[0, real]
-    matrix[real, imag] = -frequency[0, real]
-    error[imag, real] = error[real, imag] = jackknife_error(frequency)[real]
-    return Replicates(
-        variance=variance,
-        decay=decay,
-        frequency=frequency,
-        raw_decay=raw.real[:, owner],
-        raw_frequency=raw.imag[:, owner],
-        double_window_decay=wide.real[:, owner],
-        imbalance=(difference / squares.sum(axis=0))[:, owner],
-        unit=owner,
-        uncorrected=uncorrected[owner],
-        rate=matrix,
-        rate_error=error,
-        covariance=np.diag(variance[0]),
-    )
-
-
-def match_matrix(
-    series: np.ndarray, step: float, lags: int, batches: int
-) -> Replicates:
-    """Fit one matrix to all coordinates; arguments as in `match_units`.
 
     Raises
     ------
     DataError
-        If the coordinates are linearly dependent.
+        If the coordinates of a group are linearly dependent.
     """
-    size = series.shape[2]
     record = series.shape[0] * series.shape[1] * step
-    means = matrix_means(series, bartlett_kernels(lags, step), batches)
-    if diffusion_defect(means.square[0] / 2, means.square[0]) < ROUND_OFF:
-        message = (
-            "Ornstein-Uhlenbeck fit: the covariance of the coordinates is singular, "
-            "allowed are linearly independent ones for a full matrix; leave some out, "
-            "or fit a diagonal"
+    kernels = bartlett_kernels(lags, step)
+    fits = []
+    for block in blocks:
+        means = matrix_means(series[:, :, block], kernels, batches)
+        check_independent(means.square[0])
+        covariance, raw, rate, solved = _matrix_fits(
+            means.square, means.integral[0], lags, step, record
         )
-        raise DataError(message)
+        _, _, wide, wide_solved = _matrix_fits(
+            means.square, means.integral[1], 2 * lags, step, record
+        )
+        # The raw rate has no noise of negative variance, whatever the series.
+        share, tries = 0.0, [less_bias(rate), rate] if solved else []
+        rate = raw
+        for best in tries:
+            repaired, change = repaired_rate(best[0], covariance[0])
+            if change <= MOST_REPAIR:
+                rate, share = np.concatenate([[repaired], best[1:]]), change
+                break
+        else:
+            solved = False
+        fits.append(
+            BlockRates(
+                coordinates=block,
+                covariance=covariance,
+                raw=raw,
+                rate=rate,
+                wide=less_bias(wide) if wide_solved else wide,
+                uncorrected=not solved,
+                repair=share,
+            )
+        )
+    return replicates_of_blocks(fits)
 
-    def fit(integrals, length):
-        """Covariances, raw rates, rates, and whether these are corrected."""
-        fits = [
-            matrix_rates(square, integral, length, step, record)
-            for square, integral in zip(means.square, integrals, strict=True)
-        ]
-        covariance, raw, rate, solved = zip(*fits, strict=True)
-        rate = rate if all(solved) else raw
-        return np.stack(covariance), np.stack(raw), np.stack(rate), all(solved)
 
-    covariance, raw, rate, solved = fit(means.integral[0], lags)
-    wide = fit(means.integral[1], 2 * lags)[2]
-    none = np.zeros((batches + 1, size))
-    return Replicates(
-        variance=_diagonals(covariance),
-        decay=_diagonals(rate),
-        frequency=none,
-        raw_decay=_diagonals(raw),
-        raw_frequency=none,
-        double_window_decay=_diagonals(wide),
-        imbalance=none,
-        unit=np.arange(size),
-        uncorrected=np.full(size, not solved),
-        rate=rate[0],
-        rate_error=jackknife_error(rate),
-        covariance=covariance[0],
-    )
+def _matrix_fits(squares, integrals, lags, step, record):
+    """Covariances, raw rates, rates, and whether all of these are corrected."""
+    fits = [
+        matrix_rates(square, integral, lags, step, record)
+        for square, integral in zip(squares, integrals, strict=True)
+    ]
+    covariance, raw, rate, solved = zip(*fits, strict=True)
+    rate = rate if all(solved) else raw
+    return np.stack(covariance), np.stack(raw), np.stack(rate), all(solved)
 
 
 def unit_rates(
@@ -258,9 +194,8 @@ def matrix_rates(
     """Rate matrix from mean matrices; arguments and results as in `unit_rates`.
 
     The correction is a function of a matrix: it acts on the eigenvalues and
-    leaves the eigenvectors. It is not made if an eigenvalue has none, if the
-    eigenvectors are nearly parallel, or if the noise that follows would have
-    a negative variance.
+    leaves the eigenvectors. It is not made if an eigenvalue has none, or if the
+    eigenvectors are nearly parallel.
     """
     lost = (integral + integral.T) / record
     covariance = square + lost
@@ -273,8 +208,6 @@ def matrix_rates(
     if not solved.all() or np.linalg.cond(vectors) * np.finfo(float).eps > ROUND_OFF:
         return covariance, raw, raw, False
     rate = np.linalg.solve(vectors.T, (vectors * rates).T).T.real / step
-    if diffusion_defect(rate @ covariance, covariance) < 0:
-        return covariance, raw, raw, False
     return covariance, raw, rate, True
 
 
@@ -337,8 +270,3 @@ def _windowed_sum(rate: np.ndarray, lags: int) -> tuple[np.ndarray, np.ndarray]:
     value = cotangent / 2 - (1 - left) * square / (4 * lags)
     slope = (1 - left) * cotangent * square / (4 * lags) - (1 + left) * square / 4
     return value, slope
-
-
-def _diagonals(matrices: np.ndarray) -> np.ndarray:
-    """Diagonals of a stack of matrices."""
-    return np.diagonal(matrices, axis1=-2, axis2=-1)

@@ -20,8 +20,8 @@ import numpy as np
 from scipy import fft
 
 from ..statistics.series import mode_blocks
-from .integral_matching import Replicates, replicates_of_units
-from .lag_integrals import left_out
+from .lag_integrals import jackknife_error, left_out
+from .replicates import Replicates, replicates_of_units
 
 HALVINGS = 60  # of the interval that holds a rate: to the last bit
 SLOWEST = 1e-3  # e-folding times of |rho|^2 in a window, below which g is not known
@@ -58,7 +58,7 @@ def match_products(
     squares = np.empty((2, batches + 1, units))
     shape = (batches + 1, units)
     raw, rate, wide = (np.empty(shape, dtype=complex) for _ in range(3))
-    solved = np.empty(shape, dtype=bool)
+    solved, wide_solved = np.empty(shape, dtype=bool), np.empty(shape, dtype=bool)
     # A block holds each unit's series, padded spectra and lag covariances.
     for block in mode_blocks(units, 16 * 6 * members * times):
         parts = _parts(series, first[block], second[block])
@@ -67,10 +67,12 @@ def match_products(
         raw[:, block], rate[:, block], solved[:, block] = _rates(
             covariance[:, :, : lags + 1], step, record
         )
-        _, wide[:, block], _ = _rates(covariance, step, record)
+        _, wide[:, block], wide_solved[:, block] = _rates(covariance, step, record)
     rate.imag[:, ~paired] = raw.imag[:, ~paired] = 0.0
     uncorrected = ~solved.all(axis=0)
-    rate = np.where(uncorrected, raw, rate)
+    record = members * times * step
+    rate = np.where(uncorrected, raw, rate - _excess(rate, record, paired))
+    wide -= np.where(wide_solved.all(axis=0), _excess(wide, record, paired), 0.0)
 
     return replicates_of_units(
         first, second, squares, squares.sum(axis=0), raw, rate, wide, uncorrected
@@ -132,6 +134,25 @@ def _rates(covariance, step, record):
     frequency = -(np.angle(turned) * np.abs(turned)).sum(axis=-1)
     frequency /= step * np.abs(turned).sum(axis=-1)
     return raw + 1j * frequency, decay + 1j * frequency, solved
+
+
+def _excess(rate, record, paired):
+    r"""How much the decays found in a record are too high on average.
+
+    Beside the noise that `_rates` takes off, the integral of ``|rho|^2`` of a
+    process of rate g + i w lacks ``k / (2 g^2 T)``, to first order in the record
+    T. By integrals of the variance of rho (Bartlett 1946) and its bias (see
+    :mod:`.lagged`), and as fewer products are left at longer lags, k is 5 for a
+    single coordinate and 4 for a wave, if the mean is known; that it is not adds
+    ``8 g^4 / (g^2 + w^2)^2 - 4 g^2 / (g^2 + w^2)``. The decay is one over the
+    integral, and its scatter makes the mean of that too high as well.
+    """
+    decay, squared = rate[0].real, np.abs(rate[0]) ** 2
+    share = decay**2 / squared
+    lacking = np.where(paired, 4.0, 5.0) + 8 * share**2 - 4 * share
+    error = jackknife_error(rate.real) / decay
+    excess = lacking / (decay * record) + error**2
+    return decay * excess / (1 + excess)
 
 
 def _solve(squared, step, lags):

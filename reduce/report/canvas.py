@@ -52,9 +52,15 @@ LOOK = {
 
 # Hues that the common forms of colour blindness keep apart (Okabe and Ito 2008,
 # Color Universal Design), each with a dash and a marker of its own.
-HUES = ("#0072b2", "#d55e00", "#009e73", "#cc79a7", "#a07000")
-DASHES = ((5, 1.4), (1.3, 1.2), (7, 1.4, 1.3, 1.4), (3, 1.2, 3, 1.2, 1, 1.2), (9, 2))
-MARKERS = ("o", "s", "^", "D", "v")
+HUES = (
+    *("#0072b2", "#d55e00", "#009e73", "#cc79a7"),
+    *("#a07000", "#6a3d9a", "#56b4e9", "#8b2e16"),
+)
+DASHES = (
+    *((5, 1.4), (1.3, 1.2), (7, 1.4, 1.3, 1.4), (3, 1.2, 3, 1.2, 1, 1.2)),
+    *((9, 2), (2.5, 2.2), (7, 1.4, 1.3, 1.4, 1.3, 1.4), (1.3, 2.6)),
+)
+MARKERS = ("o", "s", "^", "D", "v", "P", "X", "<")
 
 # Blue below zero, orange above, grey between; lightness only ever rises, so
 # that the sign is still there in print without colour.
@@ -103,7 +109,7 @@ def closure_style(index: int) -> dict[str, object]:
         "dashes": DASHES[k],
         "marker": MARKERS[k],
         # A few along the curve, and not where another closure has its own.
-        "markevery": (0.04 + 0.04 * k, 0.2),
+        "markevery": (0.02 + 0.025 * k, 0.2),
         "markerfacecolor": "white",
         "markeredgewidth": 0.9,
     }

@@ -38,6 +38,7 @@ def models(note: Note, evidence: Evidence) -> str:
         f"</p>\n<ul>{failed}</ul>"
         if failed
         else "",
+        _knowledge(note, evidence),
         _correlations(note, evidence),
         _distributions(note, evidence),
         _scores(note, evidence),
@@ -231,6 +232,47 @@ def _scores(note, evidence):
         "and two records of one process are at a distance of about its error. * not "
         "within sampling error; † not within tolerance.",
     )
+
+
+def _knowledge(note, evidence):
+    """What each closure found out about itself when it was made."""
+    groups = []
+    for entry in evidence.closures:
+        rows = [
+            [
+                f"<code>{text(entry['name'])}</code>",
+                text(name),
+                "unknown" if value is None else f"{value:.3g}",
+            ]
+            for name, value in entry["facts"].items()
+        ]
+        said = "".join(
+            f"<p>{text(_capital(words))}.</p>"
+            for words in entry["notes"]
+            if words not in evidence.noise.notes  # said of the noise already
+        )
+        if rows and said:
+            rows.append(said)
+        elif said:
+            rows = [[f"<code>{text(entry['name'])}</code>", "–", "–"], said]
+        if rows:
+            groups.append(rows)
+    if not groups:
+        return ""
+    return note.table(
+        ["closure", "number", "value"],
+        groups,
+        words=(0, 1),
+        caption="What each closure found out when it was made, and what to know before "
+        "believing it. Sizes of terms are root mean squares along the truth over that "
+        "of the tendency of the mode, in the mode where that is most; white noise "
+        "counts as the tendency of a coupling with its intensity and the integral time "
+        "of the real one.",
+    )
+
+
+def _capital(words):
+    return f"{words[:1].upper()}{words[1:].rstrip('.')}"
 
 
 def _marks(score, mode):

@@ -29,6 +29,8 @@ KEPT = {
     "of them through linear terms",
     "product": "integrals of their squared correlation functions, which is what a slow "
     "mode feels of them through products",
+    "likelihood": "lag covariances that make their samples most likely",
+    "regression": "lag covariances at the longest of these lags",
 }
 
 
@@ -50,7 +52,7 @@ def noise(note: Note, evidence: Evidence) -> str:
         paragraphs(
             "The unresolved modes are replaced by an Ornstein–Uhlenbeck process "
             f"({text(fit.structure)} rates) that keeps their variances and the "
-            f"{KEPT[fit.match]}, over a window of {span(fit.window)}. It has "
+            f"{KEPT[fit.method]}, by lags up to {span(fit.window)}. It has "
             f"{fit.process.size} coordinates"
             + (
                 f"; {2 * pairs} of them form {pairs} pairs, the two parts of a wave "
@@ -129,7 +131,7 @@ def _noise_correlations(note, evidence, units):
         "of largest variance, over the window of the fit: truth (dots; grey, two "
         f"standard errors to either side by Bartlett's large-lag formula, {BARTLETT}) "
         "and fitted noise (line). Of a pair the real part is shown. The fit keeps the "
-        f"{KEPT[fit.match]}, and not the shape of the curve.",
+        f"{KEPT[fit.method]}, and not the shape of the curve.",
     )
 
 

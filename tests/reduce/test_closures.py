@@ -4,16 +4,15 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from closure_cases import NX, NY, data_of, no_noise, random_case
 from scipy import linalg, signal
-from splits import divided, resolved_only
-from toys import Quadratic, orthonormal_vectors, random_model, random_weights
+from splits import resolved_only
+from toys import Quadratic
 
 from eddyshed.reduce.closures import CLOSURES, closure
 from eddyshed.reduce.closures.data import ClosureData
 from eddyshed.reduce.closures.instrumental import instrumental_fit
 from eddyshed.reduce.contract import tendency
-from eddyshed.reduce.coupling import covariance
-from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.reduced import compiled_drift
@@ -21,39 +20,6 @@ from eddyshed.reduce.simulation import simulate, step_rule
 from eddyshed.reduce.statistics.resampling import moments
 from eddyshed.solver.errors import DataError
 from eddyshed.solver.randomness import stream
-
-SIZE, NX, NY = 9, 3, 6
-
-
-def no_noise():
-    return fit_ornstein_uhlenbeck(np.empty((1, 100, 0)), 1.0, window=4.0)
-
-
-def data_of(model, states, vectors, nx, *, step=1.0, calibrated=True, **options):
-    """All that a closure is made from, and the series of the unresolved modes."""
-    split, y = divided(model, states, vectors, nx, step=step, **options)
-    noise = fit_ornstein_uhlenbeck(y, step, window=8.0) if y.shape[2] else no_noise()
-    return ClosureData(
-        model=model,
-        split=split,
-        operators=galerkin(model, vectors[:, :nx], vectors[:, nx:], split.mean),
-        noise=noise,
-        covariance_y=covariance(y, y),
-        covariance_xy=covariance(split.x, y),
-        mean_calibration=calibrated,
-    ), y
-
-
-def random_case(*, ny=NY, mean=None, **options):
-    """A closure's data of a random conserving model along red random states."""
-    rng = np.random.default_rng(51)
-    weights = random_weights(rng, SIZE) / SIZE
-    model = random_model(rng, SIZE, weights=weights)
-    vectors = orthonormal_vectors(rng, weights, NX + ny)
-    red = OrnsteinUhlenbeck(rate=np.eye(SIZE), covariance=np.eye(SIZE))
-    states = red.simulate(3000, 0.3, rng)[0] @ rng.standard_normal((SIZE, SIZE))
-    states += rng.standard_normal(SIZE) if mean is None else mean
-    return data_of(model, states, vectors, NX, step=0.3, **options)
 
 
 def test_every_closure_is_there():
@@ -505,3 +471,13 @@ def test_a_damping_known_poorly_says_so():
     x -= x.mean(axis=0)
     model = closure("damped")(residual_data(x, rng.standard_normal(x.shape)))
     assert any("known poorly" in note for note in model.notes)
+
+
+def test_more_modes_than_the_record_can_tell_apart_are_refused():
+    rng = np.random.default_rng(78)
+    process = OrnsteinUhlenbeck(rate=np.eye(2) / 5, covariance=np.eye(2))
+    x = process.simulate(150, 0.2, rng)
+    slow = OrnsteinUhlenbeck(rate=np.eye(2), covariance=np.eye(2))
+    noise = slow.simulate(150, 0.2, rng)
+    with pytest.raises(DataError, match="some closure: 2 modes need a record of 10"):
+        instrumental_fit(x - x.mean(axis=1), noise, 0.2, "some")

@@ -93,11 +93,16 @@ def test_time_reversed_waves_turn_the_other_way():
         series[:, :, ::-1], 0.1, window=5.0, partners=[1, 0]
     )
     assert forward.frequency.value[0] > 0.5
-    for other in (backward, swapped):
-        np.testing.assert_allclose(
-            other.frequency.value, -forward.frequency.value, rtol=1e-9
-        )
-        np.testing.assert_allclose(other.decay.value, forward.decay.value, rtol=1e-9)
+    # The integral at a time looks ahead, so that batches differ at their edges
+    # between the two directions, and with them the bias that is taken off.
+    for other, least in ((backward, 0.1), (swapped, 1e-9)):
+        for name, sign in (("frequency", -1), ("decay", 1)):
+            first, second = getattr(forward, name), getattr(other, name)
+            far = np.abs(second.value - sign * first.value)
+            assert np.all(far < least * first.error), name
+    for name, sign in (("raw_frequency", -1), ("raw_decay", 1)):
+        first, second = getattr(forward, name), getattr(backward, name)
+        np.testing.assert_allclose(second.value, sign * first.value, rtol=1e-9)
 
 
 @settings(max_examples=20, deadline=None, derandomize=True)
@@ -217,7 +222,13 @@ def test_a_rate_without_correction_is_marked():
     series = red_series((1, 2000, 2), 12)
     noise = np.random.default_rng(13).standard_normal(2001)
     series[0, :, 1] = 0.01 * np.diff(noise)
-    fit = fit_ornstein_uhlenbeck(series, 0.1, window=4.0, labels=("slow", "jumpy"))
+    fit = fit_ornstein_uhlenbeck(
+        series,
+        0.1,
+        window=4.0,
+        structure="real diagonal",
+        labels=("slow", "jumpy"),
+    )
     np.testing.assert_array_equal(fit.uncorrected, [False, True])
     assert fit.decay.value[1] == fit.raw_decay.value[1]
     marked = [note for note in fit.notes if note.startswith("1 of 2")]

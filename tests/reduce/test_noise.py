@@ -4,11 +4,14 @@ import numpy as np
 import pytest
 from scipy import linalg, stats
 
+from eddyshed.reduce.bases.basis import Basis
 from eddyshed.reduce.noise.fit import (
     OrnsteinUhlenbeck,
     fit_ornstein_uhlenbeck,
     window_rule,
 )
+from eddyshed.reduce.noise.of_split import fit_noise, wave_groups
+from eddyshed.reduce.settings import NoiseFitSettings
 from eddyshed.solver.errors import DataError
 
 # Errors come from 20 batches: intervals are Student's with 19 degrees of freedom.
@@ -70,7 +73,7 @@ def test_pairs_and_single_coordinates_are_recovered():
     np.testing.assert_array_equal(np.diag(fit.process.covariance), fit.variance.value)
     assert not fit.uncorrected.any()
     assert (fit.window, fit.step) == (8, 0.1)
-    assert (fit.structure, fit.batches) == ("diagonal", 20)
+    assert (fit.structure, fit.batches) == ("complex diagonal", 20)
 
 
 def test_a_full_matrix_is_recovered():
@@ -152,11 +155,12 @@ def test_what_chance_explains_is_not_noted():
     series = waves(np.ones(150), np.linspace(0, 3, 150)).simulate(
         2000, 0.1, np.random.default_rng(23)
     )
-    fit = fit_ornstein_uhlenbeck(series, 0.1, window=5.0, partners=pairs(150))
+    options = {"partners": pairs(150), "structure": "complex diagonal"}
+    fit = fit_ornstein_uhlenbeck(series, 0.1, window=5.0, **options)
     assert fit.notes == ()
     # One wave out of many is not lost among them.
     series[:, :, 7] *= 2
-    fit = fit_ornstein_uhlenbeck(series, 0.1, window=5.0, partners=pairs(150))
+    fit = fit_ornstein_uhlenbeck(series, 0.1, window=5.0, **options)
     assert len(fit.notes) == 1
     assert "2 of 300 coordinates (mode 6, mode 7): the two parts" in fit.notes[0]
 
@@ -197,8 +201,14 @@ def test_a_matrix_too_large_for_the_record_is_noted():
         ({"window": 5.1}, "1000 samples with a window of 51 .*run on to 1020"),
         ({"batches": 3}, "3 batches, allowed are 4 to 25"),
         ({"batches": 26}, "26 batches"),
-        ({"structure": "banded"}, '"banded", allowed are "diagonal" and "full"'),
-        ({"structure": "full", "partners": [1, 0, -1]}, "with a diagonal only"),
+        ({"structure": "banded"}, '"banded", allowed are "auto"'),
+        ({"structure": "blocks"}, 'no groups of 3 coordinates, structure "blocks"'),
+        ({"structure": "blocks", "groups": [1, 2]}, r"groups of shape \(2,\)"),
+        ({"structure": "blocks", "groups": [1.0, 2.0, 2.0]}, "needs the label"),
+        ({"method": "likelihood"}, 'window of 4.0 s with method "likelihood"'),
+        ({"lag": 0.5}, 'lag of 0.5 s with method "integral"'),
+        ({"method": "regression", "window": None}, "lag of None s"),
+        ({"method": "regression", "window": None, "lag": 30.0}, "lag of 30.0 s"),
         ({"partners": [1, 0]}, r"partners of shape \(2,\)"),
         ({"partners": [1.0, 0.0, -1.0]}, "type float64"),
         ({"partners": [1, 2, 0]}, "partner 1 of coordinate 0"),
@@ -259,7 +269,7 @@ def test_coarse_sampling_is_refused_with_a_step_that_would_do():
 # --- Odds and ends ----------------------------------------------------------
 
 
-@pytest.mark.parametrize("structure", ["diagonal", "full"])
+@pytest.mark.parametrize("structure", ["real diagonal", "complex diagonal", "full"])
 def test_there_may_be_no_coordinates(structure):
     fit = fit_ornstein_uhlenbeck(
         np.zeros((1, 1000, 0)), 0.1, window=4.0, structure=structure
@@ -273,7 +283,7 @@ def test_there_may_be_no_coordinates(structure):
 
 def test_fits_print_and_cross_process_borders():
     fit = fit_ornstein_uhlenbeck(red_series((1, 1000, 2)), 0.1, window=2.0)
-    assert repr(fit).startswith("NoiseFit(diagonal, window 2 s, OrnsteinUhlenbeck(2 ")
+    assert repr(fit).startswith("NoiseFit(integral, full, window 2 s, OrnsteinUhlen")
     copy = pickle.loads(pickle.dumps(fit))
     np.testing.assert_array_equal(copy.process.rate, fit.process.rate)
     np.testing.assert_array_equal(copy.decay.error, fit.decay.error)
@@ -290,3 +300,61 @@ def test_window_is_eight_mean_times():
     ):
         with pytest.raises(DataError, match=words):
             window_rule(times, variances, 0.1)
+
+
+# --- From a study -----------------------------------------------------------
+
+
+def fourier(labels, waves, vectors):
+    index = np.arange(vectors.shape[1])
+    return Basis(
+        vectors=vectors,
+        variance=np.ones(len(index)),
+        labels=labels,
+        partners=index ^ 1,
+    ), np.array(waves)
+
+
+def test_blocks_of_a_study_are_its_zonal_wavenumbers():
+    # Two waves of one wavenumber in x, of either sign, and one of another.
+    numbers = [[1, 1], [1, 1], [-1, 2], [-1, 2], [2, 1], [2, 1]]
+    labels = ("a", "b", "c", "d", "e", "f")
+    basis, waves_of = fourier(labels, numbers, np.eye(6))
+    np.testing.assert_array_equal(wave_groups(basis, waves_of), [1, 1, 1, 1, 2, 2])
+    series = red_series((1, 6000, 6), 30)
+    settings = NoiseFitSettings(structure="blocks")
+    options = {"product": True, "basis": basis, "waves": waves_of}
+    fit = fit_noise(settings, series, 0.1, **options)
+    assert (fit.method, fit.structure) == ("integral", "blocks")
+    assert fit.process.rate[0, 3] != 0
+    assert not fit.process.rate[:4, 4:].any()
+    # By default waves, and the method that their coupling asks for.
+    for product, method in ((True, "product"), (False, "integral")):
+        fit = fit_noise(
+            NoiseFitSettings(), series, 0.1, **(options | {"product": product})
+        )
+        assert (fit.method, fit.structure) == (method, "complex diagonal")
+    settings = NoiseFitSettings(method="regression", lag=0.3, structure="real diagonal")
+    fit = fit_noise(settings, series, 0.1, **options)
+    assert (fit.method, fit.window) == ("regression", pytest.approx(0.3))
+    # Modes that mix wavenumbers have no blocks.
+    turn = np.eye(6)
+    turn[np.ix_([0, 4], [0, 4])] = [[0.6, -0.8], [0.8, 0.6]]
+    mixed, _ = fourier(labels, numbers, turn)
+    with pytest.raises(DataError, match="mode a is made of several wavenumbers"):
+        wave_groups(mixed, waves_of)
+
+
+@pytest.mark.parametrize(
+    ("keys", "words"),
+    [
+        ({"method": "regression"}, "needs lag"),
+        ({"lag": 3.0}, "lag has no meaning"),
+        ({"method": "likelihood", "window": 3.0}, "window has no meaning"),
+        ({"method": "product", "structure": "full"}, 'no structure = "full"'),
+    ],
+)
+def test_settings_that_contradict_each_other(keys, words):
+    (problem,) = NoiseFitSettings(**keys).problems()
+    assert words in problem
+    assert not list(NoiseFitSettings(method="regression", lag=3.0).problems())

@@ -30,10 +30,10 @@ def red(times, seed, number=1):
     return series.transpose(1, 2, 0)[:, 0][np.newaxis]
 
 
-def fitted(series, window, *, step=STEP, paired=True, match="product", **options):
+def fitted(series, window, *, step=STEP, paired=True, method="product", **options):
     partners = np.arange(series.shape[2]) ^ 1 if paired else None
     return fit_ornstein_uhlenbeck(
-        series, step, window=window, partners=partners, match=match, **options
+        series, step, window=window, partners=partners, method=method, **options
     )
 
 
@@ -63,9 +63,14 @@ def test_rate_and_frequency_of_a_pair_are_recovered(frequency):
     assert np.all(fit.frequency.error < 0.03)
     expected = [[0.7, -frequency], [frequency, 0.7]]
     assert np.all(np.abs(fit.process.rate - expected) <= FAR * fit.rate_error)
-    assert (fit.match, fit.structure, fit.window) == ("product", "diagonal", 8.0)
+    assert (fit.method, fit.structure, fit.window) == (
+        "product",
+        "complex diagonal",
+        8.0,
+    )
     assert not fit.uncorrected.any()
-    assert fit.notes == ()
+    assert len(fit.notes) == 1
+    assert fit.notes[0].startswith("structure: complex diagonal")
 
 
 def test_pairs_and_single_coordinates_stand_side_by_side():
@@ -74,7 +79,7 @@ def test_pairs_and_single_coordinates_stand_side_by_side():
     alone = red(60_000, 4)
     series = np.concatenate([one, other, alone], axis=2)[:, :, [0, 2, 4, 1, 3]]
     fit = fit_ornstein_uhlenbeck(
-        series, STEP, window=8.0, partners=[3, 4, -1, 0, 1], match="product"
+        series, STEP, window=8.0, partners=[3, 4, -1, 0, 1], method="product"
     )
     assert near(fit.decay, [0.5, 2, 1, 0.5, 2])
     assert near(fit.frequency, [1.5, -1, 0, 1.5, -1])
@@ -85,7 +90,7 @@ def test_pairs_and_single_coordinates_stand_side_by_side():
         STEP,
         window=8.0,
         partners=[3, 4, -1, 0, 1],
-        match="product",
+        method="product",
     )
     assert near(fit.frequency, [-1.5, -1, 0, -1.5, -1])
 
@@ -127,13 +132,13 @@ def test_errors_of_single_coordinates_are_what_they_say():
 def test_both_matches_agree_on_an_ornstein_uhlenbeck_process(frequency):
     series = waves(1.0, frequency, 20_000, 8, number=10)
     product, integral = (
-        fitted(series, 8.0, match=match) for match in ("product", "integral")
+        fitted(series, 8.0, method=method) for method in ("product", "integral")
     )
     for name in ("decay", "frequency", "variance"):
         one, other = getattr(product, name), getattr(integral, name)
         error = np.hypot(one.error, other.error)
         assert np.all(np.abs(one.value - other.value) <= FAR * error), name
-    assert product.match != integral.match
+    assert product.method != integral.method
     # Squares need no phase: the product's decay is the better known one.
     assert np.mean(product.decay.error) < np.mean(integral.decay.error)
 
@@ -230,7 +235,7 @@ def test_a_wave_of_spread_frequency(frequencies, decay, times, step, window, slo
     # rho itself hardly knows of the interference.
     series = spread_waves(frequencies, decay, times, step, 14, 10)
     product = fitted(series, window, step=step)
-    integral = fitted(series, window, step=step, match="integral")
+    integral = fitted(series, window, step=step, method="integral")
 
     found, error = mean_of(product.raw_decay)
     exact = 1 / (2 * integral_of_squares(frequencies, decay, window))
@@ -305,18 +310,17 @@ def test_samples_that_do_not_know_their_neighbours_are_refused():
 
 
 @pytest.mark.parametrize(
-    "options", [{"structure": "full"}, {"match": "square"}, {"match": None}]
+    "options", [{"structure": "full"}, {"method": "square"}, {"method": None}]
 )
 def test_impossible_requests_are_refused(options):
-    words = 'allowed are "integral" with either and "product" with a diagonal'
-    with pytest.raises(DataError, match=words):
+    with pytest.raises(DataError, match=r'method ".*", allowed are'):
         fitted(red(1000, 18, number=2), 4.0, paired=False, **options)
 
 
 def test_there_may_be_no_coordinates():
     fit = fitted(np.zeros((1, 1000, 0)), 4.0, paired=False)
     assert fit.process.size == 0
-    assert fit.match == "product"
+    assert fit.method == "product"
 
 
 def test_blocks_do_not_matter(monkeypatch):

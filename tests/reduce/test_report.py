@@ -160,7 +160,7 @@ class TestPage:
         assert len(pictures) == FIGURES
         assert all(len(picture["alt"]) > 40 for picture in pictures)
         tables = [a for a in walk.tags("div") if a.get("class") == "scroll"]
-        assert len(tables) == len(walk.tags("table")) == 6
+        assert len(tables) == len(walk.tags("table")) == 7
         assert all(a["aria-label"] and a["tabindex"] == "0" for a in tables)
         assert len(walk.tags("figure")) == FIGURES + len(tables)
 
@@ -413,6 +413,30 @@ class TestContent:
         close = np.concatenate([score["close"] for score in scores])
         assert table.count("*") == (~sampling.astype(bool)).sum() > 0
         assert table.count("†") == (~close.astype(bool)).sum() > 0
+
+    def test_gives_what_the_closures_know_of_themselves(self, evidence):
+        closures = copy.deepcopy(evidence.closures)
+        bare, residual, coloured = closures
+        bare |= {"facts": {}, "notes": []}
+        residual |= {"facts": {"size & share": 0.125, "lost": None}, "notes": []}
+        coloured |= {"facts": {}, "notes": ["it grows & grows", "of the noise"]}
+        noise = dataclasses.replace(evidence.noise, notes=("of the noise",))
+        other = dataclasses.replace(evidence, closures=closures, noise=noise)
+        html = render(other, "x", None)
+        found = words(html)
+        found = found[found.index("What each closure found out") :]
+        found = found[: found.index("Correlation functions of")]
+        assert "residualsize &amp; share0.125" in found
+        assert "residuallostunknown" in found
+        assert "coloured––" in found
+        assert "It grows &amp; grows." in found
+        # What is said of the noise is said once, where the noise is.
+        assert "Of the noise" not in found
+        assert "bare" not in found
+        for entry in closures:
+            entry |= {"facts": {}, "notes": []}
+        html = render(dataclasses.replace(evidence, closures=closures), "x", None)
+        assert "What each closure found out" not in html
 
     def test_lists_the_fingerprints_and_seeds(self, study, html):
         for name in ("truth", "flow", "reduce", "audit", "benchmark"):

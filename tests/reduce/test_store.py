@@ -14,14 +14,17 @@ from toys import coloured_model, orthonormal_vectors, random_model
 
 from eddyshed.reduce.audit import Finding
 from eddyshed.reduce.bases.basis import Basis, Measured
+from eddyshed.reduce.diffusion import DiffusionModel
+from eddyshed.reduce.homogenised import white_limit
+from eddyshed.reduce.layout import AXES, UNITS, composed
 from eddyshed.reduce.noise.fit import NoiseFit, fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import Operators, galerkin
+from eddyshed.reduce.polynomial import Polynomial
 from eddyshed.reduce.reduced import ReducedModel
 from eddyshed.reduce.report.markup import page
 from eddyshed.reduce.split import Split
 from eddyshed.reduce.store import (
-    AXES,
     pack,
     plain,
     read_fingerprint,
@@ -82,6 +85,9 @@ def parts():
         x_from_x=operators.A11,
         x_from_xx=operators.B111,
     )
+    white = white_limit(coloured).equation(
+        labels=split.resolved.labels, notes=("a note",), facts={"size": 0.1}
+    )
     return {
         "split": split,
         "operators": operators,
@@ -90,6 +96,7 @@ def parts():
         "process": noise.process,
         "coloured": coloured,
         "bare": bare,
+        "white": white,
     }
 
 
@@ -114,7 +121,7 @@ def assert_equal(one, other, where="value"):
         assert one == other, where
 
 
-NAMES = ("split", "operators", "noise", "full", "process", "coloured", "bare")
+NAMES = ("split", "operators", "noise", "full", "process", "coloured", "bare", "white")
 
 
 @pytest.mark.parametrize("name", NAMES)
@@ -125,8 +132,9 @@ def test_what_goes_in_comes_out(parts, path, name):
 
 def test_all_kinds_are_tried(parts):
     kinds = {Split, Operators, NoiseFit, OrnsteinUhlenbeck, ReducedModel}
+    kinds.add(DiffusionModel)
     assert {type(value) for value in parts.values()} == kinds
-    for kind in (*kinds, Basis):
+    for kind in (*kinds, Basis, Polynomial):
         arrays = [
             field.name
             for field in dataclasses.fields(kind)
@@ -148,7 +156,9 @@ def test_general_readers_open_each_group(parts, path, name, engine):
             dimensions = data[field].dims
             assert len(set(dimensions)) == len(dimensions) == array.ndim
             assert [d.partition("__")[0] for d in dimensions] == list(axes)
-            assert data[field].attrs["units"]
+            # A reduced model's y has a unit that each closure chooses.
+            if not isinstance(value, ReducedModel) or field in UNITS["ReducedModel"]:
+                assert data[field].attrs["units"]
             checked += array.size
         assert checked > 0
 
@@ -208,8 +218,8 @@ def test_numbers_and_flags_keep_their_types(tmp_path):
 
     value = Mixed(True, 3, 1 / 3, "ü", ("a", "b"), {"x": 0.1, "y": -math.inf})
     with h5py.File(tmp_path / "a.h5", "w") as file:
-        pack(file.create_group("mixed"), value)
-        pack(file.create_group("off"), dataclasses.replace(value, flag=False))
+        pack(file.create_group("mixed"), value, "m s-1")
+        pack(file.create_group("off"), dataclasses.replace(value, flag=False), "1")
         assert_equal(unpack(file["mixed"], Mixed), value)
         assert unpack(file["off"], Mixed).flag is False
         # General readers drop attributes that are neither numbers nor text.
@@ -376,3 +386,20 @@ def test_a_json_file_is_replaced_whole(tmp_path):
     (tmp_path / "file").write_text("")
     with pytest.raises(RunFolderError, match="cannot be written"):
         write_json(tmp_path / "file" / "a.json", "", {})
+
+
+def test_units_follow_the_inner_product(tmp_path, parts):
+    # In the product of l2 coordinates are streamfunctions, in that of enstrophy
+    # vorticities; a user's own model may have no unit at all.
+    for unit, expected in {
+        "m2 s-1": {"x": "m2 s-1", "tendency": "m2 s-2"},
+        "s-1": {"x": "s-1", "tendency": "s-2"},
+        "1": {"x": "1", "tendency": "s-1"},
+    }.items():
+        path = tmp_path / "split.h5"
+        write_all(path, "stamp", "Title", "split", {"split": parts["split"]}, unit)
+        with h5py.File(path) as file:
+            for field, found in expected.items():
+                assert file["split"][field].attrs["units"] == found
+            variance = file["split/resolved/variance"].attrs["units"]
+            assert variance == composed(unit, 2, 0)

@@ -195,6 +195,30 @@ def test_every_closure_takes_its_parts_of_the_forcing(tmp_path):
         )
 
 
+def test_the_constant_knows_of_the_forced_part_of_y():
+    # Over the truth the mean drift of the coloured closure vanishes with the
+    # covariance of the noise and that of what follows the clock together.
+    rng = np.random.default_rng(14)
+    model = Driven(**vars(random_model(rng, 6)))
+    vectors = orthonormal_vectors(rng, model.weights, 6)
+    red = OrnsteinUhlenbeck(rate=np.eye(6), covariance=np.eye(6))
+    states = red.simulate(4000, 0.5, rng)[0]
+    states += np.cos(2 * np.pi / PERIOD * 0.5 * np.arange(4000))[:, np.newaxis]
+    data, _ = data_of(model, states, vectors, 2)
+    made = closure("coloured")(data)
+    both = made.covariance + data.forced_covariance
+    # A cosine of amplitude one in six directions, projected on four.
+    assert np.trace(data.forced_covariance) > 0.5
+    drift = (
+        made.x_forcing
+        + np.einsum("ijk,jk->i", made.x_from_xx, data.covariance_x)
+        + 2 * np.einsum("ijm,jm->i", made.x_from_xy, data.covariance_xy)
+        + np.einsum("imn,mn->i", made.x_from_yy, both)
+    )
+    # Round-off of sums of a hundred products of order ten.
+    np.testing.assert_allclose(drift, 0, atol=1e-11)
+
+
 def test_the_cycle_is_no_noise():
     # y is red noise with a season of twice its variance on it; the fit must see
     # the noise alone, and the driven noise must have the season again.

@@ -86,13 +86,13 @@ def test_readers_see_where_and_what(run, engine):
         assert gyre.dtype == "float64"
         assert gyre.attrs["units"] == "s-1"
         assert gyre.attrs["cell_methods"] == (
-            "boxes_time: point box_gyre_x: box_gyre_y: mean"
+            "boxes_time: point x_of_box_gyre: y_of_box_gyre: mean"
         )
         np.testing.assert_array_equal(gyre.values, record.read_boxes()["gyre"])
         # It wraps around: from 800 km to 1100 km of a box 1000 km long.
-        assert float(gyre.coords["box_gyre_x"]) == 950e3
-        assert data["box_gyre_x"].attrs["units"] == "m"
-        sides = data[data["box_gyre_x"].attrs["bounds"]]
+        assert float(gyre.coords["x_of_box_gyre"]) == 950e3
+        assert data["x_of_box_gyre"].attrs["units"] == "m"
+        sides = data[data["x_of_box_gyre"].attrs["bounds"]]
         assert sides.dims == ("side",)
         np.testing.assert_allclose(sides.values, [800e3, 1100e3], rtol=1e-15)
         steps = np.diff(data["boxes_time"].values).astype("m8[s]").astype(int)
@@ -107,8 +107,15 @@ def test_without_an_interval_of_its_own_the_stream_has_that_of_the_state(tmp_pat
     with xarray.open_dataset(path, engine="netcdf4") as data:
         deep = data["box_deep"]
         assert deep.attrs["units"] == "m s-2"
-        assert set(deep.coords) == {"boxes_time", "box_deep_x", "box_deep_z"}
-        assert float(deep.coords["box_deep_z"]) == 40.0
+        assert set(deep.coords) == {"boxes_time", "x_of_box_deep", "z_of_box_deep"}
+        assert float(deep.coords["z_of_box_deep"]) == 40.0
+
+
+def test_a_box_may_be_named_like_the_place_of_another(tmp_path):
+    names = 'output.boxes={gyre={field="vorticity"}, gyre_x={field="vorticity"}}'
+    run_member(config_of(names, "time.duration=2 d"), 0, tmp_path)
+    found = open_record(member_paths(tmp_path, 0)[0]).read_boxes()
+    assert list(found) == ["gyre", "gyre_x"]
 
 
 def test_a_run_without_boxes_has_none(tmp_path):

@@ -1,11 +1,6 @@
 """A run with gusts and stirring is the same bits however often it is stopped."""
 
-import os
 import re
-import signal
-import subprocess
-import sys
-import time
 
 import h5py
 import numpy as np
@@ -104,36 +99,6 @@ def test_a_resumed_run_is_the_uninterrupted_one(tmp_path, scheme):
         assert not done
     assert run_member(config, 0, tmp_path / "parts")
     assert_same_bits(contents(tmp_path / "parts"), contents(tmp_path / "whole"))
-
-
-@pytest.mark.slow  # starts two processes and kills them at work
-def test_a_killed_run_is_the_uninterrupted_one(whole, tmp_path):
-    script = (
-        "import sys; sys.path.insert(0, sys.argv[1]);"
-        "from test_random_resume import config_of;"
-        "from eddyshed.solver.truth import run_member;"
-        "from pathlib import Path;"
-        "run_member(config_of('output.checkpoint_every=1 d'), 0, Path(sys.argv[2]))"
-    )
-    arguments = [sys.executable, "-c", script, os.path.dirname(__file__), str(tmp_path)]
-    rng = np.random.default_rng(1)
-    kills = 0
-    for _ in range(2):
-        with subprocess.Popen(arguments) as process:
-            count = len(list(tmp_path.glob("member-000/segment-*.h5")))
-            deadline = time.monotonic() + 30
-            while process.poll() is None and time.monotonic() < deadline:
-                if len(list(tmp_path.glob("member-000/segment-*.h5"))) > count:
-                    break
-                time.sleep(0.001)
-            time.sleep(rng.uniform(0, 0.02))
-            if process.poll() is None:
-                process.send_signal(signal.SIGKILL)
-                kills += 1
-            process.wait()
-    assert kills > 0
-    assert run_member(config_of("output.checkpoint_every=1 d"), 0, tmp_path)
-    assert_same_bits(contents(tmp_path), contents(whole))
 
 
 def test_a_forcing_keeps_its_stream_when_another_is_removed(whole, tmp_path):
