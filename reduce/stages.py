@@ -22,7 +22,7 @@ from eddyshed.solver.truth import (
     random_forcing_of,
 )
 
-from .audit import audit
+from .audit import Material, audit
 from .bases.fourier import kept_coordinates
 from .bases.spectrum import spectrum_notes
 from .benchmark import compare, run_closure, truth_side
@@ -262,12 +262,26 @@ def read_model(study: Study, name: str) -> ReducedModel | DiffusionModel:
 
 def run_audit(study: Study, stamp: str) -> None:
     """Test the assumptions."""
-    split = read_split(study)
-    rng = stream(study.config.seed, 0, "audit")
-    findings = audit(
-        study.config.audit, split, coupling(split, read_operators(study)), rng
+    config, records = study.config, study.records()
+    model, split = model_of(config), read_split(study)
+    operators = read_operators(study)
+    material = Material(
+        model=model,
+        split=split,
+        operators=operators,
+        noise=read_noise(study),
+        coupling=coupling(split, operators),
+        y=unresolved_series(split, model, records, config.limits.memory),
+        records=records,
+        models={
+            name: read_model(study, name)
+            for name in ("coloured", "white")
+            if name in config.closures.use
+        },
     )
-    write_json(study.path("audit.json"), stamp, {"findings": plain(findings)})
+    rng = stream(config.seed, 0, "audit")
+    found = audit(config.audit, material, config.closures.use, rng)
+    write_json(study.path("audit.json"), stamp, plain(found))
 
 
 def run_benchmark(study: Study, stamp: str) -> None:

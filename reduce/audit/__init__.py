@@ -9,7 +9,7 @@ hold the assumptions, what is measured for each and how.
 
 from __future__ import annotations
 
-from .audit import SCHEMA, Audit, audit
+from .auditing import SCHEMA, Audit, audit
 from .findings import CONFIDENCE, Finding, decide
 from .material import Material
 from .normality import detrended

@@ -5,8 +5,8 @@ from __future__ import annotations
 import numpy as np
 from scipy import stats
 
-from .material import ABSCISSAS, Material
-from .perturbation import numerical_abscissa, spectral_abscissa
+from .material import Material
+from .perturbation import spectral_abscissa
 
 NORMAL = np.linspace(-3.0, 3.0, 25)  # quantiles of a normal
 SPECTRAL = 40  # states whose spectral abscissa is taken: eigenvalues are dear
@@ -29,7 +29,11 @@ def quantile_curves(m: Material) -> dict:
     return {
         "normal": NORMAL.tolist(),
         "modes": [
-            {"mode": label, "value": value[:, k].tolist(), "error": error[:, k].tolist()}
+            {
+                "mode": label,
+                "value": value[:, k].tolist(),
+                "error": error[:, k].tolist(),
+            }
             for k, label in enumerate(m.labels)
         ],
     }
@@ -37,14 +41,12 @@ def quantile_curves(m: Material) -> dict:
 
 def abscissa_curve(m: Material) -> dict:
     """Abscissas of the fast operator along the truth."""
-    x, _ = m.spread
-    every = -(-len(x) // ABSCISSAS)
-    chosen = x[::every]
-    rate = m.noise.process.rate
-    few = chosen[:: -(-len(chosen) // SPECTRAL)]
-    times = np.linspace(0, m.split.length, len(chosen), endpoint=False)
+    x = m.spread[0]
+    few = x[:: -(-len(x) // SPECTRAL)]
+    worst = spectral_abscissa(few, m.operators, m.noise.process.rate).max()
+    times = np.linspace(0, m.split.length, len(m.abscissa), endpoint=False)
     return {
         "time": times.tolist(),
-        "numerical": numerical_abscissa(chosen, m.operators, rate).tolist(),
-        "worst_spectral": float(spectral_abscissa(few, m.operators, rate).max()),
+        "numerical": m.abscissa.tolist(),
+        "worst_spectral": float(worst),
     }

@@ -21,10 +21,11 @@ MEAN = Assumption(
 )
 ENERGY = Assumption(
     name="dependence: variance",
-    sentence="The energy of the unresolved modes does not depend on the resolved state.",
+    sentence="The energy of the unresolved modes does not depend on the resolved "
+    "state.",
     closures=("coloured", "white", "residual"),
-    statistic="share of the variance of the unresolved energy that a quadratic function "
-    "of the resolved state explains",
+    statistic="share of the variance of the unresolved energy that a quadratic "
+    "function of the resolved state explains",
     setting="energy_dependence",
     sense="at most",
     meaning="the noise should be stronger in some states than in others",
@@ -35,7 +36,7 @@ ENERGY = Assumption(
 
 
 def quadratic_features(x: np.ndarray) -> np.ndarray:
-    """x and its products, less their means, in standard deviations: (time, feature)."""
+    """X and its products, less their means, in standard deviations: (time, feature)."""
     first, second = np.triu_indices(x.shape[1])
     features = np.concatenate([x, x[:, first] * x[:, second]], axis=1)
     features = features - features.mean(axis=0)

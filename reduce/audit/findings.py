@@ -42,6 +42,8 @@ class Assumption:
     logarithmic : bool
         Whether the interval is one of the logarithm: for ratios, whose errors
         are proportional to them.
+    source : str
+        What must be longer for a smaller error.
     """
 
     name: str
@@ -54,6 +56,7 @@ class Assumption:
     remedy: str
     votes: bool = True
     logarithmic: bool = False
+    source: str = "truth"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -229,7 +232,7 @@ def judge(
     else:
         spread, bound = error, threshold
     value = np.nan_to_num(value, nan=bound, posinf=bound, neginf=bound)
-    spread = np.nan_to_num(spread, nan=np.inf)
+    spread = np.where(np.isnan(spread), np.inf, spread)
     freedom = np.broadcast_to(measured.freedom, value.shape)
     # With half a degree of freedom Student's quantile is a number that says nothing.
     freedom = np.maximum(freedom, 1.0)
@@ -276,7 +279,7 @@ def judge(
         meaning=assumption.meaning,
         remedy=assumption.remedy,
         more=more,
-        settle="" if verdict != "undecided" else _settle(more),
+        settle="" if verdict != "undecided" else _settle(more, assumption.source),
         details={
             "mode": list(measured.places),
             "value": shown.tolist(),
@@ -310,8 +313,8 @@ def unknown(
     )
 
 
-def _settle(more: float) -> str:
+def _settle(more: float, source: str) -> str:
     """What would settle an open verdict."""
     if not math.isfinite(more):
-        return "a truth many times longer: this one is too short to say how long"
-    return f"about {max(more, 1.1):.2g} times the truth"
+        return f"a {source} many times longer: this one is too short to say how long"
+    return f"about {max(more, 1.1):.2g} times the {source}"

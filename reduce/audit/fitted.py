@@ -19,6 +19,17 @@ DECAY = Assumption(
     meaning="a rate that may as well be zero makes noise that never forgets",
     remedy="run a longer truth, or lower [unresolved] variance",
 )
+REPAIR = Assumption(
+    name="noise: repair",
+    sentence="The fit is a noise: it asks for no negative variance.",
+    closures=DERIVED,
+    statistic="share of the noise variance that was changed to make it positive (a "
+    "fact of this fit, not an estimate, so without an error)",
+    setting="repair",
+    sense="at most",
+    meaning="the fitted rate and the covariance contradict each other",
+    remedy="take a diagonal fit, or a longer truth",
+)
 STRUCTURE = Assumption(
     name="noise: structure",
     sentence="The unresolved modes are independent of one another, as a diagonal fit "
@@ -44,6 +55,13 @@ def decay(noise: NoiseFit, partners: np.ndarray, labels) -> Measured:
         error=noise.decay.error[first] / scale,
         places=[labels[k] for k in first],
         freedom=max(1, noise.batches - 1),
+    )
+
+
+def repair(noise: NoiseFit) -> Measured:
+    """What the fit had to change, which is known exactly."""
+    return Measured(
+        value=np.array([noise.repair]), error=np.zeros(1), places=["all modes"]
     )
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -15,12 +15,12 @@ from ..contract import Model
 from ..noise.fit import NoiseFit
 from ..operators import Operators
 from ..split import Split
-from ..stationarity import Stationarity, stationarity
 from ..statistics.correlation import correlation_scales
 from ..statistics.series import checked_series
 from .batches import FEWEST, Batches
 from .memory import LagFindings, lag_findings
 from .normality import detrended
+from .perturbation import numerical_abscissa
 from .sizes import Terms, terms_of
 
 SPREAD = 8000  # records, over all the truth, that pointwise statistics are taken from
@@ -46,6 +46,8 @@ class Material:
         Unresolved coordinates.
     records : sequence of TruthRecord
         Where full states are read from.
+    models : dict of str to model
+        Reduced models of the study, by the names of their closures.
     """
 
     model: Model
@@ -55,6 +57,7 @@ class Material:
     coupling: np.ndarray
     y: np.ndarray
     records: Sequence[TruthRecord]
+    models: Mapping[str, object]
 
     @property
     def labels(self) -> tuple[str, ...]:
@@ -99,11 +102,6 @@ class Material:
         return checked_series(self.y, "unresolved modes", self.fast_labels)
 
     @cached_property
-    def stationarity(self) -> Stationarity:
-        """Shifts and trends of the resolved modes."""
-        return stationarity(self.x, self.split.step)
-
-    @cached_property
     def lags(self) -> LagFindings:
         """Correlations of the leading unresolved units."""
         partners = self.split.unresolved.partners
@@ -129,17 +127,22 @@ class Material:
 
     @cached_property
     def spread(self) -> tuple[np.ndarray, np.ndarray]:
-        """x and y at records spread over the truth: (time, nx), (time, ny)."""
+        """X and y at records spread over the truth: (time, nx), (time, ny)."""
         flat_x = self.x.reshape(-1, self.x.shape[2])
         flat_y = self.fast.reshape(len(flat_x), -1)
         every = -(-len(flat_x) // SPREAD)
         return flat_x[::every], flat_y[::every]
 
+    @property
+    def stretch_count(self) -> int:
+        """Number of stretches: one in each batch."""
+        return max(FEWEST, self.batches.number)
+
     @cached_property
     def stretches(self) -> tuple[np.ndarray, np.ndarray]:
         """Members and records of the stretches, one after the other."""
         members, times, _ = self.split.x.shape
-        number = max(FEWEST, self.batches.number)
+        number = self.stretch_count
         # A stretch stays within one member, in the middle of its batch.
         long = max(8, min(STRETCHED // number, members * times // number, times))
         edges = np.linspace(0, members * times, number + 1)
@@ -151,11 +154,16 @@ class Material:
         return np.repeat(member, long), record.ravel()
 
     @cached_property
+    def abscissa(self) -> np.ndarray:
+        """Numerical abscissa of the fast operator at every so many of `spread`."""
+        x, rate = self.spread[0], self.noise.process.rate
+        return numerical_abscissa(x[:: -(-len(x) // ABSCISSAS)], self.operators, rate)
+
+    @cached_property
     def terms(self) -> Terms:
         """Terms of the equation along the stretches."""
         member, record = self.stretches
-        number = max(FEWEST, self.batches.number)
-        long = len(member) // number
+        long = len(member) // self.stretch_count
         states = np.concatenate(
             [
                 self.records[member[k]].read(int(record[k]), int(record[k]) + long)

@@ -7,6 +7,7 @@ the variance: half of it, but at most twelve.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 
@@ -19,6 +20,7 @@ SHARE = 0.5  # of the variance, in the units that are looked at
 UNITS = 12  # at most
 FRACTIONS = (0.25, 0.5, 1.0, 1.5, 2.0, 3.0, 4.0)  # lags, in times of the envelope
 INNOVATION_LAGS = 8
+BANDS = (0.0, 0.5, 1.0, 2.0, 4.0)  # of frequency from the peak, in decay rates
 FLOOR = 0.02  # of a correlation whose logarithm is taken
 
 DERIVED = ("coloured", "white")
@@ -46,6 +48,20 @@ LAGS = Assumption(
     meaning="no single rate describes these modes: a fit to one lag would depend on "
     "the lag",
     remedy="match integrals, not lags (the default does)",
+    votes=False,
+    logarithmic=True,
+)
+SPECTRUM = Assumption(
+    name="memory: spectrum",
+    sentence="The spectrum of the unresolved modes is that of the fitted noise.",
+    closures=DERIVED,
+    statistic="factor between the power of the modes and that of the fit, either over "
+    "the other, in the worst of four bands about the peak, up to four decay rates",
+    setting="spectrum",
+    sense="at most",
+    meaning="the noise drives the slow modes at other frequencies than the truth does",
+    remedy="keep these modes, or choose the method of the fit by what the slow modes "
+    "feel",
     votes=False,
     logarithmic=True,
 )
@@ -186,18 +202,29 @@ def lag_findings(
     )
 
 
+def complex_rate(process: OrnsteinUhlenbeck, unit: tuple[int, ...]) -> complex:
+    """Decay and frequency of a unit: it goes as ``exp(-(decay + i w) t)``.
+
+    The part of lower index is the real one; see `NoiseFit.frequency`.
+    """
+    rate = process.rate
+    if len(unit) == 1:
+        return complex(rate[unit[0], unit[0]])
+    one, other = unit
+    decay = (rate[one, one] + rate[other, other]) / 2
+    return complex(decay, (rate[other, one] - rate[one, other]) / 2)
+
+
 def exponential(
     found: LagFindings, process: OrnsteinUhlenbeck, step: float, labels
 ) -> Measured:
     """Root mean square difference from the fit; noise in its square is taken out."""
-    fitted = np.empty(found.value.shape, dtype=complex)
-    for k, unit in enumerate(found.units):
-        # A pair turns as exp(-(decay + i w) t); see NoiseFit.frequency.
-        rate = complex(process.rate[unit[0], unit[0]])
-        if len(unit) == 2:
-            skew = process.rate[unit[1], unit[0]] - process.rate[unit[0], unit[1]]
-            rate += 1j * skew / 2
-        fitted[k] = np.exp(-rate * found.lags[k] * step)
+    fitted = np.array(
+        [
+            np.exp(-complex_rate(process, unit) * lags * step)
+            for unit, lags in zip(found.units, found.lags, strict=True)
+        ]
+    )
 
     def misfit(rho):
         return np.mean(np.abs(rho - fitted) ** 2, axis=1)
@@ -228,6 +255,54 @@ def lag_consistency(found: LagFindings, labels) -> Measured:
 
     ratio = np.exp(np.abs(factor(found.value)))
     return found.measured(ratio, ratio * found.error(factor), labels)
+
+
+def spectrum(
+    y: np.ndarray, step: float, process: OrnsteinUhlenbeck, units, labels
+) -> Measured:
+    """Power against that of the fit, in the worst of four bands of each unit.
+
+    Sampled at steps h, a process with the propagator ``p = exp(-rate h)`` has the
+    spectrum ``(1 - |p|^2) / |1 - p exp(-i w h)|^2`` (D. L. Gilman, F. J. Fuglister
+    and J. M. Mitchell 1963, J. Atmos. Sci. 20:182, for a real p): what is beyond
+    the highest frequency is folded in. Values of a periodogram are independent
+    exponentials times the spectrum, so the mean of n errs by ``1 / sqrt(n)``, of
+    the whole series if it is complex and of half of it if it is real.
+    """
+    centred = y - y.mean(axis=(0, 1))
+    members, times, _ = centred.shape
+    frequency = 2 * np.pi * np.fft.fftfreq(times, step)
+    value, error = [], []
+    for unit in units:
+        mode = centred[:, :, unit[0]].astype(complex)
+        if len(unit) == 2:
+            mode += 1j * centred[:, :, unit[1]]
+        power = np.mean(np.abs(np.fft.fft(mode, axis=1)) ** 2, axis=0) / times
+        power /= np.mean(np.abs(mode) ** 2)
+        rate = complex_rate(process, unit)
+        onward = np.exp(-rate * step)
+        folded = np.abs(1 - onward * np.exp(-1j * frequency * step)) ** 2
+        ratio = power * folded / (1 - np.abs(onward) ** 2)
+        # Of the two ways round, the shorter; the mean was taken off at zero.
+        away = np.angle(np.exp(1j * (frequency + rate.imag) * step)) / step
+        away = np.abs(away) / rate.real
+        rows = []
+        for low, high in pairwise(BANDS):
+            inside = (away >= low) & (away < high) & (frequency != 0)
+            count = inside.sum() * members / (1 if len(unit) == 2 else 2)
+            if count >= 8:  # the mean of fewer is far from a normal
+                mean = ratio[inside].mean()
+                rows.append((abs(np.log(mean)), 1 / np.sqrt(count)))
+        beyond = [off - 2 * spread for off, spread in rows]
+        off, spread = rows[int(np.argmax(beyond))] if rows else (0.0, np.inf)
+        value.append(np.exp(off))
+        error.append(np.exp(off) * spread)
+    return Measured(
+        value=np.array(value),
+        error=np.array(error),
+        places=[labels[unit[0]] for unit in units],
+        tries=len(BANDS) - 1,
+    )
 
 
 def whiteness(

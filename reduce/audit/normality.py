@@ -13,7 +13,8 @@ NOISY = ("residual", "coloured", "white")
 
 TAILS = Assumption(
     name="normality: tails",
-    sentence="What the unresolved modes do to the resolved ones is Gaussian: its tails.",
+    sentence="What the unresolved modes do to the resolved ones is Gaussian: its "
+    "tails.",
     closures=NOISY,
     statistic="kurtosis of the coupling less its part linear in the resolved state "
     "(3 for a normal)",
@@ -63,8 +64,8 @@ UNRESOLVED = Assumption(
 )
 FOURTH = Assumption(
     name="fourth moments",
-    sentence="Products of unresolved modes vary as much as those of the fitted Gaussian "
-    "noise.",
+    sentence="Products of unresolved modes vary as much as those of the fitted "
+    "Gaussian noise.",
     closures=("coloured", "white"),
     statistic="|ln| of the variance of the quadratic coupling over that under the "
     "fitted noise (0 for a normal)",
@@ -130,27 +131,26 @@ def shape(
     return tails, symmetry
 
 
+def mardia_ratio(rows: np.ndarray) -> float:
+    """Mardia's kurtosis of rows in p dimensions, over ``p (p + 2)`` of a normal."""
+    width = rows.shape[1]
+    rows = rows - rows.mean(axis=0)
+    inverse = np.linalg.pinv(rows.T @ rows / len(rows))
+    lengths = np.sum((rows @ inverse) * rows, axis=1)
+    return float(np.mean(lengths**2) / (width * (width + 2)))
+
+
 def joint(series: np.ndarray, step: float) -> Measured:
-    """Mardia's kurtosis over its value ``p (p + 2)`` for a normal in p dimensions.
+    """Mardia's kurtosis over that of a normal (K. V. Mardia 1970, Biometrika 57:519).
 
     The record is whitened anew for each batch that is left out.
     """
     batches = Batches.of(series, step, "normality")
     flat = series.reshape(-1, series.shape[-1])
-    flat = flat - flat.mean(axis=0)
-    width = flat.shape[1]
-
-    def ratio(rows):
-        rows = rows - rows.mean(axis=0)
-        inverse = np.linalg.pinv(rows.T @ rows / len(rows))
-        lengths = np.sum((rows @ inverse) * rows, axis=1)
-        return np.mean(lengths**2) / (width * (width + 2))
-
-    value = ratio(flat)
-    error = np.inf
+    value, error = mardia_ratio(flat), np.inf
     if batches.number:
         parts = np.array_split(np.arange(len(flat)), batches.number)
-        left = [ratio(np.delete(flat, part, axis=0)) for part in parts]
+        left = [mardia_ratio(np.delete(flat, part, axis=0)) for part in parts]
         error = batches.widening * np.sqrt((len(parts) - 1) * np.var(left))
     return Measured(
         value=np.array([value]),

@@ -26,6 +26,7 @@ KAPPA = Assumption(
     "expect variances to be off by factors",
     remedy="keep the modes that the resolved ones turn or stretch most, or fewer "
     "resolved modes of large amplitude",
+    logarithmic=True,
 )
 FORCING = Assumption(
     name="perturbation: forcing",
@@ -38,6 +39,7 @@ FORCING = Assumption(
     meaning="the unresolved modes are driven, not noise: expect variances to be off "
     "by factors",
     remedy="keep the modes that are driven",
+    logarithmic=True,
 )
 ABSCISSA = Assumption(
     name="perturbation: growth",
@@ -147,7 +149,7 @@ def growth_share(abscissa: np.ndarray, batches: Batches) -> Measured:
     value, error = batches.jackknife(*batches.means(positive), lambda mean: mean)
     # No event in n independent values is a share of up to 3 / n (the rule of three).
     least = 1.5 / max(1, batches.number)
-    if value[0] in (0.0, 1.0):
+    if np.isclose(value[0], np.round(value[0])):
         error = np.maximum(error, least / 2) if batches.number else error
     return Measured(
         value=value,

@@ -42,8 +42,9 @@ def separation(x: np.ndarray, unexplained: np.ndarray, step: float, labels) -> M
     ``2 t / T`` (one-sided integral time t, record T), and with it the integral up
     to three times t by ``8 t / T`` of itself, to first order (F. H. C. Marriott
     and J. A. Pope 1954, Biometrika 41:390); it is put back. The logarithm of the
-    ratio is closer to a normal than the ratio, and its error rests on about ``T /
-    (4 t)`` independent values. Both times end at the same correlation of 0.05.
+    ratio is closer to a normal than the ratio, and its error has the degrees of
+    freedom of a variance that is known as well, ``T / (6 t)``. Both times end at the
+    same correlation of 0.05.
     """
     slow, fast = integral_time(x, step), integral_time(unexplained, step)
     length = x.shape[0] * x.shape[1] * step
@@ -60,7 +61,7 @@ def separation(x: np.ndarray, unexplained: np.ndarray, step: float, labels) -> M
     return Measured(
         value=ratio,
         error=ratio * np.hypot(spread, other),
-        freedom=length / (4 * slowest),
+        freedom=length / (6 * slowest),
         places=labels,
         more=missing,
     )

@@ -22,6 +22,7 @@ COUPLING = Assumption(
     sense="at most",
     meaning="the truncation drops a term as large as those that it keeps",
     remedy="take a closure that stands something in for it",
+    logarithmic=True,
 )
 REPLACED = Assumption(
     name="sizes: replaced term",
@@ -34,17 +35,20 @@ REPLACED = Assumption(
     meaning="what is kept of the unresolved dynamics outweighs what is called noise",
     remedy="look at the size of the perturbation, which predicts better",
     votes=False,
+    logarithmic=True,
 )
 QUICK = Assumption(
     name="sizes: replaced time",
     sentence="The term that noise replaces is quicker than the modes that it moves.",
     closures=("coloured", "white"),
-    statistic="correlation time of B222(y, y) over that of y, both weighted by variance",
+    statistic="correlation time of B222(y, y) over that of y, both weighted by "
+    "variance",
     setting="replaced_time",
     sense="at most",
     meaning="the noise that moves the unresolved modes is not white to them",
     remedy="none is needed while they are quick beside the resolved modes",
     votes=False,
+    logarithmic=True,
 )
 
 

@@ -105,40 +105,48 @@ def recommendation(
             f"use {holds[0]}, with {cutoff}{others}: every assumption that it leans on "
             "holds"
         )
-    open_ones = [name for name in order if known[name].verdict == "undecided"]
-    if open_ones:
-        name = open_ones[0]
-        waiting = [
-            f
-            for f in findings
-            if f.votes and name in f.closures and f.verdict == "undecided"
-        ]
-        more = max(f.more for f in waiting)
-        names = ", ".join(f.name for f in waiting)
-        if not math.isfinite(more):
-            how = "; ".join(dict.fromkeys(f.settle for f in waiting))
-            return f"no closure can be recommended yet; for {name}: {names}: {how}"
-        return (
-            f"no closure can be recommended yet: {name} fails nowhere with {cutoff}, but "
-            f"{names} {'is' if len(waiting) == 1 else 'are'} open; collect about "
-            f"{max(more, 1.1):.2g} times the truth"
-        )
     if not order:
         return "no closure whose assumptions are known is in use"
-    # All fail: what would have to change for the one that fails least.
-    failing = {
-        name: [
-            f
-            for f in findings
-            if f.votes and name in f.closures and f.verdict == "fails"
-        ]
-        for name in order
-    }
-    name = min(order, key=lambda n: len(failing[n]))
-    changes = "; ".join(dict.fromkeys(f.remedy for f in failing[name]))
+    failing = {name: _named(findings, name, "fails") for name in order}
+    open_ones = [name for name in order if not failing[name]]
+    words = []
+    if open_ones:
+        words.append(_waiting(open_ones[0], findings, cutoff))
+    broken = [name for name in order if failing[name]]
+    if broken:
+        # What would have to change for the one that fails least.
+        name = min(broken, key=lambda n: len(failing[n]))
+        changes = "; ".join(dict.fromkeys(f.remedy for f in failing[name]))
+        words.append(
+            f"{', '.join(broken)} {'is' if len(broken) == 1 else 'are'} not to be "
+            f"trusted with {cutoff}; {name} fails least "
+            f"({', '.join(f.name for f in failing[name])}): {changes}"
+        )
+    return ". ".join(words)
+
+
+def _named(findings, closure, verdict):
+    """Findings that vote on a closure with a verdict."""
+    return [
+        f
+        for f in findings
+        if f.votes and closure in f.closures and f.verdict == verdict
+    ]
+
+
+def _waiting(name, findings, cutoff):
+    """What an open verdict waits for."""
+    waiting = _named(findings, name, "undecided")
+    names = ", ".join(f.name for f in waiting)
+    unknown = [
+        f for f in waiting if not math.isfinite(f.more) or "truth" not in f.settle
+    ]
+    if unknown:
+        how = "; ".join(dict.fromkeys(f.settle for f in unknown))
+        return f"no closure can be recommended yet; for {name}: {names}: {how}"
+    more = max(f.more for f in waiting)
     return (
-        f"no closure is to be trusted with {cutoff}; {name} fails least "
-        f"({', '.join(f.name for f in failing[name])}): {changes}"
+        f"no closure can be recommended yet: {name} fails nowhere with {cutoff}, but "
+        f"{names} {'is' if len(waiting) == 1 else 'are'} open; collect about "
+        f"{max(more, 1.1):.2g} times the truth"
     )
-
-

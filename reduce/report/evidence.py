@@ -39,8 +39,8 @@ class Evidence:
         The truth divided.
     noise : NoiseFit
         The fitted noise.
-    findings : list of dict
-        Those of the audit, as `eddyshed.reduce.audit.Finding`.
+    audit : dict
+        As `eddyshed.reduce.audit.Audit`, field by field.
     truth : Summary
         Statistics of the resolved modes of the truth.
     truth_cost : float
@@ -61,7 +61,7 @@ class Evidence:
     flow: Flow | None
     split: Split
     noise: NoiseFit
-    findings: list[dict[str, Any]]
+    audit: dict[str, Any]
     truth: Summary
     truth_cost: float
     closures: list[dict[str, Any]]
@@ -121,7 +121,7 @@ def gather(study: Study) -> Evidence:
         flow=None if ocean.waves is None else read_flow(study.path("flow.h5")),
         split=read_split(study),
         noise=read_noise(study),
-        findings=read_json(study.path("audit.json"))["findings"],
+        audit=read_json(study.path("audit.json")),
         truth=summary_of(benchmark["truth"]["summary"]),
         truth_cost=benchmark["truth"]["cost"],
         closures=benchmark["closures"],

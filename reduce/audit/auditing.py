@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 
@@ -16,6 +17,7 @@ from . import (
     balance,
     dependence,
     fitted,
+    limit,
     memory,
     normality,
     perturbation,
@@ -25,7 +27,7 @@ from . import (
 )
 from .curves import abscissa_curve, quantile_curves
 from .findings import Assumption, Finding, Measured, judge, unknown
-from .material import ABSCISSAS, Material
+from .material import Material
 from .verdicts import ClosureVerdict, closure_verdicts, recommendation
 
 SCHEMA = 2  # of audit.json; see Audit
@@ -136,15 +138,20 @@ def audit(
 
 
 def _never_fails(finding: Finding) -> Finding:
-    """Too short a record is no verdict on an assumption: it is undecided."""
-    if finding.verdict == "fails" and finding.name in (
-        record.LENGTH.name,
-        record.SAMPLE.name,
-    ):
-        more = finding.threshold / finding.value
-        settle = f"about {max(more, 1.1):.2g} times the truth"
-        return replace(finding, verdict="undecided", more=more, settle=settle)
-    return finding
+    """Too short a record is no verdict on an assumption: it is undecided.
+
+    Its value grows with the record, while the relative error falls with the root.
+    """
+    lengths = (record.LENGTH.name, record.SAMPLE.name)
+    known = math.isfinite(finding.value) and math.isfinite(finding.error)
+    if finding.name not in lengths or finding.verdict == "holds" or not known:
+        return finding
+    reach = finding.quantile * finding.error / finding.value
+    more = 1.0
+    while finding.value * more * math.exp(-reach / math.sqrt(more)) < finding.threshold:
+        more *= 1.02
+    settle = f"about {max(more, 1.1):.2g} times the truth"
+    return replace(finding, verdict="undecided", more=more, settle=settle)
 
 
 def _or_empty(make):
@@ -169,8 +176,8 @@ def _groups(m: Material, rng: np.random.Generator) -> Iterator[Group]:
     yield (
         (record.LENGTH, record.SHIFT, record.SPREAD, record.TREND),
         lambda: [
-            record.length(m.stationarity, labels),
-            *record.shifts(m.stationarity, labels),
+            record.length(m.x, step, labels),
+            *record.shifts(m.x, step, labels),
         ],
     )
     yield (
@@ -203,10 +210,17 @@ def _groups(m: Material, rng: np.random.Generator) -> Iterator[Group]:
             )
         ],
     )
-    yield (fitted.DECAY,), lambda: [_decay(m, partners)]
+    yield (
+        (fitted.DECAY, fitted.REPAIR),
+        lambda: [_decay(m, partners), fitted.repair(m.noise)],
+    )
     yield (record.SAMPLE,), lambda: [_sample(m, partners)]
     yield (balance.STABILITY,), lambda: [_stability(m)]
     yield (sizes.COUPLING,), lambda: [_coupling(m)]
+    yield (
+        (limit.LIMIT,),
+        lambda: [limit.limit_distance(m.models, m.x, step, _longest(m), labels, rng)],
+    )
     # What follows explains, and does not vote.
     yield (normality.JOINT,), lambda: [normality.joint(m.unexplained, step)]
     yield (
@@ -215,9 +229,10 @@ def _groups(m: Material, rng: np.random.Generator) -> Iterator[Group]:
     )
     yield (dependence.ENERGY,), lambda: [_energy(m)]
     yield (
-        (memory.EXPONENTIAL, memory.LAGS, memory.WHITENESS),
+        (memory.EXPONENTIAL, memory.SPECTRUM, memory.LAGS, memory.WHITENESS),
         lambda: [
             memory.exponential(m.lags, m.noise.process, step, m.fast_labels),
+            memory.spectrum(m.fast, step, m.noise.process, m.lags.units, m.fast_labels),
             memory.lag_consistency(m.lags, m.fast_labels),
             memory.whiteness(
                 m.fast, step, m.noise.process, m.lags.units, m.fast_labels
@@ -307,31 +322,23 @@ def _energy(m: Material) -> Measured:
 
 
 def _growth(m: Material) -> Measured:
-    x = m.spread[0]
-    chosen = x[:: -(-len(x) // ABSCISSAS)]
-    rate = m.noise.process.rate
-    return perturbation.growth_share(
-        perturbation.numerical_abscissa(chosen, m.operators, rate), m.batches
-    )
+    return perturbation.growth_share(m.abscissa, m.batches)
 
 
 def _replaced(m: Material) -> list[Measured]:
     replaced, modulated = m.terms.fast["B222(y, y)"], m.terms.fast["2 B212(x, y)"]
+    varied = (replaced.std(axis=0) > 0) & (modulated.std(axis=0) > 0)
+    if not varied.any():
+        message = "the unresolved modes do not interact, or x does not modulate them"
+        raise DataError(message)
     size = perturbation.ratio_of_sizes(replaced, modulated, m.batches, "all modes")
-    member, when = m.stretches
-    number = len(member) // int(np.sum(np.diff(when, append=-2) != 1) and _run(when))
-    varied = replaced.std(axis=0) > 0
-    y = m.fast[member, when]
     time = sizes.replaced_time(
-        replaced[:, varied], y[:, varied], m.split.step, number
+        replaced[:, varied],
+        m.fast[m.stretches][:, varied],
+        m.split.step,
+        m.stretch_count,
     )
     return [size, time]
-
-
-def _run(when):
-    """Length of a stretch."""
-    ends = np.flatnonzero(np.diff(when) != 1)
-    return int(ends[0]) + 1 if ends.size else len(when)
 
 
 def _structure(m: Material, partners) -> Measured:
