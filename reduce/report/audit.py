@@ -75,6 +75,7 @@ def _group(finding):
         words.append(sentence(f"What would help: {finding['remedy']}"))
     elif finding["verdict"] == "undecided" and finding["value"] is None:
         words.append(sentence(f"Not known: {finding['settle']}"))
+        words.append(sentence(f"If it fails: {finding['meaning']}"))
     elif finding["verdict"] == "undecided":
         words.append(
             f"The error bar crosses the threshold; {finding['settle']} would settle "
