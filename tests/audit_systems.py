@@ -301,7 +301,7 @@ SYSTEMS = {
     "separation": (separated, True, 240),
     "normality: tails": (tails, True, 1000),
     "normality: symmetry": (symmetry, True, 800),
-    "normality: all together": (joint, True, 1000),
+    "normality: all together": (joint, True, 2000),
     "normality: unresolved modes": (unresolved, True, 1000),
     "fourth moments": (fourth, True, 400),
     "dependence: mean": (dependent, True, 400),

@@ -126,8 +126,8 @@ def test_joint_kurtosis_of_six_points():
 
 
 def test_joint_kurtosis_of_normals_has_its_mean():
-    # Exactly p (p + 2) (n - 1) / (n + 1) for n normal rows (Mardia 1970): 14.940 for 500
-    # in three dimensions, with a standard deviation of 0.49.
+    # Exactly p (p + 2) (n - 1) / (n + 1) for n normal rows (Mardia 1970): 14.940 for
+    # 500 in three dimensions, with a standard deviation of 0.49.
     rng = RNG(5)
     found = [normality.mardia_ratio(rng.standard_normal((500, 3))) for _ in range(200)]
     spread = 0.489897949 / 15 / np.sqrt(200)
