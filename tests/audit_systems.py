@@ -269,6 +269,7 @@ def _halves(shift, factor, length, rng):
     half = len(x) // 2
     x[half:] *= np.sqrt(factor)
     x[half:] += shift
+    x -= x.mean(axis=0)  # as in a divided truth
     return record.shifts(x[np.newaxis], STEP, NAMES[:2])
 
 

@@ -1,5 +1,6 @@
 """Verdicts follow from intervals, and are wrong no more often than they say."""
 
+import dataclasses
 import math
 
 import numpy as np
@@ -26,12 +27,12 @@ MOST = Assumption(
 )
 
 
-def judged(values, errors, threshold=1.0, **fields):
+def judged(values, errors, threshold=1.0, assumption=MOST, **fields):
     places = [f"p{k}" for k in range(len(values))]
     measured = Measured(
         value=np.array(values), error=np.array(errors), places=places, **fields
     )
-    return judge(MOST, measured, threshold, ("coloured",))
+    return judge(assumption, measured, threshold, ("coloured",))
 
 
 # --- The verdict ------------------------------------------------------------
@@ -96,6 +97,16 @@ def test_the_worst_place_is_named_and_only_closures_in_use():
     assert (found.value, found.error) == (3.0, 0.2)
     assert found.details["value"] == [0.2, 3.0, 0.5]
     assert found.settle == ""
+
+
+def test_at_least_is_the_other_way_round():
+    least = dataclasses.replace(MOST, sense="at least")
+    found = judged([0.2, 3.0, 0.5], [0.1, 0.2, 0.1], assumption=least)
+    assert (found.verdict, found.where) == ("fails", "p0")
+    found = judged([2.0, 3.0, 1.1], [0.1, 0.2, 0.1], assumption=least)
+    assert (found.verdict, found.where) == ("undecided", "p2")
+    found = judged([2.0, 3.0], [0.1, 0.2], assumption=least)
+    assert (found.verdict, found.where) == ("holds", "p0")
 
 
 def test_it_holds_only_if_it_holds_everywhere():

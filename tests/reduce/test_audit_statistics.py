@@ -50,6 +50,11 @@ def test_a_wave_turns_the_way_that_the_fit_says():
     spectrum = memory.spectrum(y, STEP, process, found.units, NAMES)
     assert shape.value[0] < 0.05
     assert abs(np.log(spectrum.value[0])) < 4 * spectrum.error[0] / spectrum.value[0]
+    # A fit four times too quick lacks a factor of four at the peak, where that is.
+    decay = np.array([[1.2, -0.9], [0.9, 1.2]])
+    quick = OrnsteinUhlenbeck(rate=decay, covariance=np.eye(2))
+    far = memory.spectrum(y, STEP, quick, found.units, NAMES)
+    assert 3 < far.value[0] < 5
     other = OrnsteinUhlenbeck(rate=rate.T, covariance=np.eye(2))
     assert memory.exponential(found, other, STEP, NAMES).value[0] > 0.4
     assert memory.spectrum(y, STEP, other, found.units, NAMES).value[0] > 4
@@ -271,3 +276,14 @@ def test_pairs_count_as_fitted_together():
     paired = structure(y, 4, np.array([1, 0, -1]), batches)
     assert apart.value[0] > 0.3
     assert abs(paired.value[0]) < 3 * paired.error[0]
+
+
+def test_independent_modes_share_nothing_on_average():
+    # Squares of sample covariances would give a share of about 0.2 here.
+    rng = RNG(14)
+    shares = []
+    for _ in range(60):
+        y = red([1] * 6, 60, rng)
+        batches = Batches.of(y[np.newaxis], STEP, "test")
+        shares.append(structure(y, 4, np.full(6, -1), batches).value[0])
+    assert abs(np.mean(shares)) < 4 * np.std(shares) / np.sqrt(60)
