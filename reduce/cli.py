@@ -306,7 +306,7 @@ def _check(options):
     document = _read(options)
     from eddyshed.solver.forecast import forecast_run
 
-    from .stages import preflight
+    from .preflight import preflight
     from .study import Study, free_bytes
     from .tables import forecast_json, forecast_table
     from .truth_stage import refuse_full_disk
@@ -340,7 +340,8 @@ def _noise(options):
 def _stage(options):
     """Carry out a stage, or all of them."""
     document = _read(options)
-    from .stages import STAGES, preflight
+    from .preflight import preflight
+    from .stages import STAGES
     from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
     from .tables import stage_json, stage_table, truth_table
 

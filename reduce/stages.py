@@ -5,108 +5,41 @@ from __future__ import annotations
 import logging
 import shutil
 from dataclasses import replace
-from typing import Any
 
 import numpy as np
 
-from eddyshed.solver.boxes import box_averages
 from eddyshed.solver.build import build_ocean
 from eddyshed.solver.config import fingerprint
-from eddyshed.solver.errors import ContractError, DataError
-from eddyshed.solver.exponential import stepper_of
+from eddyshed.solver.errors import ContractError
 from eddyshed.solver.forecast import seconds_per_step
-from eddyshed.solver.hooks import Hook
 from eddyshed.solver.progress import progress
 from eddyshed.solver.randomness import stream
-from eddyshed.solver.truth import initial_state, random_forcing_of
 
-from .audit import audit
-from .bases.fourier import kept_coordinates
+from .audit import Material, audit
 from .bases.spectrum import spectrum_notes
 from .benchmark import compare, run_closure, truth_side
 from .closures import closure
 from .closures.data import ClosureData
-from .contract import check_model
 from .coupling import coupling, coupling_sizes, covariance
 from .diffusion import DiffusionModel
 from .flow.measure import measure_flow
 from .flow.parts import write_flow
-from .homogenised import LARGEST
-from .inner_products import in_product
 from .measured import measured_names, measured_statistics
 from .member_blocks import check_series_memory
 from .noise.fit import NoiseFit
 from .noise.of_split import fit_noise
 from .operators import Operators, galerkin
+from .preflight import model_of
 from .reduced import ReducedModel
-from .settings import EofSettings, FourierSettings, StudyConfig
+from .settings import EofSettings, StudyConfig
 from .simulated import load, save
-from .split import Split, prescribed_basis, split_truth, unresolved_series
+from .split import Split, split_truth, unresolved_series
 from .stationarity import stationarity, stationarity_notes
 from .store import plain, read_one, write_all, write_json
 from .study import Stage, Study, fingerprint_of
 from .truth_stage import run_truth
 
 log = logging.getLogger(__name__)
-
-
-def model_of(config: StudyConfig) -> Any:
-    """Build the ocean of a study, seen in the inner product of its reduction.
-
-    Raises
-    ------
-    DataError
-        If a pattern does not fit the grid, or the product the ocean.
-    """
-    product = getattr(config.resolved, "inner_product", "energy")
-    return in_product(build_ocean(config), product)
-
-
-def preflight(config: StudyConfig) -> None:
-    """Refuse now what would fail only after the truth was run.
-
-    Parameters
-    ----------
-    config : StudyConfig
-        The config.
-
-    Raises
-    ------
-    DataError
-        If a pattern, a band, a box or the basis does not fit the grid, or the inner
-        product the ocean.
-    ContractError
-        If a user's own model or basis breaks its contract.
-    """
-    ocean = model_of(config)
-    if isinstance(config.ocean, Hook):
-        check_model(ocean.model)
-    initial_state(config, ocean, config.ensemble.members - 1)
-    random_forcing_of(config, ocean, 0)
-    box_averages(ocean, config.output.boxes)
-    stepper_of(config.time.scheme, ocean, config.time.step)
-    resolved = config.resolved
-    if isinstance(resolved, FourierSettings):
-        kept = int(kept_coordinates(resolved, ocean.waves).sum())
-    elif isinstance(resolved, EofSettings):
-        kept = resolved.modes
-    else:
-        kept = prescribed_basis(resolved, ocean).n_modes
-    if kept >= ocean.size:
-        message = (
-            f"[resolved] modes = {kept}, but the grid has {ocean.size} coordinates and "
-            "some must be left unresolved; ask for fewer"
-        )
-        raise DataError(message)
-    white = [name for name in config.closures.use if name.startswith("white")]
-    if white and kept > LARGEST:
-        message = (
-            f"[closures] {white[0]}: {kept} resolved modes make a cubic of {kept}^4 "
-            f"coefficients, and it is made for at most {LARGEST} modes; keep fewer, or "
-            "leave it out of [closures] use"
-        )
-        raise DataError(message)
-    check_series_memory(config, kept)
 
 
 def run_flow(study: Study, stamp: str) -> None:
@@ -262,12 +195,26 @@ def read_model(study: Study, name: str) -> ReducedModel | DiffusionModel:
 
 def run_audit(study: Study, stamp: str) -> None:
     """Test the assumptions."""
-    split = read_split(study)
-    rng = stream(study.config.seed, 0, "audit")
-    findings = audit(
-        study.config.audit, split, coupling(split, read_operators(study)), rng
+    config, records = study.config, study.records()
+    model, split = model_of(config), read_split(study)
+    operators = read_operators(study)
+    material = Material(
+        model=model,
+        split=split,
+        operators=operators,
+        noise=read_noise(study),
+        coupling=coupling(split, operators),
+        y=unresolved_series(split, model, records, config.limits.memory),
+        records=records,
+        models={
+            name: read_model(study, name)
+            for name in ("coloured", "white")
+            if name in config.closures.use
+        },
     )
-    write_json(study.path("audit.json"), stamp, {"findings": plain(findings)})
+    rng = stream(config.seed, 0, "audit")
+    found = audit(config.audit, material, config.closures.use, rng)
+    write_json(study.path("audit.json"), stamp, plain(found))
 
 
 def run_benchmark(study: Study, stamp: str) -> None:

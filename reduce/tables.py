@@ -214,23 +214,33 @@ def _reduce(study):
 
 
 def _audit(study):
-    rows = [["assumption", "verdict", "value", "threshold", "worst at"]]
-    after = []
-    for finding in read_json(study.path("audit.json"))["findings"]:
-        rows.append(
+    found = read_json(study.path("audit.json"))
+    parts = []
+    for votes, title in ((True, "assumption"), (False, "explanatory")):
+        rows = [[title, "verdict", "value", "threshold", "worst at"]]
+        rows += [
             [
                 finding["name"],
                 finding["verdict"],
-                pair(finding["value"], finding["error"]),
+                pair(finding["value"], finding["error"])
+                if finding["value"] is not None
+                else "unknown",
                 f"{finding['sense']} {finding['threshold']:g}",
-                finding["where"],
+                finding["where"] or "-",
             ]
-        )
-        if finding["verdict"] == "fails":
-            after.append(f"{finding['name']} fails: {finding['meaning']}")
-        elif finding["verdict"] == "undecided":
-            after.append(f"{finding['name']} undecided: {finding['settle']} settles it")
-    return "\n".join([columns(rows), *after])
+            for finding in found["findings"]
+            if finding["votes"] == votes
+        ]
+        parts.append(columns(rows))
+    verdicts = [["closure", "its assumptions", "first of the reasons"]]
+    for entry in found["closures"]:
+        reasons = entry["reasons"]
+        more = f" (and {len(reasons) - 1} more)" if reasons[1:] else ""
+        first = f"{reasons[0]}{more}" if reasons else "-"
+        verdicts.append([entry["closure"], entry["verdict"], first])
+    parts.append(columns(verdicts))
+    parts.append(f"recommended: {found['recommendation']}")
+    return "\n\n".join(parts)
 
 
 def _benchmark(study):

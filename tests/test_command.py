@@ -104,14 +104,14 @@ def test_only_what_depends_on_a_change_is_run_again(study, tmp_path):
     copy = tmp_path / "tiny"
     subprocess.run(["cp", "-a", folder, copy], check=True)
     result = eddyshed(
-        "study", TINY, "--runs", tmp_path, "--set", "audit.separation=2.5"
+        "study", TINY, "--runs", tmp_path, "--set", "audit.separation=2.25"
     )
     assert result.returncode == 0
     for line in ("truth: up to date", "reduce: up to date", "benchmark: up to date"):
         assert line in result.stderr
     for line in ("audit: running", "report: running"):
         assert line in result.stderr
-    assert "# with --set audit.separation=2.5" in (copy / "config.toml").read_text()
+    assert "# with --set audit.separation=2.25" in (copy / "config.toml").read_text()
 
 
 def test_two_runs_are_the_same_to_the_bit(study, tmp_path):

@@ -12,10 +12,11 @@ from eddyshed.solver.record import TruthRecord
 from ..flow.parts import Flow, read_flow
 from ..measured import measured_rows
 from ..noise.fit import NoiseFit
+from ..preflight import model_of
 from ..scores import Summary
 from ..simulated import load
 from ..split import Split
-from ..stages import model_of, read_noise, read_split, simulation_stamp
+from ..stages import read_noise, read_split, simulation_stamp
 from ..statistics.estimate import Estimate
 from ..store import read_json
 from ..study import Study
@@ -39,8 +40,8 @@ class Evidence:
         The truth divided.
     noise : NoiseFit
         The fitted noise.
-    findings : list of dict
-        Those of the audit, as `eddyshed.reduce.audit.Finding`.
+    audit : dict
+        As `eddyshed.reduce.audit.Audit`, field by field.
     truth : Summary
         Statistics of the resolved modes of the truth.
     truth_cost : float
@@ -61,7 +62,7 @@ class Evidence:
     flow: Flow | None
     split: Split
     noise: NoiseFit
-    findings: list[dict[str, Any]]
+    audit: dict[str, Any]
     truth: Summary
     truth_cost: float
     closures: list[dict[str, Any]]
@@ -121,7 +122,7 @@ def gather(study: Study) -> Evidence:
         flow=None if ocean.waves is None else read_flow(study.path("flow.h5")),
         split=read_split(study),
         noise=read_noise(study),
-        findings=read_json(study.path("audit.json"))["findings"],
+        audit=read_json(study.path("audit.json")),
         truth=summary_of(benchmark["truth"]["summary"]),
         truth_cost=benchmark["truth"]["cost"],
         closures=benchmark["closures"],

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from .figures_audit import abscissa, quantiles, terms
 from .figures_flow import energy, flow, over_time, spectrum
 from .figures_models import correlations, distributions, noise, noise_correlations
 from .figures_scales import fluxes, spectra
 
 __all__ = [
+    "abscissa",
     "correlations",
     "distributions",
     "energy",
@@ -15,6 +17,8 @@ __all__ = [
     "noise",
     "noise_correlations",
     "over_time",
+    "quantiles",
     "spectra",
     "spectrum",
+    "terms",
 ]

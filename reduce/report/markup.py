@@ -181,6 +181,11 @@ def listed(items: Sequence[str]) -> str:
     return f"{', '.join(items[:-1])} and {items[-1]}"
 
 
+def sentence(words: str) -> str:
+    """Begin with a capital and end with a full stop."""
+    return f"{words[:1].upper()}{words[1:].rstrip('.')}."
+
+
 def paragraphs(*parts: str) -> str:
     """Paragraphs of HTML."""
     return "\n".join(f"<p>{part}</p>" for part in parts)

@@ -18,18 +18,18 @@ from ..scores import SAMPLING
 from ..settings import StudyConfig
 from ..stages import STAGES
 from ..study import Study, fingerprint_of
+from .audit import audit
 from .evidence import Evidence, gather
 from .flow import flow, in_words, split
 from .markup import (
     Note,
-    listed,
     number,
     page,
     paragraphs,
     section,
+    sentence,
     span,
     text,
-    unbroken,
 )
 from .models import models
 from .noise import noise
@@ -158,8 +158,8 @@ def verdict(note: Note, evidence: Evidence) -> str:
                     f"{found['within_tolerance']} of {count}" if count else "–",
                     f"{_times(evidence.truth_cost / entry['cost'])} ×",
                 ],
-                f"<p>{text(_sentence(entry['what']))}</p>"
-                f"<p>{text(_sentence(found['reason']))}</p>",
+                f"<p>{text(sentence(entry['what']))}</p>"
+                f"<p>{text(sentence(found['reason']))}</p>",
             ]
         )
     return section(
@@ -208,47 +208,6 @@ def verdict(note: Note, evidence: Evidence) -> str:
             "errors; <em>undecided</em> any other; <em>at rest</em> one without noise "
             "that comes to rest, of which only the means are compared; <em>failed</em> "
             "one that blew up, or came to rest in spite of its noise."
-        ),
-    )
-
-
-def audit(note: Note, evidence: Evidence) -> str:
-    """What the assumptions come to."""
-    groups = []
-    for finding in evidence.findings:
-        words = [
-            f"{finding['assumption']} Measured: {finding['statistic']}. Leaning on "
-            f"it: {listed(finding['closures'])}."
-        ]
-        if finding["verdict"] == "fails":
-            words.append(_sentence(f"It fails, so {finding['meaning']}"))
-        elif finding["verdict"] == "undecided":
-            words.append(
-                f"The error bar crosses the threshold; {finding['settle']} would "
-                f"settle it. If it fails: {finding['meaning']}."
-            )
-        groups.append(
-            [
-                [
-                    text(finding["name"]),
-                    f"<strong>{text(finding['verdict'])}</strong>",
-                    number(finding["value"], finding["error"]),
-                    unbroken(f"{finding['sense']} {finding['threshold']:g}"),
-                    unbroken(finding["where"]),
-                ],
-                "".join(f"<p>{text(part)}</p>" for part in words),
-            ]
-        )
-    return section(
-        "What they assume, tested",
-        note.table(
-            ["assumption", "verdict", "value", "threshold", "worst mode"],
-            groups,
-            words=(0, 1, 3, 4),
-            caption="Assumptions of the closures, measured on the truth, in the mode "
-            "that is placed worst. A verdict needs the whole 95 % interval, 1.96 "
-            "standard errors to either side, on one side of the threshold. The "
-            "thresholds are those of the config: experience, not theorems.",
         ),
     )
 
@@ -318,8 +277,3 @@ def _overrides(evidence: Evidence) -> str:
 def _times(ratio):
     """Two figures, however large: 160 and not 1.6e+02."""
     return f"{float(f'{ratio:.2g}'):g}"
-
-
-def _sentence(words: str) -> str:
-    """Begin with a capital and end with a full stop."""
-    return f"{words[:1].upper()}{words[1:].rstrip('.')}."

@@ -1,253 +1,305 @@
-"""Findings: verdicts that follow from intervals, on processes that are known."""
+"""The whole audit: of truths that have what it takes, and of such that do not."""
 
+import dataclasses
+import json
 import math
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
-from hypothesis import assume, given
-from hypothesis import strategies as st
-from scipy import stats
-from splits import resolved_only
+from splits import divided
+from toys import orthonormal_vectors, random_model, random_weights
 
-from eddyshed.reduce.audit import CONFIDENCE, audit, decide, detrended
+from eddyshed.reduce.audit import SCHEMA, Finding, Material, audit, detrended
+from eddyshed.reduce.audit.verdicts import closure_verdicts, recommendation
+from eddyshed.reduce.coupling import coupling
+from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
+from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.settings import AuditSettings
-from eddyshed.solver.errors import DataError
+from eddyshed.reduce.store import plain
 
-STEP = 0.2
-NAMES = ("separation", "normality: tails", "normality: symmetry", "truth length")
-
-NUMBERS = st.floats(-1e6, 1e6)
-ERRORS = st.floats(0, 1e6)
-SENSES = st.sampled_from(["at least", "at most"])
+USED = ("bare", "residual", "coloured", "white")
+STEP = 0.3
 
 
-def red(decay_times, count, seed, members=1):
-    """Independent red series of unit variance, shape (time, series)."""
-    size = len(decay_times)
-    process = OrnsteinUhlenbeck(
-        rate=np.diag(1 / np.array(decay_times)), covariance=np.eye(size)
+def material_of(model, states, nx, ny, *, members=1):
+    """What an audit takes, of states of a model, shape (time, size)."""
+    vectors = orthonormal_vectors(np.random.default_rng(3), model.weights, nx + ny)
+    split, y = divided(model, states, vectors, nx, step=STEP)
+    y = y.reshape(split.x.shape[0], split.x.shape[1], ny)
+    operators = galerkin(model, vectors[:, :nx], vectors[:, nx:], split.mean)
+    noise = fit_ornstein_uhlenbeck(y, STEP, window=2.4 if ny else 4 * STEP)
+    return Material(
+        model=model,
+        split=split,
+        operators=operators,
+        noise=noise,
+        coupling=coupling(split, operators),
+        y=y,
+        records=[SimpleNamespace(read=lambda start, stop: states[start:stop])],
+        models={},
     )
-    return process.simulate(count, STEP, np.random.default_rng(seed))[0]
 
 
-def findings(x, coupling, seed=1, **thresholds):
-    """Findings by name; the split holds nothing else that is used."""
-    found = audit(
-        AuditSettings(**thresholds),
-        resolved_only(x, step=STEP),
-        coupling[np.newaxis],
-        np.random.default_rng(seed),
+def random_material(count=4000, *, size=8, ny=5, change=None):
+    """Red states of a random conserving model; they do not obey it, nor need to."""
+    rng = np.random.default_rng(51)
+    weights = random_weights(rng, size) / size
+    model = random_model(rng, size, weights=weights)
+    red = OrnsteinUhlenbeck(rate=np.eye(size), covariance=np.eye(size))
+    states = red.simulate(count, STEP, rng)[0]
+    if change is not None:
+        states = change(states)
+    return material_of(model, states, 3, ny)
+
+
+def audited(material, used=USED, seed=1, **thresholds):
+    settings = AuditSettings(**thresholds)
+    return audit(settings, material, used, np.random.default_rng(seed))
+
+
+@pytest.fixture(scope="module")
+def found():
+    return audited(random_material())
+
+
+def by_name(found):
+    return {finding.name: finding for finding in found.findings}
+
+
+# --- All of it ------------------------------------------------------------------
+
+
+def test_every_finding_is_complete(found):
+    names = [finding.name for finding in found.findings]
+    assert len(set(names)) == len(names) >= 28
+    for finding in found.findings:
+        assert finding.verdict in ("holds", "fails", "undecided")
+        assert (finding.settle == "") == (finding.verdict != "undecided")
+        assert finding.closures
+        assert set(finding.closures) <= set(USED)
+        assert finding.assumption.endswith(".")
+        for words in (finding.meaning, finding.remedy, finding.statistic):
+            assert words
+        if finding.value == finding.value:
+            assert finding.error >= 0
+            place = finding.details["mode"].index(finding.where)
+            assert finding.details["value"][place] == finding.value
+
+
+def test_every_threshold_is_a_setting_and_every_setting_a_threshold(found):
+    used = {finding.name: finding.threshold for finding in found.findings}
+    defaults = dataclasses.asdict(AuditSettings())
+    # The growth of the two kinds of models goes by one setting.
+    assert len(used) == len(defaults) + 1
+    assert set(used.values()) == set(defaults.values())
+
+
+def test_those_that_do_not_vote_say_so_in_their_threshold():
+    fields = {f.name: f.metadata for f in dataclasses.fields(AuditSettings)}
+    text = {name: str(meta) for name, meta in fields.items()}
+    assert "does not vote" in text["memory_shape"]
+    assert "does not vote" not in text["operator_ratio"]
+
+
+def test_terms_and_curves_are_there_with_errors(found):
+    assert list(found.terms["slow"]) == [
+        "F1 + A11 x",
+        "B111(x, x)",
+        "A12 y",
+        "2 B112(x, y)",
+        "B122(y, y)",
+        "in no mode",
+    ]
+    for side in found.terms.values():
+        for one in side.values():
+            assert one["value"] >= 0
+            assert math.isfinite(one["error"])
+    curves = found.curves["quantiles"]
+    assert len(curves["modes"]) == 3
+    middle = curves["modes"][0]["value"][len(curves["normal"]) // 2]
+    assert abs(middle) < 0.3
+    assert len(found.curves["abscissa"]["time"]) == len(
+        found.curves["abscissa"]["numerical"]
     )
-    assert [finding.name for finding in found] == list(NAMES)
-    return {finding.name: finding for finding in found}
 
 
-# --- The verdict ------------------------------------------------------------
+def test_it_is_plain_data_and_the_same_each_time(found):
+    first = json.dumps(plain(found))
+    assert json.dumps(plain(audited(random_material()))) == first
+    assert json.loads(first)["schema"] == SCHEMA == 2
+    assert list(json.loads(first)) == [
+        "schema",
+        "findings",
+        "closures",
+        "recommendation",
+        "terms",
+        "curves",
+    ]
 
 
-def test_the_interval_has_95_percent():
-    assert pytest.approx(stats.norm.ppf(0.975), abs=5e-5) == CONFIDENCE
+def test_detrended_leaves_nothing_linear():
+    rng = np.random.default_rng(5)
+    x = rng.standard_normal((2, 300, 2))
+    r = rng.standard_normal((2, 300, 2)) + x @ np.array([[1.0, 2.0], [0.5, -1.0]]) + 3
+    left = detrended(r, x)
+    assert np.abs(left.mean(axis=(0, 1))).max() < 1e-12
+    assert np.abs(np.einsum("mti,mtj->ij", left, x - x.mean(axis=(0, 1)))).max() < 1e-9
 
 
-@given(NUMBERS, ERRORS, NUMBERS, SENSES)
-def test_verdict_is_that_of_the_whole_interval(value, error, threshold, sense):
-    verdict, more = decide(value, error, threshold, sense)
-    low, high = value - CONFIDENCE * error, value + CONFIDENCE * error
-    # An end on the threshold to round-off may fall to either side.
-    assume(not (math.isclose(low, threshold, rel_tol=1e-9, abs_tol=1e-9)))
-    assume(not (math.isclose(high, threshold, rel_tol=1e-9, abs_tol=1e-9)))
-    if low < threshold < high:
-        assert verdict == "undecided"
-        assert more > 1
-    else:
-        is_good = low > threshold if sense == "at least" else high < threshold
-        assert verdict == ("holds" if is_good else "fails")
-        assert more == 1
+# --- Bad input ------------------------------------------------------------------
 
 
-@given(NUMBERS, st.floats(1e-3, 1e6), NUMBERS, SENSES)
-def test_more_data_settles_it(value, error, threshold, sense):
-    # Errors fall with the square root of the length, if the value stays.
-    assume(abs(value - threshold) > 1e-9 * error)
-    verdict, more = decide(value, error, threshold, sense)
-    assume(verdict == "undecided")
-    settled, again = decide(value, error / math.sqrt(1.001 * more), threshold, sense)
-    assert settled != "undecided"
-    assert again == 1
-    short, _ = decide(value, error / math.sqrt(0.999 * more), threshold, sense)
-    assert short == "undecided"
-
-
-@given(NUMBERS, ERRORS, NUMBERS)
-def test_the_two_senses_are_opposite(value, error, threshold):
-    opposite = {"holds": "fails", "fails": "holds", "undecided": "undecided"}
-    least, more = decide(value, error, threshold, "at least")
-    most, other = decide(value, error, threshold, "at most")
-    assert most == opposite[least]
-    assert more == other
-
-
-@given(NUMBERS, NUMBERS, SENSES)
-def test_unknown_errors_leave_it_open(value, threshold, sense):
-    assert decide(value, math.inf, threshold, sense) == ("undecided", math.inf)
-    assert decide(value, 1.0, value, sense) == ("undecided", math.inf)
-    assert decide(value, 0.0, value, sense) == ("undecided", math.inf)
-
-
-# --- Known processes --------------------------------------------------------
-
-
-def test_a_gaussian_system_with_separated_times_passes():
-    # Slow modes of 10 and 15 decay times of their noise, 660 and 440 times long.
-    series = red([10, 15, 1, 1], 33_000, 81)
-    x, coupling = series[:, :2], series[:, 2:]
-    found = findings(x, coupling)
-    assert {finding.verdict for finding in found.values()} == {"holds"}
-    assert all(finding.settle == "" for finding in found.values())
-    # Ratios of integral times are those of decay times (3.5 errors: 5e-4 by chance
-    # for each number); the integral times end at 0.05 of the correlation alike.
-    details = found["separation"].details
-    ratio, error = np.array(details["value"]), np.array(details["error"])
-    assert np.all(np.abs(ratio - [10, 15]) < 3.5 * error)
-    assert details["mode"] == ["slow 0", "slow 1"]
-    # The length is counted in integral times, 0.95 of the decay times here.
-    details = found["truth length"].details
-    ratio, error = np.array(details["value"]), np.array(details["error"])
-    assert np.all(np.abs(ratio - [660 / 0.95, 440 / 0.95]) < 3.5 * error)
-
-
-def test_the_worst_mode_is_named():
-    series = red([20, 6, 40, 1, 1, 1], 33_000, 82)
-    coupling = series[:, 3:].copy()
-    coupling[:, 2] = coupling[:, 2] ** 3
-    found = findings(series[:, :3], coupling)
-    assert found["separation"].where == "slow 1"
-    assert found["normality: tails"].where == "slow 2"
-    assert found["truth length"].where == "slow 2"
-    for finding in found.values():
-        place = finding.details["mode"].index(finding.where)
-        assert finding.value == finding.details["value"][place]
-        assert finding.error == finding.details["error"][place]
-
-
-def test_no_separation_fails():
-    series = red([2, 2], 33_000, 83)
-    finding = findings(series[:, :1], series[:, 1:])["separation"]
-    assert finding.verdict == "fails"
-    assert abs(finding.value - 1) < 3.5 * finding.error
-    assert finding.sense == "at least"
-    assert "expect wrong correlation times" in finding.meaning
-
-
-def test_rare_strong_bursts_fail_the_tails_only():
-    # The product of two independent normals has kurtosis 9 and no skewness: fourth
-    # moments 3 times 3 (Isserlis), third moments zero.
-    series = red([10, 1, 1], 66_000, 84)
-    found = findings(series[:, :1], series[:, 1:2] * series[:, 2:])
-    tails = found["normality: tails"]
-    assert tails.verdict == "fails"
-    assert tails.sense == "at most"
-    # The kurtosis of heavy tails scatters more than a normal: five errors.
-    assert abs(tails.value - 9) < 5 * tails.error
-    assert found["normality: symmetry"].verdict == "holds"
-
-
-@pytest.mark.parametrize("sign", [1, -1])
-def test_pushes_one_way_fail_the_symmetry_only(sign):
-    # n + a (n^2 - 1) of a standard normal n, a = 0.2: variance 1 + 2 a^2, third
-    # moment 6 a + 8 a^3, fourth 3 + 60 a^2 + 60 a^4 (moments of a normal, by hand).
-    a = 0.2
-    n = red([10, 1], 66_000, 85)
-    skewed = sign * (n[:, 1:] + a * (n[:, 1:] ** 2 - 1))
-    found = findings(n[:, :1], skewed, kurtosis=7.0)
-    variance = 1 + 2 * a**2
-    symmetry, tails = found["normality: symmetry"], found["normality: tails"]
-    assert symmetry.verdict == "fails"
-    assert tails.verdict == "holds"
-    expected = (6 * a + 8 * a**3) / variance**1.5
-    assert abs(symmetry.value - expected) < 3.5 * symmetry.error
-    expected = (3 + 60 * a**2 + 60 * a**4) / variance**2
-    assert abs(tails.value - expected) < 3.5 * tails.error
-
-
-def test_what_is_linear_in_the_resolved_state_is_taken_off():
-    # A restoring force is no noise: it is as slow as the mode, and as skewed.
-    n = red([10, 1], 33_000, 86)
-    x = n[:, :1] + 0.5 * (n[:, :1] ** 2 - 1)
-    coupling = n[:, 1:] - 3 * x + 7
-    found = findings(x, coupling)
-    for name in NAMES[:3]:
-        assert found[name].verdict == "holds"
-    (left,) = detrended(coupling[np.newaxis], x[np.newaxis])
-    np.testing.assert_allclose(left.mean(axis=0), 0, atol=1e-12)
-    np.testing.assert_allclose(x.T @ left / len(x), 0, atol=1e-12)
-    # What is left is the noise, but for a slope that chance gives it: about
-    # sqrt(2 / 660), times the size of x.
-    np.testing.assert_allclose(left, n[:, 1:] - n[:, 1:].mean(), atol=0.6)
-    # Least squares as numpy solves it, with the constant as a column.
-    columns = np.column_stack([np.ones(len(x)), x])
-    fitted = columns @ np.linalg.lstsq(columns, coupling, rcond=None)[0]
-    np.testing.assert_allclose(left, coupling - fitted, atol=1e-11)
-
-
-# --- Short records ----------------------------------------------------------
-
-
-def test_a_short_record_says_how_long_would_settle_it():
-    series = red([6, 1], 1000, 87)
-    found = findings(series[:, :1], series[:, 1:])
-    finding = found["separation"]
-    assert finding.verdict == "undecided"
-    more = (CONFIDENCE * finding.error / (finding.value - 3)) ** 2
-    assert finding.settle == f"about {more:.1f} times the truth"
-    assert 1.1 <= more < 100
-
-
-def test_a_record_that_settles_it_almost_asks_for_a_tenth_more():
-    series = red([10, 1], 3000, 88)
-    x, coupling = series[:, :1], series[:, 1:]
-    found = findings(x, coupling)["separation"]
-    threshold = found.value - 1.95 * found.error
-    finding = findings(x, coupling, separation=threshold)["separation"]
-    assert finding.verdict == "undecided"
-    assert finding.settle == "about 1.1 times the truth"
-
-
-def test_too_short_a_record_cannot_say_how_long():
-    # A drift through the whole record: how long it remembers is not known, nor how
-    # far its moments may be off.
-    drift = np.linspace(0, 1, 200)[:, np.newaxis] + 0.1 * red([1], 200, 89)
-    found = findings(red([1], 200, 90), drift)
-    for name in ("normality: tails", "normality: symmetry"):
-        assert found[name].error == math.inf
-        assert found[name].verdict == "undecided"
-        assert found[name].settle == (
-            "a truth many times longer: this one is too short to say how long"
+def test_too_short_a_truth_is_undecided_with_what_is_missing():
+    material = random_material(200)
+    split = material.split
+    short = dataclasses.replace(
+        split, x=split.x[:, :50], tendency=split.tendency[:, :50]
+    )
+    found = by_name(
+        audited(
+            dataclasses.replace(
+                material,
+                split=short,
+                y=material.y[:, :50],
+                coupling=material.coupling[:, :50],
+            )
         )
+    )
+    length = found["record: length"]
+    assert length.verdict == "undecided"
+    for name in (
+        "record: means",
+        "dependence: mean",
+        "perturbation: operator",
+        "perturbation: forcing",
+        "normality: tails",
+    ):
+        assert found[name].verdict == "undecided", name
+        assert "the truth" in found[name].settle or "longer" in found[name].settle
+        assert found[name].more > 1
+    for finding in found.values():
+        assert finding.verdict == "undecided" or finding.error < math.inf
 
 
-def test_gaussian_systems_seldom_fail():
-    # Each assumption is true by a quarter (four decay times against a threshold of
-    # three) or more. If one in twenty systems failed, more than 13 of 100 would
-    # with a probability of 5e-4 (binomial) only.
-    most = stats.binom.isf(5e-4, 100, 0.05)
-    assert most == 13
-    fails = dict.fromkeys(NAMES, 0)
-    for replica in range(100):
-        series = red([4, 4, 1, 1], 2500, [90, replica])
-        found = findings(series[:, :2], series[:, 2:], seed=replica)
-        for name, finding in found.items():
-            fails[name] += finding.verdict == "fails"
-    assert max(fails.values()) <= most, fails
+def test_length_never_fails_and_says_how_much():
+    # 60 correlation times against 1000: sixteen times more at least.
+    found = by_name(audited(random_material(200), length=1000.0))["record: length"]
+    assert found.verdict == "undecided"
+    assert found.more > 1000 / found.value
+    # That much more truth, with errors that fall with its root, would do.
+    low = math.log(found.value * found.more) - (
+        found.quantile * found.error / found.value / math.sqrt(found.more)
+    )
+    assert low == pytest.approx(math.log(1000), abs=0.03)
 
 
-# --- What is refused --------------------------------------------------------
+def test_a_constant_mode_is_named():
+    material = random_material()
+    x = material.split.x.copy()
+    x[..., 1] = 0.5
+    split = dataclasses.replace(material.split, x=x)
+    found = by_name(audited(dataclasses.replace(material, split=split)))
+    for name in ("record: length", "separation", "dependence: mean"):
+        assert found[name].verdict == "undecided"
+        assert "slow 1 is constant" in found[name].settle
+        assert math.isnan(found[name].value)
+    # What needs no resolved mode is there all the same.
+    assert math.isfinite(found["memory: lags"].value)
 
 
-@pytest.mark.parametrize("which", ["x", "coupling"])
-def test_a_mode_that_does_not_vary_is_refused(which):
-    series = red([10, 10, 1, 1], 500, 91)
-    series[:, 1 if which == "x" else 3] = 2.0
-    with pytest.raises(DataError, match="mode 1 is constant"):
-        findings(series[:, :2], series[:, 2:])
+def test_a_coupling_that_is_a_function_of_x_is_named():
+    material = random_material()
+    r = material.coupling.copy()
+    r[..., 2] = 2 * material.split.x[..., 2]
+    found = by_name(audited(dataclasses.replace(material, coupling=r)))
+    assert "slow 2" in found["normality: tails"].settle
+    assert found["normality: tails"].verdict == "undecided"
+
+
+def test_an_empty_unresolved_space_is_named():
+    found = by_name(audited(random_material(ny=0)))
+    for name in ("dependence: mean", "noise: decay", "memory: shape"):
+        assert found[name].verdict == "undecided"
+        assert "no unresolved modes" in found[name].settle
+    assert found["record: length"].verdict == "holds"
+
+
+def test_a_limit_without_its_closures_is_named(found):
+    limit = by_name(found)["limit: white for coloured"]
+    assert limit.verdict == "undecided"
+    assert "coloured and the white closure are not in [closures] use" in limit.settle
+
+
+# --- Verdicts and recommendation --------------------------------------------------
+
+
+def finding(name, verdict, closures, *, votes=True, more=1.0, remedy="do r"):
+    return Finding(
+        name=name,
+        assumption="A.",
+        closures=closures,
+        votes=votes,
+        statistic="s",
+        value=2.0,
+        error=0.5,
+        quantile=1.96,
+        threshold=1.0,
+        sense="at most",
+        where="m",
+        verdict=verdict,
+        meaning="it is off",
+        remedy=remedy,
+        more=more,
+        settle=f"about {more:g} times the truth" if verdict == "undecided" else "",
+        details={},
+    )
+
+
+def test_a_closure_is_as_good_as_the_worst_that_it_leans_on():
+    findings = [
+        finding("a", "holds", ("white", "coloured")),
+        finding("b", "undecided", ("white",), more=3.0),
+        finding("c", "fails", ("residual", "white")),
+        finding("d", "fails", ("coloured",), votes=False),
+    ]
+    found = {
+        v.closure: v
+        for v in closure_verdicts(findings, ("coloured", "white", "residual", "mine"))
+    }
+    assert found["coloured"].verdict == "holds"
+    assert found["coloured"].reasons == ()
+    assert found["coloured"].leaning == ("a",)
+    assert found["white"].verdict == "fails"
+    assert [r.split()[0] for r in found["white"].reasons] == ["c", "b"]
+    assert "2 +- 0.5 at m, must be at most 1" in found["white"].reasons[0]
+    assert found["mine"].verdict == "undecided"
+    assert "not known" in found["mine"].reasons[0]
+
+
+@pytest.mark.parametrize(
+    ("verdicts", "expected"),
+    [
+        (("holds", "holds"), "use coloured, with 2 modes (residual would do as well)"),
+        (("fails", "holds"), "use residual, with 2 modes: every"),
+        (("undecided", "undecided"), "collect about 3 times the truth"),
+        (("undecided", "fails"), "residual is not to be trusted with 2 modes"),
+        (("fails", "fails"), "coloured, residual are not to be trusted"),
+    ],
+)
+def test_the_recommendation_says_which_or_what_to_do(verdicts, expected):
+    findings = [
+        finding("a", verdicts[0], ("coloured",), more=3.0),
+        finding("b", verdicts[1], ("residual",), more=3.0),
+    ]
+    closures = closure_verdicts(findings, ("residual", "coloured"))
+    found = recommendation(findings, closures, "2 modes")
+    assert expected in found
+    assert ("do r" in found) == ("fails" in verdicts and "holds" not in verdicts)
+
+
+def test_without_a_known_closure_it_says_so():
+    assert "no closure whose assumptions are known" in recommendation(
+        [], closure_verdicts([], ("mine",)), "2 modes"
+    )

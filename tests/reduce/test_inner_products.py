@@ -7,9 +7,9 @@ import numpy as np
 import pytest
 
 from eddyshed.reduce.cli import main
+from eddyshed.reduce.preflight import model_of
 from eddyshed.reduce.settings import StudyConfig
 from eddyshed.reduce.split import Split
-from eddyshed.reduce.stages import model_of
 from eddyshed.reduce.store import read_one
 from eddyshed.solver.config import read_config
 
