@@ -80,7 +80,7 @@ def test_study_makes_everything_and_prints_the_scores(study):
     folder, result = study
     for name in MADE:
         assert (folder / name).is_file()
-    for word in ("separation", "truth length", "residual", "within sampling", "+-"):
+    for word in ("separation", "recommended", "residual", "within sampling", "+-"):
         assert word in result.stdout
     # Results go to stdout, what goes on to stderr.
     assert "running" in result.stderr

@@ -160,7 +160,7 @@ class TestPage:
         assert len(pictures) == FIGURES
         assert all(len(picture["alt"]) > 40 for picture in pictures)
         tables = [a for a in walk.tags("div") if a.get("class") == "scroll"]
-        assert len(tables) == len(walk.tags("table")) == 7
+        assert len(tables) == len(walk.tags("table")) == 9
         assert all(a["aria-label"] and a["tabindex"] == "0" for a in tables)
         assert len(walk.tags("figure")) == FIGURES + len(tables)
 
