@@ -7,7 +7,6 @@ import json
 import logging
 import os
 import re
-import signal
 import sys
 from collections.abc import Sequence
 from contextlib import contextmanager
@@ -341,13 +340,14 @@ def _stage(options):
     """Carry out a stage, or all of them."""
     document = _read(options)
     from .preflight import preflight
+    from .signals import signals
     from .stages import STAGES
     from .study import Incomplete, Interrupted, Study, bring_up_to_date, opened
     from .tables import stage_json, stage_table, truth_table
 
     preflight(document.config)
 
-    with _log_on_stderr(options.quiet), _signals() as caught:
+    with _log_on_stderr(options.quiet), signals() as caught:
         study = Study(
             document=document,
             folder=options.runs / document.config.name,
@@ -396,50 +396,6 @@ def _log_on_stderr(quiet):
         yield
     finally:
         log.removeHandler(handler)
-
-
-class _Caught:
-    """Signals seen so far; while gentle, the first one only sets a flag."""
-
-    def __init__(self):
-        self.number = 0
-        self._gentle = False
-
-    def __bool__(self):
-        return self.number != 0
-
-    @contextmanager
-    def gentle(self):
-        """Let the first signal in this block wait for a checkpoint."""
-        self._gentle = True
-        try:
-            yield
-        finally:
-            self._gentle = False
-
-    def handle(self, number, frame):
-        """Note a signal; end at once if it is the second, or nothing is at stake."""
-        first = not self
-        self.number = number
-        if not (self._gentle and first):
-            if number == signal.SIGINT:
-                raise KeyboardInterrupt
-            raise SystemExit(128 + number)
-
-
-@contextmanager
-def _signals():
-    """Catch SIGINT and SIGTERM while the block runs."""
-    caught = _Caught()
-    before = {
-        number: signal.signal(number, caught.handle)
-        for number in (signal.SIGINT, signal.SIGTERM)
-    }
-    try:
-        yield caught
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
 
 
 def _show(options):

@@ -11,8 +11,8 @@ import numpy as np
 from eddyshed.solver.errors import DataError
 
 from ..closures.instrumental import instrumental_fit
-from ..settings import AuditSettings
 from ..statistics.correlation import integral_time
+from ..thresholds import AuditSettings
 from . import (
     balance,
     dependence,

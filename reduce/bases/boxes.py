@@ -11,8 +11,8 @@ from eddyshed.solver.boxes import BoxSettings, box_averages
 from eddyshed.solver.errors import DataError
 
 from ..contract import Model
-from ..settings import BoxesSettings
 from .basis import Basis, Flat, Measured, dependent
+from .settings import BoxesSettings
 
 SECTION = "resolved.boxes"
 EDGE = 1e-9  # of the domain: sides that share no more have an edge in common

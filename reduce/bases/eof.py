@@ -10,9 +10,9 @@ from eddyshed.solver.errors import DataError
 from eddyshed.solver.record import TruthRecord
 
 from ..contract import Model
-from ..settings import EofSettings
 from .basis import Basis, Flat
 from .functions import Anomalies, leading_functions
+from .settings import EofSettings
 
 
 def eof_basis(

@@ -12,8 +12,8 @@ from eddyshed.solver.errors import DataError
 from eddyshed.solver.quantities import quoted
 
 from ..contract import Model
-from ..settings import FileSettings
 from .basis import Basis, Flat, dependent
+from .settings import FileSettings
 
 
 def file_basis(settings: FileSettings, model: Model) -> Basis:

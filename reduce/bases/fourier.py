@@ -7,8 +7,8 @@ import numpy as np
 from eddyshed.solver.errors import DataError
 
 from ..contract import Model, metric
-from ..settings import FourierSettings
 from .basis import Basis, count_for_share
+from .settings import FourierSettings
 
 
 def fourier_basis(

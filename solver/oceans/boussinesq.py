@@ -21,6 +21,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
+from functools import cached_property
 
 import numpy as np
 
@@ -157,7 +158,7 @@ class Boussinesq:
             [np.where(partners < 0, -1, partners + i * n) for i in range(self.n_fields)]
         )
 
-    @property
+    @cached_property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: field, part and integer wavenumbers in x, z."""
         return tuple(

@@ -19,6 +19,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -179,7 +180,7 @@ class TwoLayer:
         once = self.space.partners
         return np.concatenate([once, np.where(once < 0, -1, once + len(once))])
 
-    @property
+    @cached_property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: vertical mode, part and integer wavenumbers."""
         return tuple(

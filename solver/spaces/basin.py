@@ -9,6 +9,7 @@ fast.
 from __future__ import annotations
 
 from collections.abc import Callable
+from functools import cached_property
 
 import numpy as np
 
@@ -86,7 +87,7 @@ class Basin:
         self._even_of_odd = -element
         self._odd_of_even = np.ascontiguousarray(element.T)
 
-    @property
+    @cached_property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: its function of x and of y."""
         return tuple(f"sin {k}x sin {m}y" for k, m in self.waves)

@@ -10,6 +10,7 @@ and imaginary parts, interleaved, of c_kl (l slow, k fast).
 from __future__ import annotations
 
 from collections.abc import Callable
+from functools import cached_property
 
 import numpy as np
 
@@ -91,7 +92,7 @@ class Channel:
         self._normal_flux = 1j * k * m / (nx * ny)
         self._hat = np.empty((cy, cx + 1), dtype=complex)
 
-    @property
+    @cached_property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: its function of x and of y."""
         cy = self.cutoff[1]

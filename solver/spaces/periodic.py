@@ -12,6 +12,7 @@ c is the amplitude of ``2 cos(k.x)`` and the imaginary part that of
 from __future__ import annotations
 
 from collections.abc import Callable
+from functools import cached_property
 
 import numpy as np
 
@@ -88,7 +89,7 @@ class Periodic:
         self._at_minus = np.empty(len(waves), dtype=complex)
         self._conjugate = np.empty(len(waves), dtype=complex)
 
-    @property
+    @cached_property
     def labels(self) -> tuple[str, ...]:
         """Name of each coordinate: part and wavenumbers in x and y."""
         return tuple(
