@@ -12,6 +12,8 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.stats import norm
 
+from eddyshed.solver.quantities import format_quantity
+
 from .statistics.estimate import Estimate
 from .statistics.resampling import moments
 
@@ -54,14 +56,15 @@ class StepCheck:
         what = {"mean": "standard deviations", "variance": "in its logarithm"}
         words = f"{self.quantity} of {labels[self.mode]} by {found} "
         words += what[self.quantity]
+        step = format_quantity(self.step, "s")
         if self.agrees:
             return (
-                f"half the step of {self.step:.4g} s changes nothing beyond sampling "
-                f"(most the {words})"
+                f"half the step of {step} changes nothing beyond sampling (most the "
+                f"{words})"
             )
         return (
-            f"half the step of {self.step:.4g} s changes the {words}: the step is too "
-            "long, or the model drifts, and its scores hold that error"
+            f"half the step of {step} changes the {words}: the step is too long, or "
+            "the model drifts, and its scores hold that error"
         )
 
 

@@ -137,7 +137,7 @@ def stage_table(study: Study, command: str) -> str:
     parts = {
         "truth": truth_table,
         "reduce": _reduce,
-        "audit": _audit,
+        "audit": lambda study: _audit(study, explanatory=command == "audit"),
         "benchmark": _benchmark,
         "report": _report,
     }
@@ -213,10 +213,13 @@ def _reduce(study):
     return "\n".join([text, *(f"note: {note}" for note in notes)])
 
 
-def _audit(study):
+def _audit(study, *, explanatory):
     found = read_json(study.path("audit.json"))
     parts = []
-    for votes, title in ((True, "assumption"), (False, "explanatory")):
+    titles = {True: "assumption", False: "explanatory"}
+    for votes, title in titles.items():
+        if not (votes or explanatory):
+            continue
         rows = [[title, "verdict", "value", "threshold", "worst at"]]
         rows += [
             [
@@ -232,13 +235,16 @@ def _audit(study):
             if finding["votes"] == votes
         ]
         parts.append(columns(rows))
-    verdicts = [["closure", "its assumptions", "first of the reasons"]]
-    for entry in found["closures"]:
-        reasons = entry["reasons"]
-        more = f" (and {len(reasons) - 1} more)" if reasons[1:] else ""
-        first = f"{reasons[0]}{more}" if reasons else "-"
-        verdicts.append([entry["closure"], entry["verdict"], first])
+    verdicts = [["closure", "its assumptions"]]
+    verdicts += [[entry["closure"], entry["verdict"]] for entry in found["closures"]]
     parts.append(columns(verdicts))
+    reasons = [
+        f"{entry['closure']}: {words}"
+        for entry in found["closures"]
+        for words in entry["reasons"]
+    ]
+    if reasons:
+        parts.append("\n".join(reasons))
     parts.append(f"recommended: {found['recommendation']}")
     return "\n\n".join(parts)
 
