@@ -7,6 +7,7 @@ variances are set beside those of the long one.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -57,6 +58,11 @@ class StepCheck:
         words = f"{self.quantity} of {labels[self.mode]} by {found} "
         words += what[self.quantity]
         step = format_quantity(self.step, "s")
+        if not math.isfinite(self.error):
+            return (
+                f"half the step of {step}: the runs are too short to tell whether it "
+                "changes anything"
+            )
         if self.agrees:
             return (
                 f"half the step of {step} changes nothing beyond sampling (most the "

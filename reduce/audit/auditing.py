@@ -26,7 +26,7 @@ from . import (
     sizes,
 )
 from .curves import abscissa_curve, quantile_curves
-from .findings import Assumption, Finding, Measured, judge, unknown
+from .findings import Assumption, Finding, Measured, judge, times, unknown
 from .material import Material
 from .verdicts import ClosureVerdict, closure_verdicts, recommendation
 
@@ -150,7 +150,7 @@ def _never_fails(finding: Finding) -> Finding:
     more = 1.0
     while finding.value * more * math.exp(-reach / math.sqrt(more)) < finding.threshold:
         more *= 1.02
-    settle = f"about {max(more, 1.1):.2g} times the truth"
+    settle = times(more, "truth")
     return replace(finding, verdict="undecided", more=more, settle=settle)
 
 

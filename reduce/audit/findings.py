@@ -10,6 +10,7 @@ import numpy as np
 from scipy import stats
 
 CONFIDENCE = 1.96  # standard errors to either side: a two-sided 95 % interval
+FAR = 100  # times the data: beyond it a number would promise too much
 TAIL = 0.025  # probability beyond one end of it
 
 
@@ -317,4 +318,11 @@ def _settle(more: float, source: str) -> str:
     """What would settle an open verdict."""
     if not math.isfinite(more):
         return f"a {source} many times longer: this one is too short to say how long"
-    return f"about {max(more, 1.1):.2g} times the {source}"
+    return times(more, source)
+
+
+def times(more: float, source: str) -> str:
+    """How much more it takes, in words: two figures, and an end to counting."""
+    if more > FAR:
+        return f"over {FAR} times the {source}"
+    return f"about {float(f'{max(more, 1.1):.2g}'):g} times the {source}"

@@ -6,7 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from .findings import Finding
+from .findings import Finding, times
 
 WORSE = {"holds": 0, "undecided": 1, "fails": 2}
 # From what keeps most of the equation to what keeps least.
@@ -147,6 +147,6 @@ def _waiting(name, findings, cutoff):
     more = max(f.more for f in waiting)
     return (
         f"no closure can be recommended yet: {name} fails nowhere with {cutoff}, but "
-        f"{names} {'is' if len(waiting) == 1 else 'are'} open; collect about "
-        f"{max(more, 1.1):.2g} times the truth"
+        f"{names} {'is' if len(waiting) == 1 else 'are'} open; collect "
+        f"{times(more, 'truth')}"
     )

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from scipy import signal
 
-from eddyshed.reduce.step_check import compare_steps
+from eddyshed.reduce.step_check import StepCheck, compare_steps
 
 
 def euler(step, *, members, times, rng):
@@ -59,3 +59,16 @@ def test_means_are_compared_in_standard_deviations(shift):
     if shift:
         assert check.quantity == "mean"
         assert abs(check.difference - shift) < 4 * check.error
+
+
+def test_a_check_that_cannot_tell_says_so():
+    check = StepCheck(
+        step=3600.0,
+        quantity="mean",
+        mode=0,
+        difference=0.1,
+        error=float("inf"),
+        compared=2,
+        agrees=True,
+    )
+    assert "too short to tell" in check.sentence(("x",))
