@@ -103,5 +103,13 @@ def test_what_is_not_known_is_not_said():
     wave = np.sin(np.linspace(0, 5, 60))[np.newaxis, :, np.newaxis]
     found = stationarity(np.concatenate([wave, wave], axis=2), 1.0)
     assert stationarity_notes(found, ("a", "b")) == []
+    # Halves of fewer than eight values have no correlation times.
+    found = stationarity(red_noise(1, 15, 2), 1.0)
+    assert np.isinf(found.mean_shift.error).all()
+    assert (found.length == 0).all()
+    assert (found.freedom == 1).all()
+    assert stationarity_notes(found, ("a", "b")) == []
+    with pytest.raises(DataError, match=r"halves less a line each: mode 0 is constant"):
+        stationarity(np.repeat([0.0, 1.0], 20).reshape(1, 40, 1), 1.0)
     with pytest.raises(DataError, match=r"stationarity: mode 0 is constant"):
         stationarity(np.ones((1, 50, 1)), 1.0)
