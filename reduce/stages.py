@@ -34,7 +34,7 @@ from .reduced import ReducedModel
 from .settings import EofSettings, StudyConfig
 from .simulated import load, save
 from .split import Split, split_truth, unresolved_series
-from .stationarity import stationarity, stationarity_notes
+from .statistics.stationarity import stationarity, stationarity_notes
 from .store import plain, read_one, write_all, write_json
 from .study import Stage, Study, fingerprint_of
 from .truth_stage import run_truth

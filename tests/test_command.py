@@ -88,6 +88,22 @@ def test_study_makes_everything_and_prints_the_scores(study):
     assert "Not a forecast" in result.stdout
 
 
+def test_the_audit_sees_that_the_white_closure_grows(study):
+    # Its drift has no cubic term here, and the model says so itself.
+    folder, _ = study
+    audit = json.loads((folder / "audit.json").read_text())
+    scores = json.loads((folder / "benchmark.json").read_text())["closures"]
+    notes = " ".join(note for entry in scores for note in entry["notes"])
+    assert "the closure is linearly unstable" in notes
+    failing = {
+        one["closure"]
+        for one in audit["closures"]
+        for reason in one["reasons"]
+        if reason.startswith("balance: white stability fails")
+    }
+    assert failing == {"white"}
+
+
 def test_a_second_call_reuses_everything(study):
     folder, first = study
     before = {name: (folder / name).stat().st_mtime_ns for name in MADE}

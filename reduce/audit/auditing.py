@@ -216,6 +216,9 @@ def _groups(m: Material, rng: np.random.Generator) -> Iterator[Group]:
     )
     yield (record.SAMPLE,), lambda: [_sample(m, partners)]
     yield (balance.STABILITY,), lambda: [_stability(m)]
+    # A cubic term decides by itself; the linear part is then no matter.
+    if "white" in m.models and not np.any(m.models["white"].drift.cubic):
+        yield (balance.WHITE_STABILITY,), lambda: [_white_stability(m)]
     yield (sizes.COUPLING,), lambda: [_coupling(m)]
     yield (
         (limit.LIMIT,),
@@ -298,6 +301,12 @@ def _stability(m: Material) -> Measured:
         max(1, m.batches.number - 1),
         "resolved modes",
     )
+
+
+def _white_stability(m: Material) -> Measured:
+    _ = m.fast
+    linear = m.models["white"].drift.linear
+    return balance.white_growth(linear, m.operators, m.noise, _longest(m))
 
 
 def _coupled(m: Material) -> Measured:

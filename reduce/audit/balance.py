@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from ..noise.fit import NoiseFit
+from ..operators import Operators
 from .batches import Batches
 from .findings import Assumption, Measured
 
@@ -30,6 +31,19 @@ STABILITY = Assumption(
     meaning="the model runs away, or is held by its quadratic terms alone, far from "
     "the truth",
     remedy="run a longer truth, or keep fewer modes",
+)
+WHITE_STABILITY = Assumption(
+    name="balance: white stability",
+    sentence="The linear drift of the white closure, with no cubic term to hold it, "
+    "decays.",
+    closures=("white",),
+    statistic="largest growth rate of its drift, times the longest correlation time "
+    "of the modes",
+    setting="growth",
+    sense="at most",
+    meaning="the model runs away, or is held by its quadratic terms alone, far from "
+    "the truth",
+    remedy="take the coloured closure, or keep the modes that feed back",
 )
 COUPLED_STABILITY = Assumption(
     name="balance: coupled stability",
@@ -109,6 +123,34 @@ def growth(
         places=[place],
         freedom=freedom,
     )
+
+
+def white_growth(
+    linear: np.ndarray, operators: Operators, noise: NoiseFit, time: float
+) -> Measured:
+    """Largest growth rate of the linear drift of the white closure.
+
+    Parameters
+    ----------
+    linear : ndarray, shape (nx, nx)
+        Of the drift [s-1].
+    operators : Operators
+    noise : NoiseFit
+    time : float
+        What the rate is multiplied by [s].
+
+    Notes
+    -----
+    All that the noise adds to the equation's own linear part is proportional to
+    times of the noise, and is taken to have their relative error: rms over the modes,
+    weighted by variance, as if all erred together.
+    """
+    weights = np.diag(noise.process.covariance)
+    relative = noise.decay.error / noise.decay.value
+    error = np.sqrt(weights @ relative**2 / weights.sum())
+    added = np.abs(linear - operators.A11)
+    freedom = max(1, noise.batches - 1)
+    return growth(linear, error * added, time, freedom, "resolved modes")
 
 
 def coupled_matrix(operators, noise: NoiseFit) -> tuple[np.ndarray, np.ndarray]:

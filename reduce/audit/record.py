@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
-from ..statistics.correlation import CROSSING, correlation_scales, integral_time
+from ..statistics.correlation import integral_time
+from ..statistics.stationarity import stationarity
 from .batches import Batches
 from .findings import Assumption, Measured
 
@@ -92,70 +95,28 @@ def length(x: np.ndarray, step: float, labels) -> Measured:
 def shifts(x: np.ndarray, step: float, labels) -> tuple[Measured, Measured, Measured]:
     """Difference of means, factor between variances, change along the line.
 
-    Halves and line are taken over the time of the members.
-
     Parameters
     ----------
     x : ndarray, shape (member, time, nx)
     step : float
     labels : sequence of str
-
-    Notes
-    -----
-    With T the record, t the one-sided integral of the correlation and s the
-    two-sided one of its square, the variances are ``8 t / T`` for the difference of
-    means in standard deviations, ``8 s / T`` for the logarithm of the ratio of
-    variances (C. E. Leith 1973, J. Appl. Meteorol. 12:1066) and ``24 t / T`` for the
-    change along the line (U. Grenander 1954, Ann. Math. Stat. 25:252). Both times
-    are those of the halves, each less a line of its own: what is looked for must not
-    hide behind the slowness that it brings. A line lowers the correlation function
-    by about ``4 t / (T / 2)``, up to three times t ``24 t / T`` of the integral,
-    which is put back (to first order; F. H. C. Marriott and J. A. Pope 1954,
-    Biometrika 41:390, for the mean). The errors err too: Student's tails. An integral
-    time has the relative variance ``12 t / T``, as a variance of ``T / (6 t)``
-    degrees of freedom has.
     """
-    members, times, _ = x.shape
-    record, half = members * times * step, times // 2
-    early, late = x[:, :half], x[:, times - half :]
-    flat = np.concatenate([_straight(early), _straight(late)])
-    scales = correlation_scales(flat, step)
-    whole = scales.time.value / (1 - CROSSING)
-    # Mean and line of a half take the fraction 4 t / T of the variance each.
-    deviation = flat.std(axis=(0, 1)) * np.sqrt(1 + 8 * whole / record)
-    lost = 1 + 24 * whole / record
-    time = np.where(np.isfinite(scales.time.error), whole * lost, np.inf)
-    squared = np.where(
-        np.isfinite(scales.squared.error), scales.squared.value * lost, np.inf
-    )
-    shift = (late.mean(axis=(0, 1)) - early.mean(axis=(0, 1))) / deviation
-    apart = np.log(_straight(late).var(axis=(0, 1)) / _straight(early).var(axis=(0, 1)))
-    factor = np.exp(np.abs(apart))
-    ramp = np.linspace(-0.5, 0.5, times)
-    slope = np.tensordot(ramp, x.mean(axis=0), axes=1) / np.sum(ramp**2)
+    found = stationarity(x, step)
+    factor = np.exp(np.abs(found.variance_shift.value))
+    shortest = float(found.length.min())
     known = {
         "places": labels,
-        "freedom": np.maximum(record / (6 * whole), 1.0),
+        "freedom": found.freedom,
         # The end of the correlation is looked for up to half of half a member.
-        "more": float(np.max(40 * whole / record, initial=1.1)),
+        "more": max(1.1, 40 / shortest) if shortest else math.inf,
     }
     return (
-        Measured(value=np.abs(shift), error=np.sqrt(8 * time / record), **known),
-        Measured(value=factor, error=factor * np.sqrt(8 * squared / record), **known),
         Measured(
-            value=np.abs(slope) / deviation,
-            error=np.sqrt(24 * time / record),
-            **known,
+            value=np.abs(found.mean_shift.value), error=found.mean_shift.error, **known
         ),
+        Measured(value=factor, error=factor * found.variance_shift.error, **known),
+        Measured(value=np.abs(found.trend.value), error=found.trend.error, **known),
     )
-
-
-def _straight(part):
-    """Series less the line through all members."""
-    ramp = np.linspace(-1, 1, part.shape[1])
-    centred = part - part.mean(axis=(0, 1))
-    slope = np.einsum("t,mtn->n", ramp, centred) / (len(part) * np.sum(ramp**2))
-    return centred - ramp[:, np.newaxis] * slope
 
 
 def left_out_share(energies: np.ndarray, batches: Batches) -> Measured:

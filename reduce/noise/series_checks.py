@@ -17,6 +17,7 @@ from ..statistics.correlation import correlation_scales
 from ..statistics.estimate import Estimate
 from ..statistics.resampling import moments
 from ..statistics.series import checked_series, checked_step
+from ..statistics.stationarity import stationarity
 from .lag_integrals import jackknife_error, units_of
 from .lag_pairs import lag_correlations
 from .ornstein_uhlenbeck import OrnsteinUhlenbeck
@@ -50,7 +51,7 @@ class SeriesCheck:
         The statistic, never negative.
     threshold : float
         What it may be at most.
-    quantile : float
+    quantile : float or ndarray, shape (n,)
         Standard errors to either side of the interval that is compared.
     """
 
@@ -59,7 +60,7 @@ class SeriesCheck:
     statistic: str
     found: Estimate
     threshold: float
-    quantile: float
+    quantile: float | np.ndarray
 
     @property
     def verdicts(self) -> list[str]:
@@ -119,7 +120,7 @@ def check_series(
         *normality(series, step, rng),
         whiteness(series, step, process),
         lag_consistency(series, step, partners),
-        *stationarity(series, step),
+        *stationary(series, step),
     ]
 
 
@@ -238,60 +239,28 @@ def lag_consistency(
     )
 
 
-def stationarity(series: np.ndarray, step: float) -> list[SeriesCheck]:
-    """Means and variances of the halves of each member, and the trend.
-
-    Their errors are those of a stationary series with the integral times that
-    the record has when a line through each half is taken out (what is looked
-    for must not hide behind the slowness that it brings). With the one-sided
-    time t and the two-sided time s of the squared correlation, and a record T,
-    their variances are ``8 t / T`` for the difference of means in standard
-    deviations, ``8 s / T`` for the logarithm of the ratio of variances and
-    ``24 t / T`` for the change along the trend (C. E. Leith (1973), J. Appl.
-    Meteorol. 12, 1066).
-    """
-    members, times, _ = series.shape
-    record = members * times * step
-    half = times // 2
-    early, late = series[:, :half], series[:, times - half :]
-    flat = np.concatenate([_straight(early), _straight(late)], axis=0)
-    scales = correlation_scales(flat, step)
-    spread = flat.std(axis=(0, 1))
-    shift = (late.mean(axis=(0, 1)) - early.mean(axis=(0, 1))) / spread
-    ratio = np.log(late.var(axis=1).mean(axis=0) / early.var(axis=1).mean(axis=0))
-    ramp = np.linspace(-0.5, 0.5, times)
-    slope = np.einsum("t,mtn->n", ramp, series) / (members * (ramp**2).sum()) / spread
-    time, squared = scales.time.value, scales.squared.value
-    for name, times_of in (("time", time), ("squared", squared)):
-        unknown = ~np.isfinite(getattr(scales, name).error)
-        times_of[unknown] = np.inf
+def stationary(series: np.ndarray, step: float) -> list[SeriesCheck]:
+    """Means and variances of the halves, and the trend; see `stationarity`."""
+    departures = stationarity(series, step)
     rows = (
         ("mean", "the means of the halves differ by, in standard deviations",
-         shift, 8 * time, SHIFT),
+         departures.mean_shift, SHIFT),
         ("variance", "ratio of the variances of the halves (logarithm)",
-         ratio, 8 * squared, np.log(SPREAD)),
+         departures.variance_shift, np.log(SPREAD)),
         ("trend", "change along the linear trend, in standard deviations",
-         slope, 24 * time, TREND),
+         departures.trend, TREND),
     )  # fmt: skip
     return [
         SeriesCheck(
             name=f"stationarity: {name}",
             assumption="The statistics of the series do not change with time.",
             statistic=statistic,
-            found=Estimate(np.abs(value), np.sqrt(variance / record)),
+            found=Estimate(np.abs(found.value), found.error),
             threshold=float(threshold),
-            quantile=_normal(1),
+            quantile=special.stdtrit(departures.freedom, 1 - WRONG / 2),
         )
-        for name, statistic, value, variance, threshold in rows
+        for name, statistic, found, threshold in rows
     ]
-
-
-def _straight(part):
-    """Series less the line through all members."""
-    ramp = np.linspace(-1, 1, part.shape[1])
-    centred = part - part.mean(axis=(0, 1))
-    slope = np.einsum("t,mtn->n", ramp, centred) / (len(part) * (ramp**2).sum())
-    return centred - ramp[:, None] * slope
 
 
 def _normal(number):

@@ -16,7 +16,9 @@ from eddyshed.reduce.coupling import coupling
 from eddyshed.reduce.noise.fit import fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
+from eddyshed.reduce.polynomial import Polynomial
 from eddyshed.reduce.settings import AuditSettings
+from eddyshed.reduce.statistics.correlation import integral_time
 from eddyshed.reduce.store import plain
 
 USED = ("bare", "residual", "coloured", "white")
@@ -230,6 +232,35 @@ def test_a_limit_without_its_closures_is_named(found):
     limit = by_name(found)["limit: white for coloured"]
     assert limit.verdict == "undecided"
     assert "coloured and the white closure are not in [closures] use" in limit.settle
+
+
+def test_a_white_drift_that_grows_fails_white_alone():
+    # A triangular matrix has its diagonal for eigenvalues: 0.1 and -0.1 at most.
+    material = random_material()
+    for growth, verdict in ((0.1, "fails"), (-0.1, "holds")):
+        linear = np.diag([growth, -1.0, -2.0]) + np.triu(np.ones((3, 3)), 1)
+        white = SimpleNamespace(drift=Polynomial(constant=np.zeros(3), linear=linear))
+        made = audited(dataclasses.replace(material, models={"white": white}))
+        found = by_name(made)["balance: white stability"]
+        assert (found.verdict, found.closures) == (verdict, ("white",))
+        time = integral_time(material.x, STEP).value.max()
+        assert found.value == pytest.approx(growth * time)
+        verdicts = {one.closure: one.reasons for one in made.closures}
+        failing = {
+            name
+            for name, reasons in verdicts.items()
+            if any(reason.startswith(f"{found.name} fails") for reason in reasons)
+        }
+        assert failing == ({"white"} if verdict == "fails" else set())
+
+
+def test_of_a_cubic_drift_the_linear_part_is_not_judged():
+    cubic = np.zeros((3,) * 4)
+    cubic[0, 0, 0, 0] = -1.0
+    drift = Polynomial(constant=np.zeros(3), linear=np.eye(3), cubic=cubic)
+    models = {"white": SimpleNamespace(drift=drift)}
+    found = audited(dataclasses.replace(random_material(), models=models))
+    assert "balance: white stability" not in by_name(found)
 
 
 # --- Verdicts and recommendation --------------------------------------------------

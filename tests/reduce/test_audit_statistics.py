@@ -1,17 +1,20 @@
 """Statistics of the audit against published values, formulas and brute force."""
 
+from types import SimpleNamespace
+
 import numpy as np
 import pytest
 from audit_systems import NAMES, STEP, red
 from scipy import linalg
 from toys import orthonormal_vectors, random_model
 
-from eddyshed.reduce.audit import memory, normality, perturbation, sizes
+from eddyshed.reduce.audit import balance, memory, normality, perturbation, sizes
 from eddyshed.reduce.audit.batches import Batches
 from eddyshed.reduce.audit.fitted import structure
 from eddyshed.reduce.noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from eddyshed.reduce.operators import galerkin
 from eddyshed.reduce.settings import AuditSettings
+from eddyshed.reduce.statistics.estimate import Estimate
 
 RNG = np.random.default_rng
 
@@ -287,3 +290,22 @@ def test_independent_modes_share_nothing_on_average():
         batches = Batches.of(y[np.newaxis], STEP, "test")
         shares.append(structure(y, 4, np.full(6, -1), batches).value[0])
     assert abs(np.mean(shares)) < 4 * np.std(shares) / np.sqrt(60)
+
+
+# --- Balance ------------------------------------------------------------------
+
+
+def test_growth_of_a_white_drift_errs_as_the_times_of_the_noise():
+    # One mode: A11 + A12 A21 / rate = -1 + 3 / rate, whose derivative is -3 / rate^2.
+    rate, error = 2.0, 0.1
+    noise = SimpleNamespace(
+        process=OrnsteinUhlenbeck(rate=[[rate]], covariance=[[1.0]]),
+        decay=Estimate([rate], [error]),
+        batches=20,
+    )
+    operators = SimpleNamespace(A11=np.array([[-1.0]]))
+    linear = np.array([[-1 + 3 / rate]])
+    found = balance.white_growth(linear, operators, noise, 10.0)
+    assert found.value[0] == pytest.approx(10 * 0.5)
+    assert found.error[0] == pytest.approx(10 * 3 / rate**2 * error)
+    assert found.freedom == 19
