@@ -11,9 +11,18 @@ that cannot be repeated to the bit is worth less than the time it would save.
 
 from __future__ import annotations
 
+import sys
 from typing import ClassVar
 
-import pyfftw
+# It would load Dask wherever that is installed, which takes longer than all the
+# rest of a command and is of no use here; None stands for a module that is absent.
+_HIDE_DASK = "dask" not in sys.modules
+if _HIDE_DASK:
+    sys.modules["dask"] = None
+import pyfftw  # noqa: E402
+
+if _HIDE_DASK:
+    del sys.modules["dask"]
 
 
 class ComplexTransform:
