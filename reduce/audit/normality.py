@@ -147,14 +147,13 @@ def joint(series: np.ndarray, step: float) -> Measured:
     """
     batches = Batches.of(series, step, "normality")
     flat = series.reshape(-1, series.shape[-1])
-    value, error = mardia_ratio(flat), np.inf
+    replicates = [[mardia_ratio(flat)]]
     if batches.number:
         parts = np.array_split(np.arange(len(flat)), batches.number)
-        left = [mardia_ratio(np.delete(flat, part, axis=0)) for part in parts]
-        error = batches.widening * np.sqrt((len(parts) - 1) * np.var(left))
+        replicates += [[mardia_ratio(np.delete(flat, part, axis=0))] for part in parts]
     return Measured(
-        value=np.array([value]),
-        error=np.array([error]),
+        value=np.array(replicates[0]),
+        error=batches.error(np.array(replicates)),
         places=["all modes"],
         freedom=batches.freedom,
         more=batches.more,
