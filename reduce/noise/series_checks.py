@@ -16,7 +16,7 @@ from scipy import special
 from ..statistics.correlation import correlation_scales
 from ..statistics.estimate import Estimate
 from ..statistics.jackknife import jackknife_error
-from ..statistics.resampling import moments
+from ..statistics.resampling import shape_of
 from ..statistics.series import checked_series, checked_step
 from ..statistics.stationarity import stationarity
 from .innovations import largest_innovation
@@ -128,25 +128,14 @@ def check_series(
 def normality(
     series: np.ndarray, step: float, rng: np.random.Generator
 ) -> list[SeriesCheck]:
-    """Skewness and excess kurtosis, with errors that know of serial correlation.
-
-    Errors are those of :func:`..statistics.resampling.moments`, but not less
-    than those of a Gaussian series with the same correlation (Z. A. Lomnicki
-    (1961), Metrika 4, 37): ``6 / n`` and ``24 / n`` times the sum of the third
-    and fourth powers of the correlation, which is at most that of its square.
-    """
-    shape = moments(series, step, rng=rng)
-    squared = correlation_scales(series, step).squared.value
-    size = np.maximum(series.shape[0] * series.shape[1] * step / squared, 1.0)
-    # Of an exponential the third and fourth powers sum to 2/3 and 1/2 of the second.
-    skewness = np.maximum(shape.skewness.error, np.sqrt(6 * 2 / 3 / size))
-    tails = np.maximum(shape.kurtosis.error, np.sqrt(24 / 2 / size))
+    """Skewness and excess kurtosis; see `shape_of` for their errors."""
+    skewness, excess, _ = shape_of(series, step, rng=rng)
     return [
         SeriesCheck(
             name="normality: symmetry",
             assumption="The series is Gaussian: its symmetry.",
             statistic="absolute skewness",
-            found=Estimate(np.abs(shape.skewness.value), skewness),
+            found=Estimate(np.abs(skewness.value), skewness.error),
             threshold=SKEWNESS,
             quantile=_normal(1),
         ),
@@ -154,7 +143,7 @@ def normality(
             name="normality: tails",
             assumption="The series is Gaussian: its tails.",
             statistic="absolute excess kurtosis",
-            found=Estimate(np.abs(shape.kurtosis.value - 3), tails),
+            found=Estimate(np.abs(excess.value), excess.error),
             threshold=TAILS,
             quantile=_normal(1),
         ),
