@@ -1,10 +1,10 @@
-"""Errors of any statistic of a record, by leaving out one batch after the other.
+"""How a record is cut into batches, whose absence in turn gives errors.
 
 A record, all members together, is cut into contiguous batches, each many
 correlation times long. A statistic is a function of means over the record;
-what it scatters by, with each batch left out in turn, is its error
-(jackknife: B. Efron and R. J. Tibshirani 1993, An Introduction to the
-Bootstrap, ch. 11), with one degree of freedom fewer than there are batches.
+what it scatters by, with each batch left out in turn, is its error (see
+:mod:`eddyshed.reduce.statistics.jackknife`), with one degree of freedom fewer
+than there are batches.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..statistics.correlation import correlation_scales
+from ..statistics.jackknife import jackknife_error, left_out, less_bias
 from ..statistics.series import checked_series
 
 MOST = 20  # batches: Student's quantile is then 7 % above the normal one
@@ -104,18 +105,27 @@ class Batches:
         value, error : ndarray, shape (place,)
             The error is infinite if the record is too short.
         """
-        total, weight = np.tensordot(counts, means, axes=1), counts.sum()
-        value = np.atleast_1d(statistic(total / weight))
+        sums = counts.reshape(-1, *(1,) * (means.ndim - 1)) * means
         if self.number == 0:
+            value = np.atleast_1d(statistic(sums.sum(axis=0) / counts.sum()))
             return value, np.full(value.shape, math.inf)
-        left = np.array(
-            [
-                np.atleast_1d(statistic((total - n * mean) / (weight - n)))
-                for mean, n in zip(means, counts, strict=True)
-            ]
+        replicates = np.array(
+            [np.atleast_1d(statistic(one)) for one in left_out(sums, counts, 0)]
         )
-        spread = np.sqrt((self.number - 1) * left.var(axis=0))
-        # What a curved statistic is off by on average (M. H. Quenouille 1956,
-        # Biometrika 43:353); nothing for a linear one.
-        bias = (self.number - 1) * (left.mean(axis=0) - value)
-        return value - bias, self.widening * spread
+        return less_bias(replicates)[0], self.error(replicates)
+
+    def error(self, replicates: np.ndarray) -> np.ndarray:
+        """Error from estimates of the record and without each batch.
+
+        Parameters
+        ----------
+        replicates : ndarray, shape (batch + 1, ...)
+
+        Returns
+        -------
+        ndarray, shape (...)
+            Infinite if the record is too short.
+        """
+        if self.number == 0:
+            return np.full(replicates.shape[1:], math.inf)
+        return self.widening * jackknife_error(replicates)

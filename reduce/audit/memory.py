@@ -11,15 +11,17 @@ from itertools import pairwise
 
 import numpy as np
 
+from ..noise.innovations import INNOVATION_LAGS, largest_innovation
+from ..noise.lag_pairs import complex_units, regressed_units, unit_pairs
 from ..noise.ornstein_uhlenbeck import OrnsteinUhlenbeck
 from ..statistics.correlation import correlation_scales
+from ..statistics.jackknife import jackknife_error
 from .batches import Batches
 from .findings import Assumption, Measured
 
 SHARE = 0.5  # of the variance, in the units that are looked at
 UNITS = 12  # at most
 FRACTIONS = (0.25, 0.5, 1.0, 1.5, 2.0, 3.0, 4.0)  # lags, in times of the envelope
-INNOVATION_LAGS = 8
 BANDS = (0.0, 0.5, 1.0, 2.0, 4.0)  # of frequency from the peak, in decay rates
 FLOOR = 0.02  # of a correlation whose logarithm is taken
 
@@ -91,25 +93,24 @@ class LagFindings:
         One or two modes each.
     lags : ndarray of int, shape (unit, lag)
         In records.
-    value : ndarray of complex, shape (unit, lag)
-    left : ndarray of complex, shape (batch, unit, lag)
-        The same with each batch left out.
+    replicates : ndarray of complex, shape (batch + 1, unit, lag)
+        From the record, then with each batch left out.
     batches : Batches
     """
 
     units: list[tuple[int, ...]]
     lags: np.ndarray
-    value: np.ndarray
-    left: np.ndarray
+    replicates: np.ndarray
     batches: Batches
+
+    @property
+    def value(self) -> np.ndarray:
+        """Correlations in the record, shape (unit, lag)."""
+        return self.replicates[0]
 
     def error(self, statistic):
         """Jackknife error of a function of the correlations, shape (unit,)."""
-        if not self.batches.number:
-            return np.full(len(self.units), np.inf)
-        left = np.array([statistic(one) for one in self.left])
-        scatter = np.sqrt((self.batches.number - 1) * left.var(axis=0))
-        return self.batches.widening * scatter
+        return self.batches.error(np.array([statistic(r) for r in self.replicates]))
 
     def measured(self, value, error, labels, tries=1):
         """Put numbers and names together."""
@@ -150,54 +151,27 @@ def lag_findings(
         For errors.
     """
     units = leading_units(y.var(axis=(0, 1)), partners)
-    chosen = [mode for unit in units for mode in unit]
-    part = y[:, :, chosen]
-    part = part - part.mean(axis=(0, 1))
+    part = y[:, :, [mode for unit in units for mode in unit]]
     scales = correlation_scales(part, step)
     batches = Batches.of(part, step, where)
-    number, times = max(1, batches.number), y.shape[1]
-    lags, value, left = [], [], []
-    column = 0
+    lags, replicates, column = [], [], 0
     for unit in units:
-        mode = part[:, :, column].astype(complex)
+        wave = len(unit) == 2
         # The envelope of a wave outlasts its phase.
-        time = scales.squared.value[column] if len(unit) == 2 else None
-        if len(unit) == 2:
-            mode += 1j * part[:, :, column + 1]
-        else:
-            time = scales.time.value[column]
+        time = (scales.squared if wave else scales.time).value[column]
+        steps = np.round(np.array(FRACTIONS) * time / step)
+        lags.append(np.clip(steps, 1, y.shape[1] // 4).astype(int))
+        second = np.array([column + 1 if wave else -1])
+        series = complex_units(part, np.array([column]), second)
         column += len(unit)
-        steps = np.clip(np.round(np.array(FRACTIONS) * time / step), 1, times // 4)
-        lags.append(steps.astype(int))
-        sums = np.empty((number, len(FRACTIONS)), dtype=complex)
-        counts, squares = np.empty((number, len(FRACTIONS))), np.empty(number)
-        edges = np.linspace(0, mode.size, number + 1).astype(int)
-        squares = np.add.reduceat(np.abs(mode.ravel()) ** 2, edges[:-1])
-        for k, lag in enumerate(lags[-1]):
-            product = np.zeros(mode.shape, dtype=complex)
-            product[:, lag:] = mode[:, lag:] * mode[:, : times - lag].conj()
-            there = np.zeros(mode.shape)
-            there[:, lag:] = 1
-            sums[:, k] = np.add.reduceat(product.ravel(), edges[:-1])
-            counts[:, k] = np.add.reduceat(there.ravel(), edges[:-1])
-        sizes = np.diff(edges)
-
-        def rho(keep, sums=sums, counts=counts, squares=squares, sizes=sizes):
-            total = sums[keep].sum(axis=0) / counts[keep].sum(axis=0)
-            return total / (squares[keep].sum() / sizes[keep].sum())
-
-        every = np.ones(number, dtype=bool)
-        value.append(rho(every))
-        left.append(
-            [rho(np.arange(number) != k) for k in range(number)]
-            if number > 1
-            else [value[-1]]
-        )
+        # Of fewer than two batches none can be left out; the error is then unknown.
+        number = max(2, batches.number)
+        found = [regressed_units(unit_pairs(series, lag, number)) for lag in lags[-1]]
+        replicates.append([correlation[:, 0] for correlation, _ in found])
     return LagFindings(
         units=units,
         lags=np.array(lags),
-        value=np.array(value),
-        left=np.array(left).transpose(1, 0, 2),
+        replicates=np.array(replicates).transpose(2, 0, 1),
         batches=batches,
     )
 
@@ -229,8 +203,7 @@ def exponential(
     def misfit(rho):
         return np.mean(np.abs(rho - fitted) ** 2, axis=1)
 
-    number = found.batches.number
-    noise = (number - 1) * found.left.var(axis=0).mean(axis=1) if number else 0.0
+    noise = np.mean(jackknife_error(found.replicates) ** 2, axis=1)
     square = np.maximum(misfit(found.value) - noise, 0.0)
     root = np.sqrt(square)
     error = found.error(misfit) / (2 * np.maximum(root, 0.05))
@@ -308,27 +281,12 @@ def spectrum(
 def whiteness(
     y: np.ndarray, step: float, process: OrnsteinUhlenbeck, units, labels
 ) -> Measured:
-    """Largest correlation of innovations, of each leading unit.
-
-    Of n white innovations it has the error ``1 / sqrt(n)`` at each lag (M. S.
-    Bartlett 1946, J. R. Stat. Soc. Suppl. 8:27).
-    """
-    centred = y - y.mean(axis=(0, 1))
+    """Largest correlation of innovations, of each leading unit."""
     rows = [mode for unit in units for mode in unit]
-    left = centred[:, 1:, rows] - centred[:, :-1] @ process.propagator(step)[rows].T
-    lags = range(1, min(INNOVATION_LAGS, left.shape[1] - 1) + 1)
-    square = (left**2).sum(axis=(0, 1))
-    largest = np.max(
-        [
-            np.abs((left[:, lag:] * left[:, :-lag]).sum(axis=(0, 1))) / square
-            for lag in lags
-        ],
-        axis=0,
-    )
-    error = np.full(largest.shape, (left.shape[0] * left.shape[1]) ** -0.5)
+    found, tries = largest_innovation(y, step, process, rows)
     return Measured(
-        value=largest,
-        error=error,
+        value=found.value,
+        error=found.error,
         places=[labels[mode] for mode in rows],
-        tries=len(lags),
+        tries=tries,
     )

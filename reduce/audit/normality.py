@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from ..statistics.correlation import correlation_scales
-from ..statistics.resampling import central_moments, moments
+from ..statistics.correlation import integral_time
+from ..statistics.resampling import central_moments, shape_of
 from .batches import Batches
 from .findings import Assumption, Measured
 
@@ -100,35 +100,20 @@ def detrended(coupling: np.ndarray, x: np.ndarray) -> np.ndarray:
 def shape(
     series: np.ndarray, step: float, labels, rng: np.random.Generator
 ) -> tuple[Measured, Measured]:
-    """Kurtosis and absolute skewness of each mode.
-
-    Errors are those of the block bootstrap, but not less than those of a
-    Gaussian series with the same correlation: ``24 / n`` and ``6 / n`` times the
-    sums of its fourth and third powers (Z. A. Lomnicki 1961, Metrika 4:37), which
-    for an exponential are a half and two thirds of that of its square. The block
-    bootstrap alone finds too small an error for tails of which the record holds a
-    few.
-    """
-    found = moments(series, step, rng=rng)
-    scales = correlation_scales(series, step)
+    """Kurtosis and absolute skewness of each mode; see `shape_of` for their errors."""
+    skewness, excess, size = shape_of(series, step, rng=rng)
     length = series.shape[0] * series.shape[1] * step
-    size = np.maximum(length / scales.squared.value, 1.0)
     known = {
         "places": labels,
         "freedom": np.maximum(size / 8, 1.0),
-        "more": float(np.max(40 * scales.time.value / length, initial=1.1)),
+        "more": float(
+            np.max(40 * integral_time(series, step).value / length, initial=1.1)
+        ),
     }
-    tails = Measured(
-        value=found.kurtosis.value,
-        error=np.maximum(found.kurtosis.error, np.sqrt(24 / 2 / size)),
-        **known,
+    return (
+        Measured(value=excess.value + 3, error=excess.error, **known),
+        Measured(value=np.abs(skewness.value), error=skewness.error, **known),
     )
-    symmetry = Measured(
-        value=np.abs(found.skewness.value),
-        error=np.maximum(found.skewness.error, np.sqrt(6 * 2 / 3 / size)),
-        **known,
-    )
-    return tails, symmetry
 
 
 def mardia_ratio(rows: np.ndarray) -> float:
@@ -147,14 +132,13 @@ def joint(series: np.ndarray, step: float) -> Measured:
     """
     batches = Batches.of(series, step, "normality")
     flat = series.reshape(-1, series.shape[-1])
-    value, error = mardia_ratio(flat), np.inf
+    replicates = [[mardia_ratio(flat)]]
     if batches.number:
         parts = np.array_split(np.arange(len(flat)), batches.number)
-        left = [mardia_ratio(np.delete(flat, part, axis=0)) for part in parts]
-        error = batches.widening * np.sqrt((len(parts) - 1) * np.var(left))
+        replicates += [[mardia_ratio(np.delete(flat, part, axis=0))] for part in parts]
     return Measured(
-        value=np.array([value]),
-        error=np.array([error]),
+        value=np.array(replicates[0]),
+        error=batches.error(np.array(replicates)),
         places=["all modes"],
         freedom=batches.freedom,
         more=batches.more,

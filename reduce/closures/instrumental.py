@@ -20,9 +20,9 @@ import numpy as np
 from eddyshed.solver.errors import DataError
 
 from ..coupling import covariance
-from ..noise.lag_integrals import jackknife_error
 from ..statistics.correlation import correlation_scales
 from ..statistics.estimate import Estimate
+from ..statistics.jackknife import jackknife_error
 from .data import ClosureData
 
 LAG_TIMES = 3  # lag of the instrument, in the longest memory of the noise

@@ -24,9 +24,10 @@ import numpy as np
 from eddyshed.solver.errors import DataError
 
 from ..statistics.estimate import Estimate
+from ..statistics.jackknife import jackknife_error
 from ..statistics.series import checked_series, checked_step
 from .integral_matching import match_blocks, match_units
-from .lag_integrals import jackknife_error, units_of
+from .lag_integrals import units_of
 from .lagged import lag_blocks, lag_units
 from .notes import notes_on
 from .ornstein_uhlenbeck import OrnsteinUhlenbeck

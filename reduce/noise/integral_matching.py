@@ -9,7 +9,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from .lag_integrals import bartlett_kernels, less_bias, matrix_means, unit_means
+from ..statistics.jackknife import less_bias
+from .lag_integrals import bartlett_kernels, matrix_means, unit_means
 from .ornstein_uhlenbeck import ROUND_OFF
 from .repair import MOST_REPAIR, check_independent, repaired_rate
 from .replicates import (

@@ -25,6 +25,7 @@ from scipy import fft
 
 from eddyshed.solver.errors import DataError
 
+from ..statistics.jackknife import left_out
 from ..statistics.series import mode_blocks
 
 
@@ -188,51 +189,6 @@ def matrix_means(series: np.ndarray, kernels: np.ndarray, batches: int) -> Means
     )
 
 
-def jackknife_error(values: np.ndarray) -> np.ndarray:
-    """Standard error from estimates with each batch left out.
-
-    Parameters
-    ----------
-    values : ndarray, shape (batch + 1, ...)
-        The first, from all batches, is not used.
-
-    Returns
-    -------
-    ndarray, shape (...)
-
-    References
-    ----------
-    B. Efron and R. J. Tibshirani (1993), An Introduction to the Bootstrap,
-    ch. 11. The batches are long parts of the record because neighbours in
-    time are not independent.
-    """
-    left_out = values[1:]
-    return np.sqrt((len(left_out) - 1) * left_out.var(axis=0))
-
-
-def less_bias(values: np.ndarray) -> np.ndarray:
-    """Estimates less the bias that their scatter gives them (jackknife).
-
-    The mean of estimates without a batch differs from the estimate of all by
-    the bias of a record times ``1 / (batches - 1)``.
-
-    Parameters
-    ----------
-    values : ndarray, shape (batch + 1, ...)
-
-    Returns
-    -------
-    ndarray, shape (batch + 1, ...)
-        All moved alike, so that their scatter is what it was.
-
-    References
-    ----------
-    M. H. Quenouille (1956), Biometrika 43, 353.
-    """
-    batches = len(values) - 1
-    return values + (batches - 1) * (values[0] - values[1:].mean(axis=0))
-
-
 def _memory(series: np.ndarray, kernels: np.ndarray) -> int:
     """Bytes that one coordinate takes while filtered: eight padded copies."""
     return 64 * series.shape[0] * (series.shape[1] + kernels.shape[1])
@@ -263,26 +219,3 @@ def _edges(series: np.ndarray, batches: int) -> np.ndarray:
 def _batch_sums(product: np.ndarray, edges: np.ndarray) -> np.ndarray:
     """Sum a (unit, member, time) array over each batch: (batch, unit)."""
     return np.add.reduceat(product.reshape(len(product), -1), edges[:-1], axis=1).T
-
-
-def left_out(sums: np.ndarray, counts: np.ndarray, axis: int) -> np.ndarray:
-    """Means over all batches, then over all but each one.
-
-    Parameters
-    ----------
-    sums : ndarray
-        Sums over each batch, along `axis`.
-    counts : ndarray of int, shape (batch,)
-        Number of terms in each.
-    axis : int
-
-    Returns
-    -------
-    ndarray
-        One longer than `sums` along `axis`.
-    """
-    sums = np.moveaxis(sums, axis, 0)
-    counts = counts.reshape(-1, *(1,) * (sums.ndim - 1))
-    total, count = sums.sum(axis=0), counts.sum()
-    means = np.concatenate([total[None] / count, (total - sums) / (count - counts)])
-    return np.moveaxis(means, 0, axis)

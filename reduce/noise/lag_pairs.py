@@ -7,7 +7,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from .lag_integrals import left_out
+from ..statistics.jackknife import left_out
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 import numpy as np
 from scipy import special
 
-from .lag_integrals import jackknife_error
+from ..statistics.jackknife import jackknife_error
 from .replicates import Replicates
 from .structures import ENOUGH
 

@@ -19,8 +19,8 @@ from __future__ import annotations
 import numpy as np
 from scipy import fft
 
+from ..statistics.jackknife import jackknife_error, left_out
 from ..statistics.series import mode_blocks
-from .lag_integrals import jackknife_error, left_out
 from .replicates import Replicates, replicates_of_units
 
 HALVINGS = 60  # of the interval that holds a rate: to the last bit

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .lag_integrals import jackknife_error
+from ..statistics.jackknife import jackknife_error
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

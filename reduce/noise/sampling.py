@@ -10,8 +10,8 @@ import numpy as np
 from eddyshed.solver.errors import DataError
 
 from ..statistics.correlation import integral_time
+from ..statistics.jackknife import jackknife_error
 from ..statistics.series import checked_step
-from .lag_integrals import jackknife_error
 from .replicates import Replicates
 
 WINDOW_TIMES = 8  # integral times in the default window

@@ -15,10 +15,12 @@ from scipy import special
 
 from ..statistics.correlation import correlation_scales
 from ..statistics.estimate import Estimate
-from ..statistics.resampling import moments
+from ..statistics.jackknife import jackknife_error
+from ..statistics.resampling import shape_of
 from ..statistics.series import checked_series, checked_step
 from ..statistics.stationarity import stationarity
-from .lag_integrals import jackknife_error, units_of
+from .innovations import largest_innovation
+from .lag_integrals import units_of
 from .lag_pairs import lag_correlations
 from .ornstein_uhlenbeck import OrnsteinUhlenbeck
 
@@ -31,7 +33,6 @@ RATES = 1.25  # factor between rates from two lags
 SHIFT = 0.5  # standard deviations, between halves
 SPREAD = 1.5  # factor between the variances of halves
 TREND = 1.0  # standard deviations over the record: a twelfth of the variance
-INNOVATION_LAGS = 8
 LAGS = (0.25, 0.5, 1.0, 1.5)  # integral times at which rates are compared
 
 
@@ -127,25 +128,14 @@ def check_series(
 def normality(
     series: np.ndarray, step: float, rng: np.random.Generator
 ) -> list[SeriesCheck]:
-    """Skewness and excess kurtosis, with errors that know of serial correlation.
-
-    Errors are those of :func:`..statistics.resampling.moments`, but not less
-    than those of a Gaussian series with the same correlation (Z. A. Lomnicki
-    (1961), Metrika 4, 37): ``6 / n`` and ``24 / n`` times the sum of the third
-    and fourth powers of the correlation, which is at most that of its square.
-    """
-    shape = moments(series, step, rng=rng)
-    squared = correlation_scales(series, step).squared.value
-    size = np.maximum(series.shape[0] * series.shape[1] * step / squared, 1.0)
-    # Of an exponential the third and fourth powers sum to 2/3 and 1/2 of the second.
-    skewness = np.maximum(shape.skewness.error, np.sqrt(6 * 2 / 3 / size))
-    tails = np.maximum(shape.kurtosis.error, np.sqrt(24 / 2 / size))
+    """Skewness and excess kurtosis; see `shape_of` for their errors."""
+    skewness, excess, _ = shape_of(series, step, rng=rng)
     return [
         SeriesCheck(
             name="normality: symmetry",
             assumption="The series is Gaussian: its symmetry.",
             statistic="absolute skewness",
-            found=Estimate(np.abs(shape.skewness.value), skewness),
+            found=Estimate(np.abs(skewness.value), skewness.error),
             threshold=SKEWNESS,
             quantile=_normal(1),
         ),
@@ -153,7 +143,7 @@ def normality(
             name="normality: tails",
             assumption="The series is Gaussian: its tails.",
             statistic="absolute excess kurtosis",
-            found=Estimate(np.abs(shape.kurtosis.value - 3), tails),
+            found=Estimate(np.abs(excess.value), excess.error),
             threshold=TAILS,
             quantile=_normal(1),
         ),
@@ -165,30 +155,19 @@ def whiteness(
 ) -> SeriesCheck:
     """Largest correlation of what the process cannot foresee one step ahead.
 
-    Of n innovations that are white a correlation has the error ``1 / sqrt(n)``
-    (M. S. Bartlett (1946), J. R. Stat. Soc. Suppl. 8, 27). The largest of eight
-    lags is judged with the quantile of one in eight times the probability
-    (Bonferroni).
+    The largest of eight lags is judged with the quantile of one in eight times the
+    probability (Bonferroni).
     """
-    centred = series - series.mean(axis=(0, 1))
-    propagator = process.propagator(step)
-    left = centred[:, 1:] - centred[:, :-1] @ propagator.T
-    lags = range(1, min(INNOVATION_LAGS, left.shape[1] - 1) + 1)
-    square = (left**2).sum(axis=(0, 1))
-    correlation = np.array(
-        [(left[:, lag:] * left[:, :-lag]).sum(axis=(0, 1)) / square for lag in lags]
-    )
-    largest = np.abs(correlation).max(axis=0)
-    number = left.shape[0] * left.shape[1]
+    found, lags = largest_innovation(series, step, process)
     return SeriesCheck(
         name="whiteness",
         assumption="What is new in each sample has nothing to do with what was new "
         "before.",
         statistic="largest correlation of innovations one step apart, lags of 1 to "
-        f"{lags[-1]} steps",
-        found=Estimate(largest, np.full(largest.shape, number**-0.5)),
+        f"{lags} steps",
+        found=found,
         threshold=PREDICTABLE,
-        quantile=_normal(len(lags)),
+        quantile=_normal(lags),
     )
 
 

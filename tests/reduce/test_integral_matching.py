@@ -11,11 +11,11 @@ from eddyshed.reduce.noise.fit import OrnsteinUhlenbeck, fit_ornstein_uhlenbeck
 from eddyshed.reduce.noise.integral_matching import match_units, windowed_rate
 from eddyshed.reduce.noise.lag_integrals import (
     bartlett_kernels,
-    jackknife_error,
     matrix_means,
     unit_means,
 )
 from eddyshed.reduce.statistics import series as series_module
+from eddyshed.reduce.statistics.jackknife import jackknife_error
 
 
 def waves(decays, frequencies, variance=1.0):
