@@ -67,7 +67,9 @@ def contents(folder: Path) -> dict[str, np.ndarray]:
     """All series that a run recorded, by name."""
     with h5py.File(member_paths(folder, 0)[0]) as file:
         return {
-            name: item[...] for name, item in file.items() if item.dtype.kind == "f"
+            name: item[...]
+            for name, item in file.items()
+            if item.dtype.kind == "f" or name.endswith("coordinate")
         }
 
 
