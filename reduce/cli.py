@@ -13,6 +13,8 @@ from contextlib import contextmanager
 from importlib.metadata import version
 from pathlib import Path
 
+from .noise.arguments import add_noise
+
 STAGE_HELP = {
     "truth": "make the truth run (goes on where it was interrupted)",
     "reduce": "split the truth, fit the noise, make the reduced models",
@@ -69,7 +71,7 @@ def parser() -> argparse.ArgumentParser:
                 "several commands may run members of one study at the same time",
             )
 
-    _add_noise(commands)
+    add_noise(commands)
 
     show = commands.add_parser(
         "show", help="say what a file or run folder of ours holds", allow_abbrev=False
@@ -82,53 +84,6 @@ def parser() -> argparse.ArgumentParser:
         help="write out the reduced equation of white or white_open, from a run folder",
     )
     return top
-
-
-def _add_noise(commands):
-    """Add the command that fits noise to a series of the user's own."""
-    noise = commands.add_parser(
-        "noise",
-        help="fit noise to a series of your own, and test what it assumes",
-        allow_abbrev=False,
-    )
-    noise.add_argument("series", type=Path, help="an HDF5, netCDF-4 or CSV file")
-    noise.add_argument(
-        "--variable",
-        action="append",
-        required=True,
-        metavar="NAME",
-        help="variable or column; may be given several times",
-    )
-    noise.add_argument("--time", metavar="NAME", help="variable or column of times")
-    noise.add_argument(
-        "--time-unit", metavar="UNIT", help="unit of the times, if the file has none"
-    )
-    noise.add_argument(
-        "--step", metavar="QUANTITY", help='time between even samples, such as "1 d"'
-    )
-    noise.add_argument(
-        "--method",
-        choices=("integral", "product", "likelihood", "regression"),
-        default="integral",
-        help="what is fitted (default: integral of the lag covariance)",
-    )
-    noise.add_argument(
-        "--structure",
-        choices=("auto", "real diagonal", "complex diagonal", "full"),
-        default="auto",
-        help="form of the rate matrix; complex diagonal: variables two by two are the "
-        "parts of waves (default: by the length of the record)",
-    )
-    noise.add_argument(
-        "--window", metavar="QUANTITY", help="longest lag (integral, product)"
-    )
-    noise.add_argument("--lag", metavar="QUANTITY", help="the lag (regression)")
-    noise.add_argument(
-        "--figure", type=Path, metavar="FILE", help="draw it: .png, .svg or .pdf"
-    )
-    noise.add_argument(
-        "--json", action="store_true", help="print JSON (in SI) instead of a table"
-    )
 
 
 def _add_common(command):
